@@ -1,0 +1,1 @@
+"""Classical scores of tuning: rate maps and information."""

@@ -1,0 +1,1 @@
+"""What a unit encodes: penalised Poisson models of its spike counts."""

@@ -1,0 +1,1 @@
+"""Every picture, one module per figure family."""

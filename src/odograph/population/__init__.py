@@ -1,0 +1,1 @@
+"""All units together: composition, intervals, adaptivity."""

@@ -1,0 +1,1 @@
+"""Digests, records, planning, the store of fits, trace."""

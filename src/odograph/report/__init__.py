@@ -1,0 +1,1 @@
+"""The self-contained page that gathers a run."""

@@ -1,0 +1,1 @@
+"""Settings: one small typed model per stage; the configuration file and its schema are made from them."""

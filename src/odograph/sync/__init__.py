@@ -1,0 +1,1 @@
+"""Clocks: from the camera's time to the recording's."""
