@@ -1,0 +1,168 @@
+"""Cubic B-spline bases on uniform knots, open and cyclic, and their derivative penalties.
+
+A basis is evaluated in its sparse form: at any point exactly four splines are non-zero. Penalties are
+integrals of squared second derivatives in units of the knot spacing, computed exactly by Gauss-Legendre
+quadrature (Eilers & Marx 1996, Stat. Sci. 11:89, for splines with penalties; Wood 2017, Generalized Additive
+Models, 2nd ed., section 5.3, for derivative penalties).
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from scipy import linalg
+
+SUPPORT = 4  # cubic splines that are non-zero at one point
+
+
+@dataclass(frozen=True)
+class SparseBasis:
+    """A basis evaluated at points: `weights[i, j]` belongs to column `columns[i, j]`.
+
+    Attributes
+    ----------
+    columns : ndarray of int32, (n_points, support)
+    weights : ndarray, (n_points, support)
+    size : int
+        Number of columns.
+    """
+
+    columns: np.ndarray
+    weights: np.ndarray
+    size: int
+
+    def dense(self) -> np.ndarray:
+        """The same basis as a matrix, (n_points, size)."""
+        out = np.zeros((len(self.columns), self.size))
+        np.add.at(out, (np.arange(len(out))[:, None], self.columns), self.weights)
+        return out
+
+
+def spline_weights(t: np.ndarray, derivative: int = 0) -> np.ndarray:
+    """Values of the four cubic B-splines that cover a knot interval.
+
+    Parameters
+    ----------
+    t : ndarray, (n,)
+        Place within the interval, 0 to 1.
+    derivative : {0, 1, 2}
+        Order of the derivative with respect to `t`.
+
+    Returns
+    -------
+    ndarray, (n, 4)
+    """
+    t = np.asarray(t, dtype=float)
+    one = np.ones_like(t)
+    if derivative == 0:
+        columns = [
+            (1 - t) ** 3 / 6,
+            (3 * t**3 - 6 * t**2 + 4) / 6,
+            (-3 * t**3 + 3 * t**2 + 3 * t + 1) / 6,
+            t**3 / 6,
+        ]
+    elif derivative == 1:
+        columns = [-((1 - t) ** 2) / 2, (3 * t**2 - 4 * t) / 2, (-3 * t**2 + 2 * t + one) / 2, t**2 / 2]
+    elif derivative == 2:
+        columns = [1 - t, 3 * t - 2, -3 * t + one, t]
+    else:
+        raise ValueError(f"derivative must be 0, 1 or 2, not {derivative}")
+    return np.stack(columns, axis=1)
+
+
+def open_basis(x: np.ndarray, low: float, high: float, size: int, derivative: int = 0) -> SparseBasis:
+    """`size` cubic B-splines on uniform knots over [low, high]; points outside are taken to its ends.
+
+    Derivatives are with respect to `x`.
+    """
+    spacing = (high - low) / (size - 3)
+    u = np.clip((np.asarray(x, dtype=float) - low) / spacing, 0, size - 3)
+    interval = np.minimum(u.astype(np.int64), size - 4)
+    weights = spline_weights(u - interval, derivative) / spacing**derivative
+    columns = (interval[:, None] + np.arange(SUPPORT)).astype(np.int32)
+    return SparseBasis(columns, weights, size)
+
+
+def cyclic_basis(angle: np.ndarray, size: int, period: float = 2 * np.pi) -> SparseBasis:
+    """`size` cyclic cubic B-splines over one period."""
+    spacing = period / size
+    u = np.mod(np.asarray(angle, dtype=float), period) / spacing
+    interval = np.minimum(u.astype(np.int64), size - 1)
+    columns = ((interval[:, None] + np.arange(SUPPORT)) % size).astype(np.int32)
+    return SparseBasis(columns, spline_weights(u - interval), size)
+
+
+def tensor_basis(first: SparseBasis, second: SparseBasis) -> SparseBasis:
+    """Tensor product of two bases evaluated at the same points; the second coordinate runs fastest."""
+    columns = first.columns[:, :, None].astype(np.int64) * second.size + second.columns[:, None, :]
+    weights = first.weights[:, :, None] * second.weights[:, None, :]
+    n = len(columns)
+    return SparseBasis(
+        columns.reshape(n, -1).astype(np.int32), weights.reshape(n, -1), first.size * second.size
+    )
+
+
+def gram(size: int, derivative: int, *, cyclic: bool = False) -> np.ndarray:
+    """Integrals of products of (derivatives of) splines, in units of the knot spacing, (size, size)."""
+    points, quadrature = np.polynomial.legendre.leggauss(4)  # exact to degree 7; the products have 6 at most
+    values = spline_weights((points + 1) / 2, derivative)
+    local = (values * (quadrature / 2)[:, None]).T @ values
+    out = np.zeros((size, size))
+    for interval in range(size if cyclic else size - 3):
+        index = np.arange(interval, interval + SUPPORT) % size
+        out[np.ix_(index, index)] += local
+    return out
+
+
+@dataclass(frozen=True)
+class Penalty:
+    """The quadratic penalties of one term and what the smoothing update needs of them.
+
+    Attributes
+    ----------
+    matrices : tuple of ndarray, each (size, size)
+        Positive semi-definite, in the order of their smoothing strengths.
+    eigenvalues : ndarray, (n_penalties, rank)
+        Common generalised eigenvalues: with strengths lam, the penalty's non-zero spectrum is lam @ eigenvalues.
+    """
+
+    matrices: tuple[np.ndarray, ...]
+    eigenvalues: np.ndarray
+
+    def trace_ratio(self, strengths: np.ndarray) -> np.ndarray:
+        """tr(S_lam^- S_j) for each penalty j, with S_lam the sum of strengths times matrices."""
+        return (self.eigenvalues / (strengths @ self.eigenvalues)).sum(axis=1)
+
+    def log_determinant(self, strengths: np.ndarray) -> float:
+        """log of the product of the non-zero spectrum, up to a constant that does not depend on strengths."""
+        return float(np.log(strengths @ self.eigenvalues).sum())
+
+
+def curve_penalty(size: int, *, cyclic: bool = False) -> Penalty:
+    """Integrated squared second derivative of a curve; straight lines (circle: constants) go unpenalised."""
+    matrix = gram(size, 2, cyclic=cyclic)
+    rank = size - 1 if cyclic else size - 2
+    return Penalty((matrix,), np.sort(linalg.eigvalsh(matrix))[None, size - rank :])
+
+
+def surface_penalty(size: int) -> Penalty:
+    """Squared second derivatives of a surface along each axis, with a strength of its own for each.
+
+    The two matrices are K x M and M x K (Kronecker products of second-derivative and mass matrices), so the
+    generalised eigenvectors of (K, M) diagonalise both; functions 1, x, y and xy go unpenalised.
+    """
+    stiffness, mass = gram(size, 2), gram(size, 0)
+    d = linalg.eigh(stiffness, mass, eigvals_only=True)
+    d[:2] = 0.0
+    along_x, along_y = np.repeat(d, size), np.tile(d, size)
+    penalised = (along_x > 0) | (along_y > 0)
+    return Penalty(
+        (np.kron(stiffness, mass), np.kron(mass, stiffness)),
+        np.stack([along_x[penalised], along_y[penalised]]),
+    )
+
+
+def ridge_penalty(size: int) -> Penalty:
+    """Sum of squares: the penalty of a category's levels."""
+    return Penalty((np.eye(size),), np.ones((1, size)))
