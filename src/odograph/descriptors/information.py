@@ -44,7 +44,7 @@ def information_bits_per_spike(seconds: np.ndarray, rate_hz: np.ndarray) -> floa
 
 
 def information_bits_per_second(seconds: np.ndarray, rate_hz: np.ndarray) -> float:
-    """Information per second, bits per spike times mean rate: 0 for a silent map, NaN if nothing is visited."""
+    """Bits per spike times mean rate: 0 for a silent map, NaN when no bin was visited."""
     mean = mean_rate(seconds, rate_hz)
     return information_bits_per_spike(seconds, rate_hz) * mean if mean > 0 else mean
 
