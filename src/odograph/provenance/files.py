@@ -1,0 +1,291 @@
+"""Reading and writing products: deterministic bytes, written beside the target and renamed.
+
+A reader of any product sees the old file or the whole new one, never a part, whatever moment a job dies at.
+Libraries are imported where they are used, so that a step that writes JSON starts fast.
+"""
+
+from __future__ import annotations
+
+import contextlib
+import hashlib
+import io
+import json
+import math
+import os
+import zipfile
+from collections.abc import Callable, Iterator, Mapping, Sequence
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from odograph.errors import InputError
+from odograph.provenance.canonical import readable_json
+
+if TYPE_CHECKING:
+    import numpy as np
+    import pandas as pd
+    import pyarrow as pa
+
+    Table = pd.DataFrame | pa.Table | Mapping[str, Any] | Sequence[Mapping[str, Any]]
+
+
+@contextlib.contextmanager
+def renamed_into_place(path: str | Path) -> Iterator[Path]:
+    """Give a temporary name beside `path`; when the block ends well, flush it to disk and rename it.
+
+    Parameters
+    ----------
+    path : str or Path
+        The file to write. Its folder is made when missing.
+
+    Yields
+    ------
+    Path
+        Where to write. It ends in the same suffix as `path`.
+    """
+    target = Path(path)
+    target.parent.mkdir(parents=True, exist_ok=True)
+    temporary = target.with_name(f".{target.stem}.{os.getpid()}.tmp{target.suffix}")
+    try:
+        yield temporary
+        with temporary.open("rb") as handle:
+            os.fsync(handle.fileno())
+        temporary.replace(target)
+    finally:
+        temporary.unlink(missing_ok=True)
+
+
+def write_bytes(path: str | Path, data: bytes) -> None:
+    """Write bytes to a file, by rename."""
+    with renamed_into_place(path) as temporary:
+        temporary.write_bytes(data)
+
+
+def write_text(path: str | Path, text: str) -> None:
+    """Write text to a file as UTF-8, by rename."""
+    write_bytes(path, text.encode())
+
+
+def write_if_changed(path: str | Path, text: str) -> bool:
+    """Write text unless the file already holds it, so its time stamp moves only with its content.
+
+    Returns
+    -------
+    bool
+        Whether the file was written.
+    """
+    with contextlib.suppress(FileNotFoundError):
+        if Path(path).read_bytes() == text.encode():
+            return False
+    write_text(path, text)
+    return True
+
+
+def write_json(path: str | Path, document: Any) -> None:
+    """Write a document as indented JSON with sorted keys; numbers that are not finite become null."""
+    write_text(path, readable_json(document))
+
+
+def read_json(path: str | Path) -> Any:
+    """Read a JSON document.
+
+    Raises
+    ------
+    InputError
+        When the file is missing or is not JSON.
+    """
+    try:
+        return json.loads(Path(path).read_bytes())
+    except FileNotFoundError as error:
+        raise InputError("the file is missing", file=str(path), remedy="run snakemake again") from error
+    except ValueError as error:
+        raise InputError(
+            f"not a JSON document ({error})",
+            file=str(path),
+            remedy="delete the file and run snakemake again",
+        ) from error
+
+
+def file_digest(path: str | Path) -> str:
+    """SHA-256 of a file's bytes, as ``sha256:<64 hex digits>``."""
+    with Path(path).open("rb") as handle:
+        return "sha256:" + hashlib.file_digest(handle, "sha256").hexdigest()
+
+
+# Tables
+
+
+def write_table(path: str | Path, table: Table) -> None:
+    """Write a table as Parquet: zstd, no index, no library's own metadata, NaN as null.
+
+    Parameters
+    ----------
+    path : str or Path
+        The file to write.
+    table : DataFrame, pyarrow Table, mapping of columns, or sequence of rows
+        A mapping holds one array or list per column, all of equal length; rows are mappings with the same
+        keys in the same order.
+    """
+    import pyarrow.parquet as pq
+
+    with renamed_into_place(path) as temporary:
+        pq.write_table(as_arrow(table), temporary, compression="zstd", write_statistics=False)
+
+
+def read_table(path: str | Path, columns: Sequence[str] | None = None) -> pd.DataFrame:
+    """Read a Parquet table as a DataFrame (null numbers become NaN)."""
+    return _read_arrow(path, columns).to_pandas()
+
+
+def read_columns(path: str | Path, columns: Sequence[str] | None = None) -> dict[str, np.ndarray]:
+    """Read a Parquet table as one array per column, without pandas; null numbers become NaN."""
+    table = _read_arrow(path, columns)
+    return {name: _column_array(table.column(name)) for name in table.column_names}
+
+
+def write_tsv(path: str | Path, table: Table) -> None:
+    """Write a table as tab-separated text: shortest floats, ``true``/``false``, nothing for missing values."""
+    columns = as_arrow(table).to_pydict()
+    lines = ["\t".join(columns)]
+    lines += ["\t".join(map(_tsv_cell, row)) for row in zip(*columns.values(), strict=True)]
+    write_text(path, "\n".join(lines) + "\n")
+
+
+def as_arrow(table: Table) -> pa.Table:
+    """Turn any of the table forms of `write_table` into a pyarrow Table without schema metadata."""
+    import pyarrow as pa
+
+    if isinstance(table, pa.Table):
+        result = table
+    elif isinstance(table, Mapping):
+        result = pa.table({name: pa.array(values, from_pandas=True) for name, values in table.items()})
+    elif hasattr(table, "iloc"):
+        result = pa.Table.from_pandas(table, preserve_index=False)
+    else:
+        names = list(table[0]) if table else []
+        result = pa.table(
+            {name: pa.array([row[name] for row in table], from_pandas=True) for name in names}
+        )
+    return result.replace_schema_metadata(None)
+
+
+def columns_digest(columns: Mapping[str, np.ndarray]) -> str:
+    """Digest of the values of numeric and boolean columns, whatever file they came from.
+
+    Parameters
+    ----------
+    columns : mapping of str to ndarray (n_rows,)
+        Numbers are taken as little-endian float64, so the order of columns and their width do not matter.
+
+    Returns
+    -------
+    str
+        ``sha256:<64 hex digits>``
+    """
+    import numpy as np
+
+    state = hashlib.sha256()
+    for name in sorted(columns):
+        values = np.ascontiguousarray(columns[name], dtype="<f8")
+        state.update(f"{name} {values.shape}\n".encode())
+        state.update(values.tobytes())
+    return "sha256:" + state.hexdigest()
+
+
+def _read_arrow(path: str | Path, columns: Sequence[str] | None) -> pa.Table:
+    import pyarrow as pa
+    import pyarrow.parquet as pq
+
+    try:
+        # One thread, and the file itself rather than a data set: both start faster for small tables.
+        with pq.ParquetFile(path) as source:
+            return source.read(columns=list(columns) if columns else None, use_threads=False)
+    except FileNotFoundError as error:
+        raise InputError("the table is missing", file=str(path), remedy="run snakemake again") from error
+    except pa.ArrowInvalid as error:
+        raise InputError(
+            f"not a Parquet table ({error})",
+            file=str(path),
+            remedy="delete the file and run snakemake again",
+        ) from error
+
+
+def _column_array(column: pa.ChunkedArray) -> np.ndarray:
+    import numpy as np
+
+    values = column.to_numpy()
+    return np.array(values) if values.dtype != object else np.array(column.to_pylist(), dtype=object)
+
+
+def _tsv_cell(value: Any) -> str:
+    if value is None or (isinstance(value, float) and math.isnan(value)):
+        return ""
+    if isinstance(value, bool):
+        return "true" if value else "false"
+    return str(value).replace("\t", " ").replace("\n", " ")
+
+
+# Named arrays
+
+
+def write_arrays(path: str | Path, arrays: Mapping[str, np.ndarray]) -> None:
+    """Write named arrays as an uncompressed npz file whose bytes depend on the arrays only.
+
+    Parameters
+    ----------
+    path : str or Path
+        The file to write.
+    arrays : mapping of str to ndarray
+        Names may hold slashes. Objects are refused.
+    """
+    write_bytes(path, pack_arrays(arrays))
+
+
+def pack_arrays(arrays: Mapping[str, np.ndarray]) -> bytes:
+    """The bytes that `write_arrays` writes."""
+    import numpy as np
+
+    buffer = io.BytesIO()
+    with zipfile.ZipFile(buffer, "w", zipfile.ZIP_STORED) as archive:
+        for name in sorted(arrays):
+            member = io.BytesIO()
+            np.lib.format.write_array(member, np.asanyarray(arrays[name]), allow_pickle=False)
+            # ZipInfo's default date is fixed (1980), so the time of writing leaves no trace.
+            archive.writestr(zipfile.ZipInfo(f"{name}.npy"), member.getvalue())
+    return buffer.getvalue()
+
+
+def read_arrays(
+    path: str | Path, wanted: Callable[[str], bool] | None = None
+) -> dict[str, np.ndarray]:
+    """Read named arrays written by `write_arrays`.
+
+    Parameters
+    ----------
+    path : str or Path
+        The npz file.
+    wanted : callable, optional
+        Takes a name and says whether to read it; all are read by default.
+
+    Raises
+    ------
+    InputError
+        When the file is missing or damaged (each array's checksum is verified).
+    """
+    import numpy as np
+
+    try:
+        with zipfile.ZipFile(path) as archive:
+            names = [name.removesuffix(".npy") for name in archive.namelist()]
+            return {
+                name: np.lib.format.read_array(io.BytesIO(archive.read(f"{name}.npy")), allow_pickle=False)
+                for name in names
+                if wanted is None or wanted(name)
+            }
+    except FileNotFoundError as error:
+        raise InputError("the file is missing", file=str(path), remedy="run snakemake again") from error
+    except (zipfile.BadZipFile, ValueError, EOFError) as error:
+        raise InputError(
+            f"the file is damaged ({error})",
+            file=str(path),
+            remedy="delete the file and run snakemake again",
+        ) from error
