@@ -162,9 +162,7 @@ def as_arrow(table: Table) -> pa.Table:
         result = pa.Table.from_pandas(table, preserve_index=False)
     else:
         names = list(table[0]) if table else []
-        result = pa.table(
-            {name: pa.array([row[name] for row in table], from_pandas=True) for name in names}
-        )
+        result = pa.table({name: pa.array([row[name] for row in table], from_pandas=True) for name in names})
     return result.replace_schema_metadata(None)
 
 
@@ -254,9 +252,7 @@ def pack_arrays(arrays: Mapping[str, np.ndarray]) -> bytes:
     return buffer.getvalue()
 
 
-def read_arrays(
-    path: str | Path, wanted: Callable[[str], bool] | None = None
-) -> dict[str, np.ndarray]:
+def read_arrays(path: str | Path, wanted: Callable[[str], bool] | None = None) -> dict[str, np.ndarray]:
     """Read named arrays written by `write_arrays`.
 
     Parameters

@@ -1,0 +1,225 @@
+"""One record for every job: what went in, which settings and which code, and what came out.
+
+A record lies beside its products as ``record.json`` or ``NAME.record.json``. Its identifier is a digest of
+everything that decides the result: the rule, its keys, the digests of the inputs and the identifiers of the
+records that made them, the settings, the code and the software. Time, host, the place of the recordings and the
+products stay outside, so the same work has the same identifier anywhere.
+"""
+
+from __future__ import annotations
+
+import platform
+import socket
+from collections.abc import Mapping
+from datetime import UTC, datetime
+from functools import cache
+from importlib import metadata
+from pathlib import Path
+from typing import Any
+
+from odograph.errors import RecordError
+from odograph.provenance.canonical import digest_value
+from odograph.provenance.files import file_digest, read_json, write_json
+
+RECORD_FORMAT = 1
+SOFTWARE = ("odograph", "numpy", "scipy", "pandas", "pynwb", "hdmf", "h5py", "pyarrow", "matplotlib", "numba")
+#: What of an input tells only where it lay, and so has no part in the identifier.
+_PLACE_KEYS = frozenset({"file", "place"})
+
+
+class RecordDraft:
+    """The record of a job that is running.
+
+    Parameters
+    ----------
+    rule : str
+        Name of the rule.
+    keys : mapping
+        What tells this job from the others of the rule (``session``, ``shard``).
+    settings : mapping
+        The settings that the step reads, by stage, in full.
+    code : mapping of str to str
+        Code fingerprints by what they cover.
+    """
+
+    def __init__(
+        self,
+        rule: str,
+        *,
+        keys: Mapping[str, Any],
+        settings: Mapping[str, Any],
+        code: Mapping[str, str],
+    ) -> None:
+        self.rule = rule
+        self.keys = dict(keys)
+        self.settings = dict(settings)
+        self.code = dict(code)
+        self.inputs: list[dict[str, Any]] = []
+        self.products: list[dict[str, Any]] = []
+        self.run: dict[str, Any] = {"started": _now(), "host": socket.gethostname()}
+        self._record_id: str | None = None
+
+    def add_product_input(self, path: str | Path) -> None:
+        """Note a product of another job as an input, with the identifier of the record that made it."""
+        self._add_input(
+            {
+                "kind": "product",
+                "path": Path(path).as_posix(),
+                "digest": file_digest(path),
+                "producer": producer_of(path),
+            }
+        )
+
+    def add_signal_input(self, signal: str, digest: str, *, file: str, place: str | None) -> None:
+        """Note a signal of the recording as an input."""
+        self._add_input({"kind": "signal", "signal": signal, "digest": digest, "file": file, "place": place})
+
+    def add_unit_input(self, unit: int, digest: str, *, file: str) -> None:
+        """Note a unit's spike train as an input."""
+        self._add_input({"kind": "unit", "unit": unit, "digest": digest, "file": file})
+
+    def add_table_input(self, name: str, rows: Any, *, file: str) -> None:
+        """Note the rows of a user's table as an input."""
+        self._add_input({"kind": "table", "table": name, "digest": digest_value(rows), "file": file})
+
+    def _add_input(self, entry: dict[str, Any]) -> None:
+        if self._record_id is not None:
+            raise RecordError(
+                "an input was added after the record's identifier was used",
+                place=self.rule,
+                remedy="read every input before writing a figure",
+            )
+        if entry not in self.inputs:
+            self.inputs.append(entry)
+
+    @property
+    def record_id(self) -> str:
+        """The identifier, ``record:<64 hex digits>``; once it was asked for, no input can be added."""
+        if self._record_id is None:
+            self.inputs.sort(key=_input_order)
+            self._record_id = identify(self._identity())
+        return self._record_id
+
+    def _identity(self) -> dict[str, Any]:
+        return {
+            "format": RECORD_FORMAT,
+            "rule": self.rule,
+            "keys": self.keys,
+            "inputs": self.inputs,
+            "settings": self.settings,
+            "code": self.code,
+            "software": software_versions(),
+        }
+
+    def add_product(self, path: str | Path, **facts: Any) -> None:
+        """Note a finished product and its digest."""
+        self.products.append({"path": Path(path).as_posix(), "digest": file_digest(path)} | facts)
+
+    def write(self, path: str | Path) -> None:
+        """Write the record, the last act of a job."""
+        document = {
+            "record_id": self.record_id,
+            **self._identity(),
+            "products": sorted(self.products, key=lambda product: product["path"]),
+            "run": self.run | {"ended": _now()},
+        }
+        write_json(path, document)
+
+
+def identify(record: Mapping[str, Any]) -> str:
+    """The identifier that a record must have.
+
+    Parameters
+    ----------
+    record : mapping
+        A whole record, or at least the parts that decide the result.
+    """
+    parts = ("format", "rule", "keys", "settings", "code", "software")
+    inputs = [
+        {key: value for key, value in entry.items() if key not in _PLACE_KEYS} for entry in record["inputs"]
+    ]
+    identity = {part: record[part] for part in parts} | {"inputs": inputs}
+    return "record:" + digest_value(identity).removeprefix("sha256:")
+
+
+def read_record(path: str | Path) -> dict[str, Any]:
+    """Read a record and check that it is whole.
+
+    Raises
+    ------
+    RecordError
+        When its identifier does not follow from its content.
+    InputError
+        When it is missing or not JSON.
+    """
+    record = read_json(path)
+    try:
+        if record["format"] != RECORD_FORMAT:
+            raise RecordError(
+                f"a record of format {record['format']}",
+                file=str(path),
+                expected=f"format {RECORD_FORMAT}",
+                remedy="run snakemake again with this version, or read it with the version that wrote it",
+            )
+        expected = identify(record)
+        found = record["record_id"]
+        record["products"], record["run"]
+    except (KeyError, TypeError, AttributeError) as error:
+        raise RecordError(
+            f"the record lacks {error}", file=str(path), remedy="delete it and run snakemake again"
+        ) from error
+    if found != expected:
+        raise RecordError(
+            f"the record was changed after it was written: it says {found}",
+            file=str(path),
+            expected=expected,
+            remedy="delete it and run snakemake again",
+        )
+    return record
+
+
+def record_files(folder: str | Path) -> list[Path]:
+    """The records that lie in a folder, sorted by name."""
+    return sorted(
+        path
+        for path in Path(folder).glob("*record.json")
+        if path.name == "record.json" or (path.name.endswith(".record.json") and path.name[0] != ".")
+    )
+
+
+def producer_of(path: str | Path) -> str | None:
+    """The identifier of the record that lists a file among its products; None when there is none."""
+    path = Path(path)
+    return _producers_in(path.parent).get(path.name)
+
+
+@cache
+def _producers_in(folder: Path) -> dict[str, str]:
+    # Within one job the inputs do not change, so each folder is looked at once.
+    producers = {}
+    for file in record_files(folder):
+        record = read_json(file)
+        for product in record["products"]:
+            producers[Path(product["path"]).name] = record["record_id"]
+    return producers
+
+
+@cache
+def software_versions() -> dict[str, str]:
+    """Versions of Python and of every package that can touch a result."""
+    versions = {"python": platform.python_version()}
+    for name in SOFTWARE:
+        try:
+            versions[name] = metadata.version(name)
+        except metadata.PackageNotFoundError:
+            versions[name] = "not installed"
+    return versions
+
+
+def _input_order(entry: Mapping[str, Any]) -> tuple[str, str, str, int]:
+    name = entry.get("path") or entry.get("signal") or entry.get("table") or ""
+    return (entry["kind"], str(entry.get("session", "")), name, entry.get("unit", -1))
+
+
+def _now() -> str:
+    return datetime.now(UTC).isoformat(timespec="milliseconds")
