@@ -21,6 +21,11 @@ _TYPE_WORDS = {
     "null": "null",
 }
 
+# Patterns in words; a user should not have to read a regular expression.
+_PATTERN_WORDS = {
+    "^[a-z][a-z0-9_]*$": "of lower-case letters, digits and _, beginning with a letter",
+}
+
 
 @dataclass(frozen=True)
 class SettingFacts:
@@ -82,10 +87,40 @@ def _walk(
             path=".".join(parts),
             default=defaults[name],
             unit=entry.get("unit"),
-            description=entry.get("description", ""),
+            description=as_sentence(entry.get("description", "")),
             expected=expected_words(root, entry),
             per_session=parts[0] in SESSION_STAGES,
         )
+
+
+@cache
+def schema_at(path: tuple[str | int, ...]) -> Mapping[str, Any] | None:
+    """The JSON schema entry of a setting or of a part of one (`("encoding", "terms", 0, "kind")`)."""
+    root = Settings.model_json_schema()
+    entry: Mapping[str, Any] = root
+    for part in path:
+        options = [resolve_reference(root, option) for option in entry.get("anyOf", [entry])]
+        for option in options:
+            if isinstance(part, int) and "items" in option:
+                entry = resolve_reference(root, option["items"])
+                break
+            if part in option.get("properties", {}):
+                # The entry's own words win over those of the model it refers to.
+                inner = option["properties"][part]
+                entry = {**resolve_reference(root, inner), **inner}
+                break
+        else:
+            return None
+    return entry
+
+
+def expected_at(path: tuple[str | int, ...]) -> str | None:
+    """The allowed values of a setting or of a part of one, in words, with the unit."""
+    entry = schema_at(path)
+    if entry is None:
+        return None
+    words = expected_words(Settings.model_json_schema(), entry)
+    return f"{words} (unit {entry['unit']})" if entry.get("unit") else words
 
 
 def resolve_reference(root: Mapping[str, Any], entry: Mapping[str, Any]) -> Mapping[str, Any]:
@@ -116,14 +151,21 @@ def expected_words(root: Mapping[str, Any], entry: Mapping[str, Any]) -> str:
 
 
 def _array_words(root: Mapping[str, Any], entry: Mapping[str, Any]) -> str:
-    if "prefixItems" in entry:
-        items = ", ".join(expected_words(root, item) for item in entry["prefixItems"])
-        return f"a list of {len(entry['prefixItems'])} values ({items})"
-    item = expected_words(root, entry["items"]) if entry.get("items") else "any value"
-    words = f"a list, each entry {item}"
-    if entry.get("minItems"):
-        words += f", {entry['minItems']} or more entries"
-    return words
+    fewest, most = entry.get("minItems", 0), entry.get("maxItems")
+    number = ""
+    if fewest and fewest == most:
+        number = f" of {fewest}"
+    elif fewest and most:
+        number = f" of {fewest} to {most}"
+    elif fewest:
+        number = f" of {fewest} or more"
+    item = resolve_reference(root, entry.get("items", {}))
+    words = expected_words(root, item)
+    if item.get("type") in ("string", "number", "integer") and "enum" not in item:
+        plain = {"string": "texts", "number": "numbers", "integer": "whole numbers"}[item["type"]]
+        bounds = words.removeprefix(_TYPE_WORDS[item["type"]])
+        return f"a list{number} {plain}{bounds}" if number else f"a list of {plain}{bounds}"
+    return f"a list{number or ' of'} entries, each {words}"
 
 
 def _bound_words(entry: Mapping[str, Any]) -> Iterator[str]:
@@ -136,7 +178,13 @@ def _bound_words(entry: Mapping[str, Any]) -> Iterator[str]:
         if key in entry:
             yield f"{sign} {entry[key]:g}"
     if "pattern" in entry:
-        yield f"of the form {entry['pattern']}"
+        yield _PATTERN_WORDS.get(entry["pattern"], f"of the form {entry['pattern']}")
+
+
+def as_sentence(text: str) -> str:
+    """A description with a capital letter and a full stop."""
+    text = text.strip()
+    return text[:1].upper() + text[1:].rstrip(".") + "." if text else text
 
 
 def value_at(settings: BaseModel | Mapping[str, Any], path: str) -> Any:

@@ -13,6 +13,7 @@ from odograph.errors import SettingsError
 from odograph.settings.all import STAGES, Settings
 from odograph.settings.fields import facts_by_path, setting_facts, value_at
 from odograph.settings.problems import (
+    known_part,
     problems_of_numbers,
     problems_of_shape,
     problems_of_values,
@@ -50,15 +51,15 @@ def load_settings(config: Mapping[str, Any] | str | Path, *, file: str | Path | 
     if file is not None and Path(file).is_file():
         lines = key_lines(Path(file))
     name = str(file) if file is not None else None
-    raise_problems(problems_of_shape(config), file=name, lines=lines)
-    given = {section: {} if content is None else content for section, content in config.items()}
+    problems = problems_of_shape(config)
+    known = known_part(config)
     try:
-        settings = Settings.model_validate(given)
+        settings = Settings.model_validate(known)
+        problems += problems_of_numbers(known, settings.model_dump(mode="python"))
     except ValidationError as error:
-        raise_problems(problems_of_values(error, given), file=name, lines=lines)
-        raise
-    accepted = settings.model_dump(mode="python")
-    raise_problems(problems_of_numbers(given, accepted), file=name, lines=lines)
+        problems += problems_of_values(error, known)
+        settings = Settings()
+    raise_problems(problems, file=name, lines=lines)
     return settings
 
 
@@ -107,7 +108,7 @@ def resolve_session(
                 remedy="set it in the configuration for the whole study, or correct the column's name",
             )
         if not _try_values(config, column, _readings(text)):
-            unit = f", in {facts.unit}" if facts.unit else ""
+            unit = f" (unit {facts.unit})" if facts.unit else ""
             raise SettingsError(
                 f"the value {text}",
                 file=_text(file),
@@ -116,7 +117,17 @@ def resolve_session(
                 remedy=f"correct the cell, or leave it blank to keep the study's value "
                 f"({yaml_inline(value_at(settings, column))})",
             )
-    return Settings.model_validate(config)
+    try:
+        return Settings.model_validate(config)
+    except ValidationError as error:
+        words = "; ".join(one["msg"].removeprefix("Value error, ") for one in error.errors())
+        raise SettingsError(
+            words,
+            file=_text(file),
+            place=f"session {session}" if session else None,
+            expected="settings of the session that agree with each other and with those of the study",
+            remedy="correct the session's columns: " + ", ".join(sorted(overrides)),
+        ) from error
 
 
 def changed_from_default(settings: Settings) -> dict[str, dict[str, Any]]:
@@ -208,7 +219,7 @@ def _parse(path: Path) -> Mapping[str, Any]:
         raise SettingsError(
             f"a {type(config).__name__} at the top of the file",
             file=str(path),
-            expected="sections: " + ", ".join(STAGES),
+            expected="the sections " + ", ".join(STAGES),
             remedy="start from the config/config.yaml that comes with odograph",
         )
     return config
@@ -254,20 +265,22 @@ def _readings(text: str) -> list[Any]:
 
 
 def _try_values(config: dict[str, Any], column: str, readings: list[Any]) -> bool:
+    """Put the first reading that the setting allows into `config`; say whether there was one."""
     *sections, key = column.split(".")
     target = config
     for section in sections:
         target = target[section]
-    before = target[key]
     for value in readings:
         target[key] = value
         try:
             accepted = Settings.model_validate(config).model_dump(mode="python")
-        except ValidationError:
-            continue
+        except ValidationError as error:
+            # Settings that contradict each other are told once all columns are in.
+            if any(complaint["loc"][:2] == (*sections, key) for complaint in error.errors()):
+                continue
+            return True
         if not problems_of_numbers(config, accepted):
             return True
-    target[key] = before
     return False
 
 

@@ -14,7 +14,7 @@ from pydantic import ValidationError
 
 from odograph.errors import SettingsError
 from odograph.settings.all import STAGES
-from odograph.settings.fields import facts_by_path
+from odograph.settings.fields import expected_at, facts_by_path, schema_at
 
 Path = tuple[str | int, ...]
 
@@ -72,6 +72,16 @@ def problems_of_shape(config: Mapping[str, Any]) -> list[Problem]:
     return list(_unknown_keys(config))
 
 
+def known_part(config: Mapping[str, Any]) -> dict[str, dict[str, Any]]:
+    """The sections and keys of a configuration that exist; an empty section counts as one without keys."""
+    known = facts_by_path()
+    return {
+        section: {key: value for key, value in (content or {}).items() if f"{section}.{key}" in known}
+        for section, content in config.items()
+        if section in STAGES and isinstance(content, Mapping | None)
+    }
+
+
 def problems_of_values(error: ValidationError, config: Mapping[str, Any]) -> list[Problem]:
     """Put pydantic's complaints into words; those about one place become one problem."""
     by_path: dict[Path, list[Mapping[str, Any]]] = {}
@@ -119,7 +129,12 @@ def _unknown_keys(config: Mapping[str, Any]) -> Iterator[Problem]:
         if content is None:
             continue
         if not isinstance(content, Mapping):
-            yield Problem((section,), f"{_show(content)} where a section belongs", "a mapping", None)
+            yield Problem(
+                (section,),
+                f"{_show(content)} where a section belongs",
+                "settings, one a line",
+                f"write the settings of {section} below it, each indented by two spaces",
+            )
             continue
         known = [path.split(".")[1] for path in facts_by_path() if path.startswith(f"{section}.")]
         for key, value in content.items():
@@ -158,31 +173,58 @@ def _sections_of(key: str) -> list[str]:
 
 
 def _value_problem(path: Path, complaints: Sequence[Mapping[str, Any]], config: Mapping[str, Any]) -> Problem:
-    facts = facts_by_path().get(".".join(str(part) for part in path[:2]))
+    kinds = {complaint["type"] for complaint in complaints}
+    if "extra_forbidden" in kinds:
+        return _unknown_inner_key(path, config)
+    words = "; ".join(
+        dict.fromkeys(str(complaint["msg"]).removeprefix("Value error, ") for complaint in complaints)
+    )
+    missing = [str(complaint["loc"][-1]) for complaint in complaints if complaint["type"] == "missing"]
+    if missing:
+        names = ", ".join(missing)
+        return Problem(path, f"without {names}", expected_at(path), f"add {names}")
+    if kinds == {"value_error"} and len(path) == 1:
+        return Problem(path, words, "settings that agree with each other", "correct one of those it names")
+    if kinds == {"value_error"}:
+        return Problem(path, words, expected_at(path), _remedy(path, _get(config, path)))
     value = _get(config, path)
-    words = "; ".join(dict.fromkeys(str(complaint["msg"]) for complaint in complaints))
-    if facts is None:
-        return Problem(path, f"{_show(value)} ({words})", None, None)
-    expected = facts.expected + (f", in {facts.unit}" if facts.unit else "")
-    inside_list = len(path) > 2
-    own_check = any(complaint["type"] == "value_error" for complaint in complaints)
-    if words and (inside_list or own_check):
-        expected = f"{words} ({expected})"
-    default = yaml_inline(facts.default)
-    section, key = facts.path.split(".", 1)
-    remedy = f"paste the default, or a value of your own in its place\n{section}:\n  {key}: {default}"
-    if isinstance(value, str) and (choice := _nearest_choice(facts.expected, value)):
-        remedy = f"the nearest value is {choice}; paste\n{section}:\n  {key}: {choice}"
-    elif facts.expected.startswith("text") and isinstance(value, int | float):
-        remedy = f"put it between quotation marks\n{section}:\n  {key}: {json.dumps(str(value))}"
-    return Problem(path, f"the value {_show(value)}", expected, remedy)
+    return Problem(path, f"the value {_show(value)}", expected_at(path) or words, _remedy(path, value))
 
 
-def _nearest_choice(expected: str, value: str) -> str | None:
-    if not expected.startswith("one of "):
+def _unknown_inner_key(path: Path, config: Mapping[str, Any]) -> Problem:
+    *above, key = path
+    known = list((schema_at(tuple(above)) or {}).get("properties", {}))
+    close = nearest(str(key), known)
+    line = f"{close}: {yaml_inline(_get(config, path))}"
+    remedy = f"the nearest is {close}; paste\n{line}" if close else "remove it"
+    return Problem(path, f"unknown setting {key}", f"one of {', '.join(known)}", remedy)
+
+
+def _remedy(path: Path, value: Any) -> str | None:
+    """A line to paste: the nearest choice, the value as text, or the default."""
+    entry = schema_at(path) or {}
+    section, key = str(path[0]), str(path[-1])
+    choices = [str(choice) for choice in _choices(entry)]
+    if isinstance(value, str) and (choice := nearest(value, choices)):
+        line, why = choice, f"the nearest value is {choice}; paste"
+    elif entry.get("type") == "string" and isinstance(value, int | float):
+        line, why = json.dumps(yaml_inline(value)), "put it between quotation marks"
+    elif facts := facts_by_path().get(".".join(str(part) for part in path)):
+        line, why = yaml_inline(facts.default), "paste the default, or a value of your own in its place"
+    elif "default" in entry:
+        line, why = yaml_inline(entry["default"]), "paste the default, or a value of your own in its place"
+    elif len(path) > 1:
+        return f"the comment above {section}.{path[1]} in config/config.yaml says what may stand here"
+    else:
         return None
-    choices = expected.removeprefix("one of ").split(" or ")[0].split(", ")
-    return nearest(value, choices)
+    if len(path) == 2:
+        return f"{why}\n{section}:\n  {key}: {line}"
+    return f"{why}\n- {line}" if isinstance(path[-1], int) else f"{why}\n{key}: {line}"
+
+
+def _choices(entry: Mapping[str, Any]) -> list[Any]:
+    options = entry.get("anyOf", [entry])
+    return [choice for option in options for choice in option.get("enum", [])]
 
 
 def _existing_part(place: Sequence[str | int], config: Mapping[str, Any]) -> Path:
