@@ -94,26 +94,22 @@ def main(arguments: Sequence[str] | None = None) -> int:
     """Run the command line; 0 when all files are there, 2 when the request makes no sense."""
     options = _parser().parse_args(arguments)
     try:
-        wanted = plans(options.sessions, minutes=options.minutes, units=options.units)
-        again = (
-            plans([options.resort], minutes=options.minutes, units=options.units) if options.resort else ()
-        )
+        named = [options.resort] if options.resort else options.sessions
+        wanted = plans(named, minutes=options.minutes, units=options.units)
     except ValueError as error:
         print(f"make_recordings.py: {error}", file=sys.stderr)
         return 2
-    jobs = [(plan, options.out / f"{plan.session}_resorted.nwb", True) for plan in again]
-    if not again:
-        jobs = [(plan, options.out / f"{plan.session}.nwb", False) for plan in wanted]
-    for number, (plan, path, resorted) in enumerate(jobs, start=1):
+    for number, plan in enumerate(wanted, start=1):
         started = time.monotonic()
+        path = options.out / f"{plan.session}{'_resorted' if options.resort else ''}.nwb"
+        resorted = options.resort is not None
         if options.force or not is_current(path, plan, resorted=resorted):
             write_recording(path, plan, resorted=resorted)
             done = f"{path.stat().st_size / 1e6:.1f} MB in {time.monotonic() - started:.1f} s"
         else:
             done = "there already"
-        print(
-            f"{number} of {len(jobs)}  {path}  {plan.minutes:g} min, {plan.units} units  ({done})", flush=True
-        )
+        size = f"{plan.minutes:g} min, {plan.units} units"
+        print(f"{number} of {len(wanted)}  {path}  {size}  ({done})", flush=True)
         if not resorted:
             write_truth(options.out, plan)
     print(f"truth of every unit: {options.out / 'truth.tsv'}")
@@ -124,7 +120,7 @@ def _parser() -> argparse.ArgumentParser:
     parser = argparse.ArgumentParser(
         prog="make_recordings.py",
         description="Make the demo recordings (NWB files) and the truth of their units.",
-        epilog="example: python demo_data/make_recordings.py --sessions bracken_1 sorrel_1 --minutes 3 --units 6",
+        epilog="example: python demo_data/make_recordings.py --sessions bracken_1 --minutes 3 --units 6",
     )
     names = ", ".join(plan.session for plan in STUDY)
     parser.add_argument("--sessions", nargs="+", metavar="SESSION", help=f"which sessions (all of {names})")

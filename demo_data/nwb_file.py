@@ -24,7 +24,7 @@ REGIONS = ("medial entorhinal cortex", "presubiculum")
 
 @dataclass(frozen=True)
 class SortedUnit:
-    """One unit as the file holds it: identifier, region, spike times (k,) [s], observed intervals (q, 2) [s]."""
+    """A unit as the file holds it: spike times (k,) [s] and observed intervals (q, 2) [s]."""
 
     unit: int
     region: str
@@ -47,7 +47,7 @@ def write_nwb(
             start_time=round(start * plan.duration_s, 3), stop_time=round(stop * plan.duration_s, 3)
         )
     path.parent.mkdir(parents=True, exist_ok=True)
-    unfinished = path.with_name(f"{path.stem}.{os.getpid()}.unfinished")
+    unfinished = path.with_name(f"unfinished_{os.getpid()}_{path.name}")
     try:
         with NWBHDF5IO(str(unfinished), "w") as io:
             io.write(nwbfile)
@@ -166,13 +166,16 @@ def _add_units(nwbfile: NWBFile, plan: SessionPlan, units: Sequence[SortedUnit])
             electrode_group=groups[shank],
             region=unit.region,
             isolation=round(float(generator(plan.session, "isolation", unit.unit).uniform(0.9, 0.999)), 3),
-            short_interval_share=round(
-                float(np.mean(np.diff(spikes) < 0.003)) if spikes.size > 1 else 0.0, 4
-            ),
+            short_interval_share=_short_interval_share(spikes),
             presence_share=_presence_share(spikes, plan.duration_s),
             sorting_label="clear" if spikes.size >= 300 else "faint",
             **intervals,
         )
+
+
+def _short_interval_share(spike_times_s: np.ndarray) -> float:
+    intervals = np.diff(spike_times_s)
+    return round(float(np.mean(intervals < 0.003)), 4) if intervals.size else 0.0
 
 
 def _presence_share(spike_times_s: np.ndarray, duration_s: float) -> float:

@@ -1,4 +1,4 @@
-"""A second spike sorting of a session: two units merged, one split, one changed in part, the rest untouched."""
+"""A second spike sorting of a session: two units merged, one split, one changed in part."""
 
 from __future__ import annotations
 
@@ -86,7 +86,7 @@ def resort_units(
 
 
 def _some_changed(unit: SortedUnit, rng: np.random.Generator) -> np.ndarray:
-    """Spike times with a share of them replaced by others at random times of the observed intervals, (k,). [s]"""
+    """Spike times (k,) with a share replaced by others at random observed times. [s]"""
     spikes = unit.spike_times_s
     count = max(1, round(CHANGED_SHARE * spikes.size))
     kept = np.delete(spikes, rng.choice(spikes.size, min(count, spikes.size), replace=False))

@@ -87,7 +87,7 @@ def unit_truths(plan: SessionPlan) -> tuple[UnitTruth, ...]:
     truths = []
     for index, unit in enumerate(unit_ids.tolist()):
         position, direction, speed, extras = DECK[index % len(DECK)]
-        low, high = (0.10, 0.22) if "sparse" in extras else (2.5, 7.5)
+        low, high = (0.10, 0.22) if "sparse" in extras else (1.0, 8.0)
         truths.append(
             UnitTruth(
                 session=plan.session,
@@ -102,7 +102,7 @@ def unit_truths(plan: SessionPlan) -> tuple[UnitTruth, ...]:
                 drift="drift" in extras,
                 burst="burst" in extras,
                 region=("medial entorhinal cortex", "presubiculum")[unit % 2],
-                mean_rate_hz=round(float(rng.uniform(low, high)), 3),
+                mean_rate_hz=round(float(low * (high / low) ** rng.random()), 3),
             )
         )
     return tuple(truths)

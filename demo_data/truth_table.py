@@ -16,12 +16,8 @@ TRUTH_COLUMNS = tuple(field.name for field in fields(UnitTruth))
 def write_truth(folder: Path, plan: SessionPlan) -> Path:
     """Put one session's units into `folder`/truth.tsv; rows of sessions without a recording there go."""
     path = folder / "truth.tsv"
-    rows = (
-        [row for row in read_truth(path) if (folder / f"{row['session']}.nwb").is_file()]
-        if path.is_file()
-        else []
-    )
-    rows = [row for row in rows if row["session"] != plan.session]
+    rows = read_truth(path) if path.is_file() else []
+    rows = [row for row in rows if row["session"] != plan.session and _recorded(folder, row["session"])]
     rows += [{name: str(value) for name, value in truth.row().items()} for truth in unit_truths(plan)]
     rows.sort(key=lambda row: (row["session"], int(row["unit"])))
     text = io.StringIO()
@@ -32,6 +28,10 @@ def write_truth(folder: Path, plan: SessionPlan) -> Path:
     unfinished.write_text(text.getvalue(), encoding="utf-8")
     unfinished.replace(path)
     return path
+
+
+def _recorded(folder: Path, session: str) -> bool:
+    return (folder / f"{session}.nwb").is_file()
 
 
 def read_truth(path: Path) -> list[dict[str, str]]:

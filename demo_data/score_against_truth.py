@@ -1,0 +1,245 @@
+"""Score a run on the demo recordings against what their units truly encode.
+
+Run as ``python demo_data/score_against_truth.py results``. Exit status: 0 when the limits hold, 1 when they
+do not, 66 when a table is missing or not what it should be.
+"""
+
+from __future__ import annotations
+
+import argparse
+import json
+import sys
+from collections.abc import Sequence
+from dataclasses import dataclass
+from pathlib import Path
+
+import pandas as pd
+from truth_table import TRUTH_COLUMNS
+
+from odograph.population.intervals import wilson_interval
+
+VARIABLES = ("position", "head_direction", "speed")
+SHARPENING = ("position", "head_direction")
+FEWEST_FOUND = 0.90
+MOST_FALSE = 0.05
+RECORDINGS = Path(__file__).with_name("recordings")
+_TEXT = ("session", "kind", "position_shape", "speed_shape", "region")
+
+
+@dataclass(frozen=True)
+class Share:
+    """So many of so many, under a name; `limit` says in words what has to hold, if anything has."""
+
+    what: str
+    k: int
+    n: int
+    limit: str = ""
+    holds: bool | None = None
+
+    @property
+    def share(self) -> float | None:
+        """k / n, None for an empty set."""
+        return self.k / self.n if self.n else None
+
+    @property
+    def interval(self) -> tuple[float, float] | None:
+        """Wilson's 95 % interval of the share, None for an empty set."""
+        if not self.n:
+            return None
+        interval = wilson_interval(self.k, self.n, 0.95)
+        return interval.low, interval.high
+
+    def line(self) -> str:
+        """The share as a line of the printed table."""
+        if self.share is None:
+            return f"{self.what:<52} none to judge"
+        low, high = self.interval
+        verdict = (
+            "" if self.holds is None else f"  {self.limit}: {'holds' if self.holds else 'DOES NOT HOLD'}"
+        )
+        limits = f"[{100 * low:.1f}, {100 * high:.1f}]"
+        return f"{self.what:<52} {self.k:>4} of {self.n:<4} {100 * self.share:5.1f} %  {limits}{verdict}"
+
+
+def join_truth(units: pd.DataFrame, truth: pd.DataFrame, fewest_spikes: int) -> pd.DataFrame:
+    """Results beside the truth: one row per unit that both tables have and that fired often enough.
+
+    Truth columns get the prefix `true_`. A unit that could not be fitted counts as encoding nothing.
+    """
+    renamed = truth.rename(columns=lambda name: name if name in ("session", "unit") else f"true_{name}")
+    both = units.merge(renamed, on=["session", "unit"], how="inner", validate="one_to_one")
+    return both[both["n_spikes"] >= fewest_spikes].sort_values(["session", "unit"], ignore_index=True)
+
+
+def score(joined: pd.DataFrame) -> list[Share]:
+    """All shares of a joined table; the first two are the ones with limits."""
+    truly = pd.DataFrame({name: joined[f"true_{name}"].astype(bool) for name in VARIABLES})
+    found = _found(joined)
+    per_variable = []
+    for name in VARIABLES:
+        label = name.replace("_", " ")
+        per_variable.append(_count(f"  {label} found where it is encoded", found[name][truly[name]]))
+        per_variable.append(_count(f"  {label} found where it is not", found[name][~truly[name]]))
+    tuned = _total("encoded variables found", per_variable[0::2], f">= {100 * FEWEST_FOUND:g} %")
+    false = _total("variables found that are not encoded", per_variable[1::2], f"<= {100 * MOST_FALSE:g} %")
+    return [tuned, false, *per_variable, *_speed_shapes(joined, truly, found), *_sharpening(joined, truly)]
+
+
+def _found(joined: pd.DataFrame) -> pd.DataFrame:
+    return pd.DataFrame({name: joined[f"encodes_{name}"].eq(True) for name in VARIABLES})
+
+
+def _count(what: str, hits: pd.Series) -> Share:
+    return Share(what, int(hits.sum()), len(hits))
+
+
+def _total(what: str, parts: Sequence[Share], limit: str) -> Share:
+    k, n = sum(part.k for part in parts), sum(part.n for part in parts)
+    if n == 0:
+        return Share(what, 0, 0, limit, None)
+    holds = k / n >= FEWEST_FOUND if limit.startswith(">") else k / n <= MOST_FALSE
+    return Share(what, k, n, limit, holds)
+
+
+def _speed_shapes(joined: pd.DataFrame, truly: pd.DataFrame, found: pd.DataFrame) -> list[Share]:
+    """How often the shape of a speed tuning that was found is named right."""
+    seen = joined[truly["speed"] & found["speed"]]
+    shares = [_count("speed shape named right", seen["speed_shape"] == seen["true_speed_shape"])]
+    for shape in ("rising", "falling", "non_monotonic"):
+        of_shape = seen[seen["true_speed_shape"] == shape]
+        shares.append(_count(f"  {shape.replace('_', '-')}", of_shape["speed_shape"] == shape))
+    return shares
+
+
+def _sharpening(joined: pd.DataFrame, truly: pd.DataFrame) -> list[Share]:
+    """How often the information is higher in fast than in slow running, for units that sharpen and others."""
+    shares = []
+    for name in SHARPENING:
+        slow = joined[f"{name}_information_slow_bits_per_spike"]
+        fast = joined[f"{name}_information_fast_bits_per_spike"]
+        judged = truly[name] & slow.notna() & fast.notna()
+        sharpens = joined["true_sharpens"].astype(bool)
+        label = f"more {name.replace('_', ' ')} information when fast"
+        shares.append(_count(f"{label}, sharpening", (fast > slow)[judged & sharpens]))
+        shares.append(_count(f"{label}, others", (fast > slow)[judged & ~sharpens]))
+    return shares
+
+
+def mistakes(joined: pd.DataFrame) -> list[str]:
+    """One line for each variable of a unit that was missed or found wrongly."""
+    lines, found = [], _found(joined)
+    for row_number, row in enumerate(joined.to_dict("records")):
+        for name in VARIABLES:
+            truly = bool(row[f"true_{name}"])
+            if truly != found.at[row_number, name]:
+                word = "missed" if truly else "false"
+                unit = f"{row['session']} unit {row['unit']}"
+                lines.append(
+                    f"{word:<7} {name:<15} {unit:<20} {row['true_kind']:<32} {row['n_spikes']:>6} spikes"
+                )
+    return lines
+
+
+def read_tables(results: Path, truth_file: Path) -> tuple[pd.DataFrame, pd.DataFrame]:
+    """The run's table of units and the truth.
+
+    Raises
+    ------
+    ValueError
+        When a table is missing, cannot be read or lacks a column; the message says what to do.
+    """
+    units_file = results / "population" / "units.parquet"
+    for path, remedy in (
+        (units_file, "run the workflow first, or name the folder of its results"),
+        (truth_file, "make the demo recordings first, or name the table with --truth"),
+    ):
+        if not path.is_file():
+            raise ValueError(f"{path} is not there; {remedy}")
+    units, truth = _readable(units_file, pd.read_parquet), _readable(truth_file, _read_truth)
+    needed = ["session", "unit", "n_spikes", "speed_shape", *(f"encodes_{name}" for name in VARIABLES)]
+    needed += [
+        f"{name}_information_{pace}_bits_per_spike" for name in SHARPENING for pace in ("slow", "fast")
+    ]
+    for path, table, columns in ((units_file, units, needed), (truth_file, truth, TRUTH_COLUMNS)):
+        missing = [name for name in columns if name not in table]
+        if missing:
+            raise ValueError(f"{path} lacks the columns {', '.join(missing)}; was it made by this version?")
+    return units, truth
+
+
+def _read_truth(path: Path) -> pd.DataFrame:
+    return pd.read_csv(path, sep="\t", dtype=dict.fromkeys(_TEXT, str), keep_default_na=False)
+
+
+def _readable(path: Path, read) -> pd.DataFrame:
+    try:
+        return read(path)
+    except (OSError, ValueError) as error:
+        raise ValueError(f"{path} cannot be read as a table: {error}") from error
+
+
+def main(arguments: Sequence[str] | None = None) -> int:
+    """Print the scores; the exit status says whether the limits hold."""
+    options = _parser().parse_args(arguments)
+    try:
+        units, truth = read_tables(options.results, options.truth)
+    except ValueError as error:
+        print(f"score_against_truth.py: {error}", file=sys.stderr)
+        return 66
+    joined = join_truth(units, truth, options.fewest_spikes)
+    shares = score(joined)
+    if joined.empty:
+        print(
+            f"score_against_truth.py: no unit of {options.truth} with {options.fewest_spikes} spikes or more "
+            f"is in {options.results}; were the demo recordings run?",
+            file=sys.stderr,
+        )
+        return 66
+    if options.json:
+        print(json.dumps(_document(joined, shares), indent=2))
+    else:
+        sessions = joined["session"].nunique()
+        judged = f"{len(joined)} units of {sessions} sessions with {options.fewest_spikes} spikes or more"
+        print(f"{judged}; 95 % intervals by Wilson")
+        print("\n".join(share.line() for share in shares))
+        if options.mistakes:
+            print("\n".join(mistakes(joined)) or "no mistakes")
+    return 1 if any(share.holds is False for share in shares) else 0
+
+
+def _document(joined: pd.DataFrame, shares: Sequence[Share]) -> dict[str, object]:
+    rows = []
+    for share in shares:
+        low, high = share.interval or (None, None)
+        rows.append(
+            {
+                "what": share.what.strip(),
+                "k": share.k,
+                "n": share.n,
+                "share": share.share,
+                "low": low,
+                "high": high,
+                "limit": share.limit or None,
+                "holds": share.holds,
+            }
+        )
+    return {"units": len(joined), "scores": rows, "mistakes": mistakes(joined)}
+
+
+def _parser() -> argparse.ArgumentParser:
+    parser = argparse.ArgumentParser(
+        prog="score_against_truth.py",
+        description="Compare what a run says about the demo units with what they truly encode.",
+    )
+    parser.add_argument("results", type=Path, nargs="?", default=Path("results"), help="folder (%(default)s)")
+    parser.add_argument("--truth", type=Path, default=RECORDINGS / "truth.tsv", help="table (%(default)s)")
+    parser.add_argument(
+        "--fewest-spikes", type=int, default=300, help="units with fewer are not judged (%(default)s)"
+    )
+    parser.add_argument("--mistakes", action="store_true", help="list every variable missed or found wrongly")
+    parser.add_argument("--json", action="store_true", help="print one JSON document")
+    return parser
+
+
+if __name__ == "__main__":
+    raise SystemExit(main())
