@@ -71,7 +71,9 @@ def worst_verdict(documents: Mapping[str, Mapping[str, Any]]) -> str:
     return max(verdicts, key=lambda verdict: _ORDER.get(verdict, 2), default="pass")
 
 
-def _draw_head(figure: Figure, inventory: Mapping[str, Any], documents: Mapping[str, Mapping[str, Any]]) -> None:
+def _draw_head(
+    figure: Figure, inventory: Mapping[str, Any], documents: Mapping[str, Mapping[str, Any]]
+) -> None:
     verdict = worst_verdict(documents)
     top = HEIGHT_IN - 0.16
     text_at(figure, 0.1, top, str(inventory.get("session")), va="top", fontsize=11, weight="bold")
@@ -85,8 +87,12 @@ def _draw_head(figure: Figure, inventory: Mapping[str, Any], documents: Mapping[
         file.get("name"),
         subject.get("subject_id"),
         subject.get("species"),
-        str(file.get("session_start_time"))[:16].replace("T", " ") if file.get("session_start_time") else None,
-        f"{sum(bool(unit.get('kept', True)) for unit in units)} of {len(units)} units kept" if units else None,
+        str(file.get("session_start_time"))[:16].replace("T", " ")
+        if file.get("session_start_time")
+        else None,
+        f"{sum(bool(unit.get('kept', True)) for unit in units)} of {len(units)} units kept"
+        if units
+        else None,
     ]
     line = "  ·  ".join(str(part) for part in parts if part)
     text_at(figure, 0.1, top - 0.24, wrapped(line, 120, 1), va="top", color=SOFT_INK)
@@ -153,7 +159,17 @@ def _draw_residuals(axes: Any, clock: Mapping[str, Any], residuals: pd.DataFrame
     order = np.argsort(time, kind="stable")
     time, value = time[order] / 60, value[order]
     axes.axhline(0, color=RULE, lw=0.8, zorder=0)
-    axes.plot(time, value, ls="none", marker=".", ms=1.2, mew=0, color=TERM_COLOURS["position"], alpha=0.35, rasterized=True)
+    axes.plot(
+        time,
+        value,
+        ls="none",
+        marker=".",
+        ms=1.2,
+        mew=0,
+        color=TERM_COLOURS["position"],
+        alpha=0.35,
+        rasterized=True,
+    )
     middle = _running_median(time, value)
     if middle is not None:
         axes.plot(*middle, color=INK, lw=1.1)
@@ -165,7 +181,9 @@ def _draw_residuals(axes: Any, clock: Mapping[str, Any], residuals: pd.DataFrame
     axes.margins(x=0.01)
 
 
-def _running_median(time: np.ndarray, value: np.ndarray, pieces: int = 60) -> tuple[np.ndarray, np.ndarray] | None:
+def _running_median(
+    time: np.ndarray, value: np.ndarray, pieces: int = 60
+) -> tuple[np.ndarray, np.ndarray] | None:
     """Median in `pieces` equal stretches of time, where the slow part of a clock's fault shows."""
     if len(time) < 10 * pieces:
         return None
@@ -200,12 +218,19 @@ def _draw_strip(axes: Any, behaviour: pd.DataFrame | None, audit: Mapping[str, A
         strip[np.bincount(column[label == name], minlength=columns) > 0] = place + 1
     colours = [_VALID_COLOUR, *(_REASON_COLOURS[place % len(_REASON_COLOURS)] for place in range(len(names)))]
     rgb = np.array([[int(colour[i : i + 2], 16) for i in (1, 3, 5)] for colour in colours], dtype=np.uint8)
-    axes.imshow(rgb[strip.astype(int)][None], aspect="auto", extent=(time[0] / 60, time[-1] / 60, 0, 1), interpolation="nearest")
+    axes.imshow(
+        rgb[strip.astype(int)][None],
+        aspect="auto",
+        extent=(time[0] / 60, time[-1] / 60, 0, 1),
+        interpolation="nearest",
+    )
     axes.set_yticks([])
     axes.spines["left"].set_visible(False)
     axes.set_xlabel("recording time (min)")
     share = float(valid.mean())
-    axes.set_title(f"valid time: {number(valid.sum() * step / 60, 1)} min, {100 * share:.1f} % of {number(len(time) * step / 60, 1)} min")
+    axes.set_title(
+        f"valid time: {number(valid.sum() * step / 60, 1)} min, {100 * share:.1f} % of {number(len(time) * step / 60, 1)} min"
+    )
     handles = [
         Patch(color=colour, label=f"{name.replace('_', ' ')} {number((label == name).sum() * step, 1)} s")
         for name, colour in zip(names, colours[1:], strict=True)
@@ -217,7 +242,9 @@ def _draw_strip(axes: Any, behaviour: pd.DataFrame | None, audit: Mapping[str, A
         )  # fmt: skip
 
 
-def _draw_occupancy(figure: Figure, behaviour: pd.DataFrame | None, corners: Any, settings: FiguresSettings) -> None:
+def _draw_occupancy(
+    figure: Figure, behaviour: pd.DataFrame | None, corners: Any, settings: FiguresSettings
+) -> None:
     axes = axes_at(figure, 0.5, 0.5, 0.98, 0.98)
     axes.set_title("time per place")
     if not _has(behaviour, "x_m", "y_m", "valid", "time_s") or not behaviour["valid"].any():
@@ -232,7 +259,15 @@ def _draw_occupancy(figure: Figure, behaviour: pd.DataFrame | None, corners: Any
     seconds = np.histogram2d(y, x, bins=counts[::-1], range=[extent[2:], extent[:2]])[0] * step
     top = max(float(np.quantile(seconds[seconds > 0], 0.98)), step)
     shown = np.where(seconds > 0, seconds, np.nan)
-    image = axes.imshow(shown, origin="lower", extent=extent, cmap=rate_colours(settings), vmin=0, vmax=top, interpolation="nearest")
+    image = axes.imshow(
+        shown,
+        origin="lower",
+        extent=extent,
+        cmap=rate_colours(settings),
+        vmin=0,
+        vmax=top,
+        interpolation="nearest",
+    )
     draw_arena(axes, corners)
     square_map_axes(axes, extent)
     bar = figure.colorbar(image, cax=axes_at(figure, 1.56, 0.5, 0.07, 0.98), extend="max")
@@ -256,7 +291,13 @@ def _draw_speed(axes: Any, behaviour: pd.DataFrame | None) -> None:
         say(axes, "No speed.", 20)
         return
     top = float(np.quantile(speed, 0.998))
-    axes.hist(speed, bins=30, range=(0, max(top, 1.0)), weights=np.full(speed.size, 100 / speed.size), color=TERM_COLOURS["speed"])
+    axes.hist(
+        speed,
+        bins=30,
+        range=(0, max(top, 1.0)),
+        weights=np.full(speed.size, 100 / speed.size),
+        color=TERM_COLOURS["speed"],
+    )
     axes.axvline(float(np.median(speed)), color=INK, lw=0.9, ls=(0, (3, 2)))
     axes.set_xlim(0, max(top, 1.0))
     axes.set_xlabel("speed (cm/s)")
@@ -304,5 +345,3 @@ def _draw_rates(axes: Any, inventory: Mapping[str, Any]) -> None:
     axes.set_xlabel("mean rate (Hz)")
     axes.set_ylabel("units")
     axes.locator_params(axis="y", nbins=4, integer=True)
-
-
