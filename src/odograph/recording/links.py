@@ -1,0 +1,86 @@
+"""Links of an NWB file whose target is gone: readers pass over them in silence, so they come first."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from pathlib import Path
+
+import h5py
+
+
+@dataclass(frozen=True)
+class MissingLink:
+    """One link without a target: its place in the file, and the file and place it points at."""
+
+    place: str
+    target_file: str | None
+    target_place: str
+
+    def describe(self) -> str:
+        """The link in one line."""
+        target = f"{self.target_file}:{self.target_place}" if self.target_file else self.target_place
+        return f"{self.place} -> {target}"
+
+
+def missing_links(path: Path) -> list[MissingLink]:
+    """All soft and external links of an HDF5 file, and of files it links to, that lead nowhere.
+
+    Only names and links are looked at, no data.
+
+    Parameters
+    ----------
+    path : Path
+        The HDF5 file.
+
+    Returns
+    -------
+    list of MissingLink
+        Sorted by place; empty when every link resolves.
+    """
+    found: list[MissingLink] = []
+    with h5py.File(path, "r") as file:
+        _walk(file, "", found, {_address(file)})
+    return sorted(found, key=lambda link: link.place)
+
+
+def _walk(group: h5py.Group, above: str, found: list[MissingLink], seen: set[tuple[int, int]]) -> None:
+    for name in group:
+        place = f"{above}/{name}" if above else name
+        link = group.get(name, getlink=True)
+        target = _resolve(group, name)
+        if target is None:
+            target_file = link.filename if isinstance(link, h5py.ExternalLink) else None
+            found.append(MissingLink(place, target_file, getattr(link, "path", name)))
+            continue
+        if isinstance(target, h5py.Group):
+            address = _address(target)
+            if address not in seen:
+                seen.add(address)
+                _walk(target, place, found, seen)
+
+
+def _resolve(group: h5py.Group, name: str) -> h5py.HLObject | None:
+    try:
+        return group[name]
+    except (KeyError, OSError):
+        return None
+
+
+def _address(thing: h5py.HLObject) -> tuple[int, int]:
+    info = h5py.h5o.get_info(thing.id)
+    return info.fileno, info.addr
+
+
+def resolve_place(path: Path, place: str) -> str:
+    """Follow the soft links in a place, so that a linked name leads to the object's own place."""
+    with h5py.File(path, "r") as file:
+        resolved = ""
+        for part in place.strip("/").split("/"):
+            resolved = f"{resolved}/{part}".strip("/")
+            for _ in range(16):
+                link = file.get(resolved, getlink=True)
+                if not isinstance(link, h5py.SoftLink):
+                    break
+                base = "" if link.path.startswith("/") else resolved.rpartition("/")[0]
+                resolved = f"{base}/{link.path}".strip("/")
+        return resolved

@@ -1,0 +1,309 @@
+"""Opening an NWB file: the file must be there, whole, NWB 2 or later, and lead nowhere that is gone."""
+
+from __future__ import annotations
+
+import re
+import warnings
+from collections.abc import Iterator
+from contextlib import contextmanager
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import Any
+
+import h5py
+import numpy as np
+
+from odograph.errors import InputError, OdographError
+from odograph.recording.links import missing_links, resolve_place
+from odograph.recording.model import FileFacts, Finding, finding
+from odograph.settings.intake import IntakeSettings
+
+_TIME_ZONE = re.compile(r"(Z|[+-]\d{2}:?\d{2})$")
+
+
+@dataclass
+class OpenRecording:
+    """An NWB file held open for reading.
+
+    `places` maps the place of every object in the file (`processing/behavior/Position/led`) to the object
+    that pynwb made of it. `findings` gathers what is worth a warning.
+    """
+
+    path: Path
+    nwbfile: Any
+    facts: FileFacts
+    places: dict[str, Any]
+    lost_places: tuple[str, ...] = ()
+    findings: list[Finding] = field(default_factory=list)
+
+    def refuse(
+        self, found: str, *, place: str | None = None, expected: str | None = None, remedy: str | None = None
+    ) -> InputError:
+        """The error that refuses this file; to be raised by the caller."""
+        return InputError(found, file=str(self.path), place=place, expected=expected, remedy=remedy)
+
+    def note(self, level: str, found: str, **facts: str | None) -> None:
+        """Add a finding (`warn` or `note`)."""
+        self.findings.append(finding(level, found, **facts))
+
+    def array(self, data: Any, place: str) -> np.ndarray:
+        """Read a data set whole; a damaged one is refused."""
+        try:
+            return np.asarray(data[()] if hasattr(data, "shape") and hasattr(data, "id") else data[:])
+        except (OSError, RuntimeError) as error:
+            raise self.refuse(
+                f"the data cannot be read ({_first_line(error)})",
+                place=place,
+                expected="data that are whole",
+                remedy="copy the file anew from its source; this copy is damaged",
+            ) from error
+
+    def resolve(self, place: str) -> str | None:
+        """Turn a place given by the user into a place of the file; None when nothing is there."""
+        wanted = place.strip("/")
+        if wanted in self.places:
+            return wanted
+        linked = resolve_place(self.path, wanted)
+        if linked in self.places:
+            return linked
+        ends = [known for known in self.places if known.endswith(f"/{wanted}")]
+        return ends[0] if len(ends) == 1 else None
+
+
+@contextmanager
+def open_recording(path: str | Path, settings: IntakeSettings) -> Iterator[OpenRecording]:
+    """Open an NWB file for reading; nothing in it is changed and no data are read yet.
+
+    Parameters
+    ----------
+    path : str or Path
+        The file.
+    settings : IntakeSettings
+        `missing_links` is used here.
+
+    Yields
+    ------
+    OpenRecording
+
+    Raises
+    ------
+    InputError
+        The file is missing, empty, truncated, not HDF5, not NWB, older than NWB 2, malformed, locked, or has
+        links to nowhere.
+    """
+    path = Path(path)
+    facts = _file_facts(path)
+    lost = _check_links(path, settings)
+    pynwb = _import_pynwb()
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore")
+        io, nwbfile = _read(pynwb, path)
+        try:
+            opened = OpenRecording(
+                path, nwbfile, facts, _places(io, nwbfile), tuple(link.place for link in lost)
+            )
+            for link in lost:
+                opened.note(
+                    "warn",
+                    f"the link leads nowhere: {link.describe()}",
+                    place=link.place,
+                    expected="the linked file beside this one",
+                    remedy="put the linked file back if its data are wanted",
+                )
+            _check_times_of_file(opened)
+            yield opened
+        finally:
+            io.close()
+
+
+def _import_pynwb() -> Any:
+    try:
+        import pynwb
+        import pynwb.behavior
+        import pynwb.event
+        import pynwb.misc
+    except OSError as error:
+        raise OdographError(
+            f"pynwb cannot be loaded ({_first_line(error)})",
+            expected="a cache folder that can be written",
+            remedy="set the environment variable XDG_CACHE_HOME to a folder you can write to",
+        ) from error
+    return pynwb
+
+
+def _file_facts(path: Path) -> FileFacts:
+    _check_is_hdf5(path)
+    try:
+        with h5py.File(path, "r") as file:
+            version = _text(file.attrs.get("nwb_version")) or _text_of(file, "nwb_version")
+            if version is None:
+                raise InputError(
+                    "HDF5, but not NWB: it names no NWB version",
+                    file=str(path),
+                    place="attribute nwb_version",
+                    expected="an NWB file of version 2 or later",
+                    remedy="check the path in the sessions table; convert the recording to NWB 2",
+                )
+            number = re.search(r"\d+", version)
+            if number is None or int(number.group()) < 2:
+                raise InputError(
+                    f"NWB version {version}",
+                    file=str(path),
+                    place="attribute nwb_version",
+                    expected="NWB 2.0 or later",
+                    remedy="convert the file to NWB 2",
+                )
+            return FileFacts(
+                path=path,
+                nwb_version=version,
+                identifier=_text_of(file, "identifier"),
+                session_id=_text_of(file, "general/session_id"),
+                session_start_time=_text_of(file, "session_start_time"),
+                description=_text_of(file, "session_description"),
+            )
+    except OSError as error:
+        raise _open_error(path, error) from error
+
+
+def _check_is_hdf5(path: Path) -> None:
+    recording = "an NWB file (HDF5)"
+    check_path = "check the path in the sessions table"
+    if not path.exists():
+        raise InputError("there is no such file", file=str(path), expected=recording, remedy=check_path)
+    if path.is_dir():
+        raise InputError(
+            "a folder, not a file",
+            file=str(path),
+            expected=recording,
+            remedy="name the file; a recording kept as a Zarr folder has to be exported to HDF5 first",
+        )
+    try:
+        with path.open("rb") as stream:
+            head = stream.read(256)
+    except OSError as error:
+        raise _open_error(path, error) from error
+    if not head:
+        raise InputError("the file is empty", file=str(path), expected=recording, remedy="copy it anew")
+    if head.startswith(b"version ") and b"git-lfs" in head:
+        raise InputError(
+            "a Git LFS pointer, not the recording itself",
+            file=str(path),
+            expected=recording,
+            remedy="fetch the data: git lfs pull",
+        )
+    if not h5py.is_hdf5(path):
+        raise InputError("not an HDF5 file", file=str(path), expected=recording, remedy=check_path)
+
+
+def _open_error(path: Path, error: OSError) -> InputError:
+    text = str(error)
+    if isinstance(error, PermissionError) or "Permission denied" in text:
+        found, remedy = "the file may not be read (permission denied)", "ask for permission to read it"
+    elif "truncated" in text or "eof" in text:
+        found = f"the file is truncated ({_first_line(error)})"
+        remedy = "copy it anew from its source and compare the sizes"
+    elif "lock" in text:
+        found = f"the file is locked ({_first_line(error)})"
+        remedy = (
+            "close the program that writes it; on a network disk without locks set the environment "
+            "variable HDF5_USE_FILE_LOCKING to FALSE"
+        )
+    else:
+        found, remedy = f"the file cannot be opened ({_first_line(error)})", "copy it anew from its source"
+    return InputError(found, file=str(path), expected="an NWB file that is whole", remedy=remedy)
+
+
+def _check_links(path: Path, settings: IntakeSettings) -> list[Any]:
+    try:
+        lost = missing_links(path)
+    except (OSError, RuntimeError) as error:
+        raise InputError(
+            f"the file's structure cannot be walked ({_first_line(error)})",
+            file=str(path),
+            expected="an NWB file that is whole",
+            remedy="copy it anew from its source",
+        ) from error
+    if lost and settings.missing_links == "refuse":
+        raise InputError(
+            f"{len(lost)} link(s) lead nowhere: " + "; ".join(link.describe() for link in lost[:8]),
+            file=str(path),
+            place=lost[0].place,
+            expected="every linked file at the place the link names",
+            remedy="put the linked files back, or set intake.missing_links to warn if they are not needed",
+        )
+    return lost
+
+
+def _read(pynwb: Any, path: Path) -> tuple[Any, Any]:
+    io = None
+    try:
+        io = pynwb.NWBHDF5IO(path, "r", load_namespaces=True)
+        return io, io.read()
+    except Exception as error:
+        # pynwb and hdmf raise many kinds for a malformed file, down to KeyError and TypeError.
+        if io is not None:
+            io.close()
+        place = re.search(r"\(at (root\S*?)\)|'(root/[^']+)'|(root/\S+)", str(error))
+        found_at = next((part for part in place.groups() if part), "") if place else ""
+        raise InputError(
+            f"malformed NWB: {type(error).__name__}: {_first_line(error)}",
+            file=str(path),
+            place=found_at.removeprefix("root").strip("/") or None,
+            expected="a file that pynwb can read",
+            remedy="run `pynwb-validate` on it and mend the object it names; every part of the file has to "
+            "be readable",
+        ) from error
+
+
+def _places(io: Any, nwbfile: Any) -> dict[str, Any]:
+    places: dict[str, Any] = {}
+    for thing in nwbfile.objects.values():
+        place = _place_of(io, nwbfile, thing)
+        if place:
+            places.setdefault(place, thing)
+    return dict(sorted(places.items()))
+
+
+def _place_of(io: Any, nwbfile: Any, thing: Any) -> str:
+    builder = io.manager.get_builder(thing)
+    return builder.path.removeprefix("root").strip("/") if builder is not None else ""
+
+
+def _check_times_of_file(opened: OpenRecording) -> None:
+    start = opened.facts.session_start_time
+    if start is not None and not _TIME_ZONE.search(start):
+        opened.note(
+            "warn",
+            f"the session's start has no time zone: {start}",
+            place="session_start_time",
+            expected="ISO 8601 with an offset from UTC",
+            remedy="nothing is computed from it; write the offset when the file is next made",
+        )
+    reference = opened.nwbfile.timestamps_reference_time
+    if reference is not None and reference != opened.nwbfile.session_start_time:
+        opened.note(
+            "warn",
+            f"the reference time {reference.isoformat()} differs from the session's start",
+            place="timestamps_reference_time",
+            expected="all times of the file on one axis",
+            remedy="all times are taken as they stand; make sure that no writer subtracted the difference "
+            "from some of them",
+        )
+
+
+def _text(value: Any) -> str | None:
+    if isinstance(value, np.ndarray):
+        value = value.ravel()[0] if value.size else None
+    if isinstance(value, bytes):
+        return value.decode("utf-8", "replace")
+    return str(value) if value is not None else None
+
+
+def _text_of(file: h5py.File, place: str) -> str | None:
+    thing = file.get(place)
+    return _text(thing[()]) if isinstance(thing, h5py.Dataset) else None
+
+
+def _first_line(error: BaseException) -> str:
+    text = str(error).strip()
+    return text.splitlines()[0][:200] if text else type(error).__name__
