@@ -22,6 +22,7 @@ COLUMNS = (
     "share",
     "low",
     "high",
+    "confidence",
     "method",
 )
 AT_LEAST_ONE = "at least one variable"
@@ -45,8 +46,8 @@ def composition(units: pd.DataFrame, settings: PopulationSettings) -> pd.DataFra
         One row per level ("all", "animal", "group", "region"), name within it, and category. `kind` is
         "exact" for a combination and nothing else (`position+speed`, `constant`), and "includes" for a
         variable whatever else the unit encodes (`position, whatever else`), `at least one variable` and
-        `two or more variables`. `k` of `n` units in `animals` animals; `share`, `low`, `high` and `method`
-        as `share_rows` makes them.
+        `two or more variables`. `k` of `n` units in `animals` animals; `share` and its
+        interval `low`, `high` of `confidence` by `method`, as `share_rows` makes them.
     """
     fitted = fitted_units(units)
     variables = variables_of(units)
@@ -95,7 +96,7 @@ def share_rows(
     Returns
     -------
     list of dict
-        Per category: k, n, animals, share, low, high, method.
+        Per category: k, n, animals, share, low, high, confidence, method.
     """
     n, n_animals = len(members), len(np.unique(animals))
     counts = members.sum(axis=0, dtype=int).tolist()
@@ -118,6 +119,7 @@ def share_rows(
             "share": k / n if n else float("nan"),
             "low": interval.low,
             "high": interval.high,
+            "confidence": settings.confidence,
             "method": interval.method,
         }
         for k, interval in zip(counts, intervals, strict=True)

@@ -7,12 +7,11 @@ import pandas as pd
 from scipy.stats import wilcoxon
 
 from odograph.population.composition import share_rows
-from odograph.population.gather import fitted_units
+from odograph.population.gather import fitted_units, variables_of
 from odograph.population.intervals import bootstrap_interval, counted, median_interval
 from odograph.settings.population import PopulationSettings
 
 SHAPES = ("rising", "falling", "non_monotonic", "undecided")
-COMPARED = ("position", "head_direction")
 COLUMNS = (
     "measure",
     "level",
@@ -24,6 +23,7 @@ COLUMNS = (
     "value",
     "low",
     "high",
+    "confidence",
     "unit",
     "median_slow",
     "median_fast",
@@ -45,13 +45,24 @@ def speed_table(units: pd.DataFrame, settings: PopulationSettings) -> pd.DataFra
     -------
     DataFrame
         Rows with measure "speed_shape": per shape, `k` of the `n` units that encode speed, `value` the
-        share. Rows with measure "position_information_change" and "head_direction_information_change":
-        `value` is the median over `n` units of fast minus slow (`unit` bits_per_spike), `k` how many units
-        gained, `p` of the Wilcoxon signed-rank test. Each for all animals together and for each animal.
+        share. Rows with measure "<variable>_information_change", for every variable measured at slow and at
+        fast running: `value` is the median over `n` units of fast minus slow (`unit` bits_per_spike), `k` how
+        many units gained, `p` of the Wilcoxon signed-rank test. Each for all animals together and for each
+        animal; the interval is `low`, `high` of `confidence` by `method`.
     """
-    shapes = shape_rows(units, settings)
-    changes = [row for variable in COMPARED for row in change_rows(units, variable, settings)]
-    return pd.DataFrame([*shapes, *changes], columns=list(COLUMNS))
+    changes = [
+        row for variable in compared_variables(units) for row in change_rows(units, variable, settings)
+    ]
+    return pd.DataFrame([*shape_rows(units, settings), *changes], columns=list(COLUMNS))
+
+
+def compared_variables(units: pd.DataFrame) -> list[str]:
+    """Variables whose information was measured at slow and at fast running."""
+    return [
+        variable
+        for variable in variables_of(units)
+        if all(f"{variable}_information_{half}_bits_per_spike" in units for half in ("slow", "fast"))
+    ]
 
 
 def shape_rows(units: pd.DataFrame, settings: PopulationSettings) -> list[dict[str, object]]:
@@ -85,7 +96,7 @@ def information_pairs(units: pd.DataFrame, variable: str) -> pd.DataFrame:
     units : DataFrame
         The table of `gather_units`.
     variable : str
-        "position" or "head_direction".
+        One of `compared_variables`.
 
     Returns
     -------
@@ -95,10 +106,7 @@ def information_pairs(units: pd.DataFrame, variable: str) -> pd.DataFrame:
     """
     names = [f"{variable}_information_{half}_bits_per_spike" for half in ("slow", "fast")]
     fitted = fitted_units(units)
-    if f"encodes_{variable}" not in fitted or not set(names) <= set(fitted.columns):
-        fitted, names = fitted.iloc[:0].assign(slow=np.nan, fast=np.nan), ["slow", "fast"]
-    else:
-        fitted = fitted[fitted[f"encodes_{variable}"].to_numpy(bool)]
+    fitted = fitted[fitted[f"encodes_{variable}"].to_numpy(bool)]
     slow, fast = (fitted[name].to_numpy(float) for name in names)
     pairs = fitted[["session", "unit", "animal"]].assign(
         slow_bits_per_spike=slow, fast_bits_per_spike=fast, change_bits_per_spike=fast - slow
@@ -133,6 +141,7 @@ def change_rows(units: pd.DataFrame, variable: str, settings: PopulationSettings
                 "value": _median(change),
                 "low": interval.low,
                 "high": interval.high,
+                "confidence": settings.confidence,
                 "unit": "bits_per_spike",
                 "median_slow": _median(part["slow_bits_per_spike"]),
                 "median_fast": _median(part["fast_bits_per_spike"]),
