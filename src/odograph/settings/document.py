@@ -23,6 +23,7 @@ from odograph.settings.fields import (
     schema_at,
     setting_facts,
     value_at,
+    whole_schema,
 )
 from odograph.settings.load import load_settings
 from odograph.settings.problems import yaml_inline
@@ -89,7 +90,7 @@ def config_text(settings: Settings) -> str:
 
 def settings_schema() -> dict[str, Any]:
     """JSON schema of the configuration: unit, default and description of every key; no other key allowed."""
-    schema = _tidy(Settings.model_json_schema())
+    schema = _tidy(whole_schema())
     for name in STAGES:
         # An absent section takes its defaults; validators fill them in only where the section itself has one.
         schema["properties"][name]["default"] = {}
@@ -212,8 +213,7 @@ def _comment_lines(facts: SettingFacts) -> Iterator[str]:
     if inner:
         yield from _wrap("A list; the keys of each entry:")
         for name, entry in inner.items():
-            root = Settings.model_json_schema()
-            words = expected_words(root, entry)
+            words = expected_words(whole_schema(), entry)
             inner_unit = f"; unit {entry['unit']}" if entry.get("unit") else ""
             yield from _wrap(
                 f"{name}: {entry.get('description', '').rstrip('.')} ({words}{inner_unit})", indent="  "

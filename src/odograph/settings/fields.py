@@ -63,7 +63,7 @@ class SettingFacts:
 @cache
 def setting_facts() -> tuple[SettingFacts, ...]:
     """The facts of all settings, in the order of the configuration."""
-    schema = Settings.model_json_schema()
+    schema = whole_schema()
     defaults = Settings().model_dump(mode="json")
     return tuple(_walk(schema, schema, defaults, ()))
 
@@ -94,9 +94,15 @@ def _walk(
 
 
 @cache
+def whole_schema() -> Mapping[str, Any]:
+    """JSON schema of all settings as pydantic makes it."""
+    return Settings.model_json_schema()
+
+
+@cache
 def schema_at(path: tuple[str | int, ...]) -> Mapping[str, Any] | None:
     """The JSON schema entry of a setting or of a part of one (`("encoding", "terms", 0, "kind")`)."""
-    root = Settings.model_json_schema()
+    root = whole_schema()
     entry: Mapping[str, Any] = root
     for part in path:
         options = [resolve_reference(root, option) for option in entry.get("anyOf", [entry])]
@@ -119,7 +125,7 @@ def expected_at(path: tuple[str | int, ...]) -> str | None:
     entry = schema_at(path)
     if entry is None:
         return None
-    words = expected_words(Settings.model_json_schema(), entry)
+    words = expected_words(whole_schema(), entry)
     return f"{words} (unit {entry['unit']})" if entry.get("unit") else words
 
 

@@ -92,12 +92,14 @@ def problems_of_values(error: ValidationError, config: Mapping[str, Any]) -> lis
 
 
 def problems_of_numbers(config: Mapping[str, Any], accepted: Mapping[str, Any]) -> list[Problem]:
-    """Find values that would be read as something else than written: yes/no as 1/0, nan, infinity."""
+    """Find values that would be read as something else than written (yes as 1), nan and infinity."""
     problems = []
     for path, value in _leaves(config):
-        truth_for_number = isinstance(value, bool) and not isinstance(_get(accepted, path), bool)
+        mistaken = isinstance(value, bool | int | float) and (
+            isinstance(value, bool) != isinstance(_get(accepted, path), bool)
+        )
         endless = isinstance(value, float) and not math.isfinite(value)
-        if truth_for_number or endless:
+        if mistaken or endless:
             problems.append(_value_problem(path, [], config))
     return problems
 
