@@ -116,53 +116,81 @@ def gram(size: int, derivative: int, *, cyclic: bool = False) -> np.ndarray:
 
 
 @dataclass(frozen=True)
-class Penalty:
-    """The quadratic penalties of one term and what the smoothing update needs of them.
+class Coordinates:
+    """Coordinates of a term in which all its penalties are diagonal and the constant function is left out.
+
+    A function with spline coefficients `factors applied to b` has roughness sum_k spectra[j, k] b_k^2 under
+    penalty j. The intercept takes the constant's place, which makes a sum of terms identifiable.
 
     Attributes
     ----------
-    matrices : tuple of ndarray, each (size, size)
-        Positive semi-definite, in the order of their smoothing strengths.
-    eigenvalues : ndarray, (n_penalties, rank)
-        Common generalised eigenvalues: with strengths lam, the penalty's non-zero spectrum is lam @ eigenvalues.
+    factors : tuple of ndarray
+        One matrix per axis, (axis size, axis size); the term's transform is their Kronecker product without
+        its first column when `drops_constant`.
+    spectra : ndarray, (n_penalties, n_coordinates)
+    drops_constant : bool
     """
 
-    matrices: tuple[np.ndarray, ...]
-    eigenvalues: np.ndarray
+    factors: tuple[np.ndarray, ...]
+    spectra: np.ndarray
+    drops_constant: bool = True
+
+    @property
+    def size(self) -> int:
+        return self.spectra.shape[1]
+
+    def matrix(self) -> np.ndarray:
+        """From coordinates to spline coefficients, (n_splines, n_coordinates)."""
+        whole = self.factors[0] if len(self.factors) == 1 else np.kron(*self.factors)
+        return whole[:, 1:] if self.drops_constant else whole
 
     def trace_ratio(self, strengths: np.ndarray) -> np.ndarray:
-        """tr(S_lam^- S_j) for each penalty j, with S_lam the sum of strengths times matrices."""
-        return (self.eigenvalues / (strengths @ self.eigenvalues)).sum(axis=1)
+        """strength_j tr(S_lam^- S_j) for each penalty j, S_lam the sum of strengths times penalties."""
+        weighted = strengths[:, None] * self.spectra
+        total = weighted.sum(axis=0)
+        return np.divide(weighted, total, out=np.zeros_like(weighted), where=total > 0).sum(axis=1)
 
     def log_determinant(self, strengths: np.ndarray) -> float:
-        """log of the product of the non-zero spectrum, up to a constant that does not depend on strengths."""
-        return float(np.log(strengths @ self.eigenvalues).sum())
+        """log of the product of the non-zero spectrum of S_lam."""
+        total = strengths @ self.spectra
+        return float(np.log(total[self.spectra.any(axis=0)]).sum())
 
 
-def curve_penalty(size: int, *, cyclic: bool = False) -> Penalty:
+def _diagonalise(stiffness: np.ndarray, mass: np.ndarray, linear: bool) -> tuple[np.ndarray, np.ndarray]:
+    """Generalised eigenvectors, mass-orthonormal, the null space spelled out as constant (and linear)."""
+    size = len(stiffness)
+    null = [np.ones(size)] + ([np.arange(size, dtype=float)] if linear else [])
+    basis = []
+    for vector in null:
+        for earlier in basis:
+            vector = vector - (earlier @ mass @ vector) * earlier
+        basis.append(vector / np.sqrt(vector @ mass @ vector))
+    values, vectors = linalg.eigh(stiffness, mass)
+    keep = slice(len(null), size)
+    vectors = vectors[:, keep]
+    # An eigenvector has no sign of its own: make its largest entry positive, whatever the library returns.
+    vectors = vectors * np.sign(vectors[np.argmax(np.abs(vectors), axis=0), np.arange(vectors.shape[1])])
+    return np.column_stack([*basis, vectors]), np.concatenate([np.zeros(len(null)), values[keep]])
+
+
+def curve_coordinates(size: int, *, cyclic: bool = False) -> Coordinates:
     """Integrated squared second derivative of a curve; straight lines (circle: constants) go unpenalised."""
-    matrix = gram(size, 2, cyclic=cyclic)
-    rank = size - 1 if cyclic else size - 2
-    return Penalty((matrix,), np.sort(linalg.eigvalsh(matrix))[None, size - rank :])
+    factor, values = _diagonalise(gram(size, 2, cyclic=cyclic), gram(size, 0, cyclic=cyclic), not cyclic)
+    return Coordinates((factor,), values[None, 1:])
 
 
-def surface_penalty(size: int) -> Penalty:
+def surface_coordinates(size: int) -> Coordinates:
     """Squared second derivatives of a surface along each axis, with a strength of its own for each.
 
-    The two matrices are K x M and M x K (Kronecker products of second-derivative and mass matrices), so the
-    generalised eigenvectors of (K, M) diagonalise both; functions 1, x, y and xy go unpenalised.
+    In spline coefficients the two penalties are K x M and M x K (Kronecker products of second-derivative and
+    mass matrices), which the generalised eigenvectors of (K, M) diagonalise together; the functions 1, x, y
+    and xy go unpenalised.
     """
-    stiffness, mass = gram(size, 2), gram(size, 0)
-    d = linalg.eigh(stiffness, mass, eigvals_only=True)
-    d[:2] = 0.0
-    along_x, along_y = np.repeat(d, size), np.tile(d, size)
-    penalised = (along_x > 0) | (along_y > 0)
-    return Penalty(
-        (np.kron(stiffness, mass), np.kron(mass, stiffness)),
-        np.stack([along_x[penalised], along_y[penalised]]),
-    )
+    factor, values = _diagonalise(gram(size, 2), gram(size, 0), True)
+    spectra = np.stack([np.repeat(values, size), np.tile(values, size)])
+    return Coordinates((factor, factor), spectra[:, 1:])
 
 
-def ridge_penalty(size: int) -> Penalty:
-    """Sum of squares: the penalty of a category's levels."""
-    return Penalty((np.eye(size),), np.ones((1, size)))
+def level_coordinates(size: int) -> Coordinates:
+    """Sum of squares: the ridge penalty of a category's levels."""
+    return Coordinates((np.eye(size),), np.ones((1, size)), drops_constant=False)

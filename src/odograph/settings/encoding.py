@@ -66,7 +66,9 @@ class EncodingSettings(StageSettings):
         400, "circular shifts drawn for each term's test; 0 leaves the tests out", ge=0, le=20000
     )
     test_minimum_shift_s: float = setting(20.0, "shortest shift used by the tests", unit="s", gt=0)
-    information_cells: int = setting(20, "cells per axis of the maps used for spatial information", ge=5, le=60)
+    information_cells: int = setting(
+        20, "cells per axis of the maps used for spatial information", ge=5, le=60
+    )
     matching_repeats: int = setting(
         20, "repeats of the occupancy- and spike-matched comparison of slow and fast running", ge=1, le=1000
     )

@@ -1,0 +1,145 @@
+"""Held-out evaluation: what a model predicts of time that played no part in fitting it.
+
+Every fold is fitted anew, smoothing strengths included, on its training groups; the fit to all data only
+lends a place to start the iteration, which runs to the same convergence. Scores are gains over the constant
+rate of the same training part.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from scipy.special import xlogy
+
+from odograph.encoding.design import SessionDesign
+from odograph.encoding.fit import Fit, fit_model
+from odograph.encoding.layout import Workspace
+from odograph.encoding.spikes import UnitSpikes
+
+
+@dataclass(frozen=True)
+class Score:
+    """Held-out scores of one model for one unit.
+
+    Attributes
+    ----------
+    model : tuple of str
+    fold_gain : ndarray, (n_folds,)
+        Held-out log-likelihood minus that of the constant rate, nats.
+    n_spikes : int
+        Held-out spikes, all folds together.
+    bits_per_spike, bits_per_spike_se : float
+        Pooled gain, and its standard error from the spread of the folds.
+    deviance_explained : float
+        1 - D(model) / D(constant rate) on held-out bins.
+    converged : bool
+        Every fold's fit converged.
+    fit : Fit
+        The fit to all data.
+    """
+
+    model: tuple[str, ...]
+    fold_gain: np.ndarray
+    n_spikes: int
+    bits_per_spike: float
+    bits_per_spike_se: float
+    deviance_explained: float
+    converged: bool
+    fit: Fit
+
+
+@dataclass(frozen=True)
+class FoldSpikes:
+    """A unit's spikes per cell of every term and per fold: trained on, and held out."""
+
+    training: list[dict[str, np.ndarray]]
+    held_out: list[dict[str, np.ndarray]]
+    n_training: np.ndarray
+    n_held_out: np.ndarray
+    training_s: np.ndarray
+    held_out_s: np.ndarray
+
+
+def fold_spikes(design: SessionDesign, unit: UnitSpikes) -> FoldSpikes:
+    """Tabulate a unit's spikes for every fold of its session."""
+    folds = design.folds
+    terms = [*design.terms, *([design.drift] if design.drift else [])]
+    group = folds.group[unit.bins]
+    seconds = np.bincount(folds.group, minlength=folds.n_groups) * design.bin_s
+    training, held_out = [], []
+    uses, tests = [], []
+    for fold in range(folds.n_folds):
+        use, test = folds.training(fold), folds.held_out(fold)
+        training.append({term.name: unit.per_cell(term, use[group]) for term in terms})
+        held_out.append({term.name: unit.per_cell(term, test[group]) for term in terms})
+        uses.append(use)
+        tests.append(test)
+    use, test = np.array(uses), np.array(tests)
+    return FoldSpikes(
+        training,
+        held_out,
+        use[:, group].sum(axis=1),
+        test[:, group].sum(axis=1),
+        use @ seconds,
+        test @ seconds,
+    )
+
+
+def fit_whole(space: Workspace, design: SessionDesign, unit: UnitSpikes) -> Fit:
+    """Fit a model to all valid time."""
+    cells = [unit.per_cell(term) for term in space.terms]
+    spikes = _project(space, cells, unit.n_spikes)
+    return fit_model(space, spikes, np.ones(design.folds.n_groups))
+
+
+def evaluate(space: Workspace, model: tuple[str, ...], design, unit: UnitSpikes, tables: FoldSpikes) -> Score:
+    """Fit a model to all time and to every training part, and score it on what each left out.
+
+    Raises
+    ------
+    FloatingPointError
+        A fit has no finite solution.
+    """
+    whole = fit_whole(space, design, unit)
+    folds, names = design.folds, [term.name for term in space.terms]
+    gain, converged = np.zeros(folds.n_folds), whole.converged
+    for fold in range(folds.n_folds):
+        trained = [tables.training[fold][name] for name in names]
+        spikes = _project(space, trained, tables.n_training[fold])
+        fit = fit_model(space, spikes, folds.training(fold).astype(float), whole)
+        converged = converged and fit.converged
+        seen = [tables.held_out[fold][name] for name in names]
+        seen_sums = _project(space, seen, tables.n_held_out[fold])
+        expected = space.expected(fit.coefficients, folds.held_out(fold).astype(float))
+        gain[fold] = seen_sums @ fit.coefficients - expected - _constant_rate(tables, fold)
+    return _score(model, gain, unit, tables, whole, converged)
+
+
+def _project(space: Workspace, cells: list[np.ndarray], n_spikes: float) -> np.ndarray:
+    return space.project(np.concatenate(cells) if cells else np.empty(0), float(n_spikes))
+
+
+def _constant_rate(tables: FoldSpikes, fold: int) -> float:
+    """Held-out log-likelihood of the training part's mean rate, nats."""
+    rate = tables.n_training[fold] / tables.training_s[fold]
+    return float(xlogy(tables.n_held_out[fold], rate) - rate * tables.held_out_s[fold])
+
+
+def _score(model, gain, unit, tables, whole, converged) -> Score:
+    n = int(tables.n_held_out.sum())
+    to_bits = 1 / (max(n, 1) * np.log(2))
+    # The saturated model's rate in a bin is its count over the bin's width.
+    width = tables.held_out_s.sum() / len(unit.counts)
+    saturated = float(np.sum(xlogy(unit.counts, unit.counts / width) - unit.counts))
+    constant = sum(_constant_rate(tables, fold) for fold in range(len(gain)))
+    return Score(
+        model=model,
+        fold_gain=gain,
+        n_spikes=n,
+        bits_per_spike=float(gain.sum() * to_bits),
+        bits_per_spike_se=float(np.sqrt(len(gain)) * gain.std(ddof=1) * to_bits),
+        deviance_explained=float(gain.sum() / (saturated - constant)),
+        converged=converged,
+        fit=whole,
+    )

@@ -1,0 +1,226 @@
+"""A model laid out in flat arrays, and the passes over its rows in the coordinates of its penalties."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from odograph.encoding import kernels
+from odograph.encoding.bases import Coordinates
+from odograph.encoding.design import RowTable, Term
+
+
+@dataclass(frozen=True)
+class Layout:
+    """Where each term's cells, splines and coordinates lie; the intercept is spline 0 and coordinate 0.
+
+    Attributes
+    ----------
+    cell_start, cell_end : ndarray, (n_terms,)
+        Each term's cells in arrays over all cells.
+    spline_start, spline_count, support : ndarray, (n_terms,)
+    columns, weights : ndarray, (all cells, largest support)
+        The sparse bases, columns counted within the term.
+    slices : tuple of slice
+        Each term's coordinates in the coefficient vector.
+    spectra : ndarray, (n_penalties, n_coordinates)
+        All penalties as diagonals over the whole coefficient vector.
+    owner : ndarray, (n_penalties,)
+        The term of each penalty.
+    """
+
+    table: RowTable
+    cell_start: np.ndarray
+    cell_end: np.ndarray
+    spline_start: np.ndarray
+    spline_count: np.ndarray
+    support: np.ndarray
+    columns: np.ndarray
+    weights: np.ndarray
+    slices: tuple[slice, ...]
+    spectra: np.ndarray
+    owner: np.ndarray
+
+    @property
+    def n_coordinates(self) -> int:
+        return self.spectra.shape[1]
+
+    @property
+    def n_splines(self) -> int:
+        return int(1 + self.spline_count.sum())
+
+    def index_of(self, name: str) -> int:
+        """Place of a term in the table by its name."""
+        return [term.name for term in self.table.terms].index(name)
+
+
+def make_layout(table: RowTable) -> Layout:
+    """Lay a model's terms out in flat arrays for the compiled passes."""
+    terms = table.terms
+    n_cells = np.array([term.n_cells for term in terms], dtype=np.int64)
+    counts = np.array([term.basis.size for term in terms], dtype=np.int64)
+    support = np.array([term.basis.columns.shape[1] for term in terms], dtype=np.int64)
+    end = np.cumsum(n_cells)
+    start = end - n_cells
+    columns = np.zeros((n_cells.sum(), support.max(initial=1)), dtype=np.int32)
+    weights = np.zeros(columns.shape)
+    slices, first = [], 1
+    for t, term in enumerate(terms):
+        columns[start[t] : end[t], : support[t]] = term.basis.columns
+        weights[start[t] : end[t], : support[t]] = term.basis.weights
+        slices.append(slice(first, first + term.coordinates.size))
+        first += term.coordinates.size
+    owner = [t for t, term in enumerate(terms) for _ in term.coordinates.spectra]
+    spectra = np.zeros((len(owner), first))
+    for row, spectrum in enumerate(s for term in terms for s in term.coordinates.spectra):
+        spectra[row, slices[owner[row]]] = spectrum
+    return Layout(
+        table,
+        start,
+        end,
+        1 + np.cumsum(counts) - counts,
+        counts,
+        support,
+        columns,
+        weights,
+        tuple(slices),
+        spectra,
+        np.array(owner, dtype=np.int64),
+    )
+
+
+def to_coordinates(coordinates: Coordinates, array: np.ndarray) -> np.ndarray:
+    """Apply a term's transposed transform to the first axis: (n_splines, ...) -> (n_coordinates, ...)."""
+    tail = array.shape[1:]
+    if len(coordinates.factors) == 1:
+        out = coordinates.factors[0].T @ array.reshape(len(array), -1)
+    else:
+        first, second = coordinates.factors
+        out = first.T @ array.reshape(len(first), -1)
+        out = second.T @ out.reshape(len(first), len(second), -1)
+    out = out.reshape(-1, *tail)
+    return out[1:] if coordinates.drops_constant else out
+
+
+def from_coordinates(coordinates: Coordinates, values: np.ndarray) -> np.ndarray:
+    """Spline coefficients of a term, (n_splines,), from its coordinates."""
+    if coordinates.drops_constant:
+        values = np.concatenate([[0.0], values])
+    if len(coordinates.factors) == 1:
+        return coordinates.factors[0] @ values
+    first, second = coordinates.factors
+    return (first @ values.reshape(len(first), len(second)) @ second.T).ravel()
+
+
+class Workspace:
+    """The buffers of one model, reused over units and folds; not to be shared between threads."""
+
+    def __init__(self, layout: Layout) -> None:
+        self.layout = layout
+        self.terms: tuple[Term, ...] = layout.table.terms
+        n_cells, n = len(layout.columns), layout.n_splines
+        self.mu = np.empty(len(layout.table.seconds))
+        self.eta = np.zeros(n_cells)
+        self._sums = np.empty(n_cells)
+        self._splines = np.zeros(n)
+        self._information = np.empty((n, n))
+
+    def expected(self, coefficients: np.ndarray, use: np.ndarray) -> float:
+        """Fill `mu` (expected count per row) and `eta` (per cell); returns the expected number of spikes.
+
+        Parameters
+        ----------
+        coefficients : ndarray, (n_coordinates,)
+        use : ndarray, (n_groups,)
+            1.0 for groups that count, 0.0 for others.
+        """
+        lay, table = self.layout, self.layout.table
+        if not self.terms:
+            np.multiply(table.seconds, use[table.group], out=self.mu)
+            self.mu *= np.exp(coefficients[0])
+            return float(self.mu.sum())
+        for t, term in enumerate(self.terms):
+            first = lay.spline_start[t]
+            self._splines[first : first + lay.spline_count[t]] = from_coordinates(
+                term.coordinates, coefficients[lay.slices[t]]
+            )
+        kernels.cell_values(
+            self._splines,
+            lay.cell_start,
+            lay.cell_end,
+            lay.columns,
+            lay.weights,
+            lay.support,
+            lay.spline_start,
+            self.eta,
+        )
+        factor = np.exp(self.eta)
+        factor[: lay.cell_end[0]] *= np.exp(coefficients[0])
+        return kernels.expected_counts(
+            table.cells, table.seconds, table.group, use, factor, lay.cell_start, self.mu
+        )
+
+    def derivatives(self, total: float) -> tuple[np.ndarray, np.ndarray]:
+        """X'mu, (n_coordinates,), and X'WX, (n_coordinates, n_coordinates), at the last `expected` call."""
+        lay, n = self.layout, self.layout.n_coordinates
+        if not self.terms:
+            return np.array([total]), np.array([[total]])
+        kernels.cell_sums(lay.table.cells, self.mu, lay.cell_start, self._sums)
+        gradient = self.project(self._sums, total)
+        kernels.information(
+            lay.table.cells,
+            self.mu,
+            total,
+            self._sums,
+            lay.cell_start,
+            lay.cell_end,
+            lay.columns,
+            lay.weights,
+            lay.support,
+            lay.spline_start,
+            lay.spline_count,
+            self._information,
+        )
+        half = np.empty((n, lay.n_splines))
+        self._reduce(self._information, half)
+        whole = np.empty((n, n))
+        self._reduce(np.ascontiguousarray(half.T), whole)
+        return gradient, whole
+
+    def _reduce(self, array: np.ndarray, out: np.ndarray) -> None:
+        out[0] = array[0]
+        for t, term in enumerate(self.terms):
+            first = self.layout.spline_start[t]
+            rows = array[first : first + self.layout.spline_count[t]]
+            out[self.layout.slices[t]] = to_coordinates(term.coordinates, rows)
+
+    def project(self, cell_totals: np.ndarray, total: float) -> np.ndarray:
+        """X'v, (n_coordinates,), of a quantity given by its sums over each term's cells, laid end to end."""
+        lay, out = self.layout, np.empty(self.layout.n_coordinates)
+        out[0] = total
+        if self.terms:
+            splines = np.empty(lay.n_splines)
+            kernels.column_sums(
+                cell_totals,
+                lay.cell_start,
+                lay.cell_end,
+                lay.columns,
+                lay.weights,
+                lay.support,
+                lay.spline_start,
+                splines,
+            )
+            for t, term in enumerate(self.terms):
+                first = lay.spline_start[t]
+                out[lay.slices[t]] = to_coordinates(
+                    term.coordinates, splines[first : first + lay.spline_count[t]]
+                )
+        return out
+
+
+def cell_basis(term: Term) -> np.ndarray:
+    """A term's basis at its cells, less its mean over occupancy, (n_cells, n_coordinates)."""
+    dense = term.basis.dense() @ term.coordinates.matrix()
+    occupancy = np.bincount(term.cell, minlength=term.n_cells)
+    return dense - (occupancy / occupancy.sum()) @ dense

@@ -1,0 +1,212 @@
+"""Smoothing strengths by restricted maximum likelihood of the working least-squares problem.
+
+With information H and working right-hand side w fixed, the restricted likelihood of the log strengths rho is,
+up to a constant (Wood 2011, J. R. Stat. Soc. B 73:3; Wood & Fasiolo 2017, Biometrics 73:1071),
+
+    -V(rho) = w' A^-1 w / 2 - log|A| / 2 + log|S_lam|_+ / 2,      A = H + S_lam,
+
+whose stationary point is the fixed point of the generalized Fellner-Schall update. Because all penalties are
+diagonal (`odograph.encoding.bases`), its gradient and Hessian cost no more than the inverse of A, so Newton's
+method takes the place of the slowly converging update, which is kept as the fallback.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import cached_property
+
+import numpy as np
+from scipy.linalg import lapack
+
+from odograph.encoding.design import Term
+
+LARGEST_LOG_STRENGTH = 20.0
+SMALLEST_LOG_STRENGTH = -12.0
+LARGEST_MOVE = 4.0
+INNER_ROUNDS = 4
+
+
+@dataclass(frozen=True)
+class Quadratic:
+    """The working problem: maximise w'b - b'(H + S_lam) b / 2.
+
+    Attributes
+    ----------
+    information : ndarray, (n, n)
+        H = X'WX.
+    target : ndarray, (n,)
+        w = X'(y - mu) + H b at the rates around which the problem was made.
+    terms : tuple of Term
+    spectra : ndarray, (n_penalties, n)
+    """
+
+    information: np.ndarray
+    target: np.ndarray
+    terms: tuple[Term, ...]
+    spectra: np.ndarray
+
+
+@dataclass(frozen=True)
+class State:
+    """The working problem solved at some strengths; `settled` when no strength wants to move further."""
+
+    coefficients: np.ndarray
+    covariance: np.ndarray
+    log_strengths: np.ndarray
+    settled: bool
+
+
+def neutral_strengths(information: np.ndarray, spectra: np.ndarray) -> np.ndarray:
+    """Log strengths at which each penalty weighs about as much as the data in its coordinates."""
+    diagonal = np.diag(information)
+    weight = [max(diagonal[s > 0].sum(), 1e-6) / s.sum() for s in spectra]
+    return np.clip(np.log(np.array(weight)), SMALLEST_LOG_STRENGTH, LARGEST_LOG_STRENGTH)
+
+
+def factorise(matrix: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Lower Cholesky factor and inverse of a symmetric positive definite matrix.
+
+    A coordinate that no data inform and no penalty holds is held by a relative ridge of 1e-12, or as much
+    more as the factorisation needs.
+
+    Raises
+    ------
+    FloatingPointError
+        The matrix is not positive definite even with a thousandth of its mean diagonal added.
+    """
+    scale = np.trace(matrix) / len(matrix)
+    for ridge in (1e-12, 1e-9, 1e-6, 1e-3):
+        lifted = matrix.copy()
+        lifted.flat[:: len(matrix) + 1] += ridge * scale
+        lower, status = lapack.dpotrf(lifted, lower=1, clean=1)
+        if status == 0:
+            inverse, status = lapack.dpotri(lower, lower=1)
+        if status == 0:
+            inverse = np.tril(inverse) + np.tril(inverse, -1).T
+            return lower, inverse
+    raise FloatingPointError("the penalised information matrix is not positive definite")
+
+
+class _Solved:
+    """The working problem at given log strengths, with what Newton's method on them needs."""
+
+    def __init__(self, problem: Quadratic, rho: np.ndarray) -> None:
+        self.problem, self.rho, self.strengths = problem, rho, np.exp(rho)
+        penalised = problem.information.copy()
+        if len(rho):
+            penalised.flat[:: len(penalised) + 1] += self.strengths @ problem.spectra
+        lower, self.covariance = factorise(penalised)
+        self.coefficients = self.covariance @ problem.target
+        self._half_log_determinant = float(np.log(np.diag(lower)).sum())
+
+    def _by_term(self):
+        i = 0
+        for term in self.problem.terms:
+            count = len(term.coordinates.spectra)
+            yield term, slice(i, i + count)
+            i += count
+
+    @property
+    def value(self) -> float:
+        """V(rho): the negative restricted log-likelihood, to be minimised."""
+        prior = sum(term.coordinates.log_determinant(self.strengths[s]) for term, s in self._by_term())
+        return float(-(self.problem.target @ self.coefficients) / 2 + self._half_log_determinant - prior / 2)
+
+    @cached_property
+    def weighted(self) -> np.ndarray:
+        """strength_j times the diagonal of S_j, (n_penalties, n)."""
+        return self.strengths[:, None] * self.problem.spectra
+
+    @cached_property
+    def parts(self) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+        """strength_j times b'S_j b, tr(S_lam^- S_j) and tr(A^-1 S_j)."""
+        rough = self.weighted @ self.coefficients**2
+        ratio = np.concatenate([t.coordinates.trace_ratio(self.strengths[s]) for t, s in self._by_term()])
+        return rough, ratio, self.weighted @ np.diag(self.covariance)
+
+    @property
+    def gradient(self) -> np.ndarray:
+        rough, ratio, trace = self.parts
+        return (rough - ratio + trace) / 2
+
+    def hessian(self) -> np.ndarray:
+        rough, ratio, trace = self.parts
+        pull = self.weighted * self.coefficients
+        out = -(pull @ self.covariance @ pull.T) - self.weighted @ self.covariance**2 @ self.weighted.T / 2
+        for _, s in self._by_term():
+            total = self.weighted[s].sum(axis=0)
+            share = np.divide(self.weighted[s], total, out=np.zeros_like(self.weighted[s]), where=total > 0)
+            out[s, s] += share @ share.T / 2
+        out[np.diag_indices_from(out)] += (rough - ratio + trace) / 2
+        return out
+
+    def fellner_schall(self) -> np.ndarray:
+        """The generalized Fellner-Schall update of the log strengths."""
+        rough, ratio, trace = self.parts
+        change = np.log(np.maximum(ratio - trace, 1e-12) / np.maximum(rough, 1e-12))
+        return _bounded(self.rho + np.clip(change, -LARGEST_MOVE, LARGEST_MOVE))
+
+
+def _bounded(rho: np.ndarray) -> np.ndarray:
+    return np.clip(rho, SMALLEST_LOG_STRENGTH, LARGEST_LOG_STRENGTH)
+
+
+def tune(problem: Quadratic, rho: np.ndarray, *, choose: bool, tolerance: float) -> State:
+    """Move the log strengths towards the working problem's restricted-likelihood maximum and solve there.
+
+    Parameters
+    ----------
+    problem : Quadratic
+    rho : ndarray, (n_penalties,)
+        Where to start.
+    choose : bool
+        False: solve at `rho`.
+    tolerance : float
+        Settled when the predicted gain of the next move is below this (nats) before the first move.
+    """
+    here = _Solved(problem, rho)
+    if not choose or not len(rho):
+        return State(here.coefficients, here.covariance, rho, True)
+    settled = False
+    for turn in range(INNER_ROUNDS):
+        move, gain = _move(here)
+        if gain < tolerance:
+            settled = turn == 0
+            break
+        there = _descend(here, move)
+        if there is None:
+            settled = turn == 0
+            break
+        here = there
+    return State(here.coefficients, here.covariance, here.rho, settled)
+
+
+def _move(here: _Solved) -> tuple[np.ndarray, float]:
+    """Newton's move of the log strengths, and the gain it predicts; flat directions move little."""
+    gradient = here.gradient
+    free = ~(
+        ((here.rho >= LARGEST_LOG_STRENGTH) & (gradient < 0))
+        | ((here.rho <= SMALLEST_LOG_STRENGTH) & (gradient > 0))
+    )
+    if not free.any():
+        return np.zeros_like(gradient), 0.0
+    values, vectors = np.linalg.eigh(here.hessian()[np.ix_(free, free)])
+    slope = vectors.T @ gradient[free]
+    # Where the curvature is not positive the direction still descends, with a length the slope sets.
+    curvature = np.maximum(np.abs(values), np.maximum(np.abs(slope) / LARGEST_MOVE, 1e-7))
+    move = np.zeros_like(gradient)
+    move[free] = -(vectors @ (slope / curvature))
+    move = _bounded(here.rho + move) - here.rho
+    return move, float(-(gradient @ move) / 2)
+
+
+def _descend(here: _Solved, move: np.ndarray) -> _Solved | None:
+    """Solve at the moved strengths, shortening the move until V falls; else by the classical update."""
+    value = here.value
+    for _ in range(4):
+        there = _Solved(here.problem, here.rho + move)
+        if there.value <= value + 1e-9 * (1 + abs(value)):
+            return there
+        move = move / 3
+    there = _Solved(here.problem, here.fellner_schall())
+    return there if there.value < value else None

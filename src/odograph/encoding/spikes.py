@@ -1,0 +1,54 @@
+"""One unit's spikes on a session's grid."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from odograph.encoding.design import SessionDesign, Term
+
+
+@dataclass(frozen=True)
+class UnitSpikes:
+    """The spikes of one unit that fall in valid bins.
+
+    Attributes
+    ----------
+    bins : ndarray of int64, (n_spikes,)
+        Index among the valid bins, ascending.
+    all_bins : ndarray of int64, (n_spikes,)
+        Index among all analysis bins.
+    counts : ndarray, (n_bins,)
+        Spikes per valid bin.
+    """
+
+    bins: np.ndarray
+    all_bins: np.ndarray
+    counts: np.ndarray
+
+    @property
+    def n_spikes(self) -> int:
+        return len(self.bins)
+
+    def per_cell(self, term: Term, spike_mask: np.ndarray | None = None) -> np.ndarray:
+        """Spikes in each cell of a term, (n_cells,); `spike_mask` (n_spikes,) picks some of them."""
+        bins = self.bins if spike_mask is None else self.bins[spike_mask]
+        return np.bincount(term.cell[bins], minlength=term.n_cells).astype(float)
+
+
+def bin_spikes(design: SessionDesign, spike_times_s: np.ndarray) -> UnitSpikes:
+    """Count spikes in the session's valid analysis bins.
+
+    Parameters
+    ----------
+    design : SessionDesign
+    spike_times_s : ndarray, (n,)
+        Recording clock.
+    """
+    index = np.searchsorted(design.edges_s, np.sort(spike_times_s), side="right") - 1
+    index = index[(index >= 0) & (index < len(design.valid))]
+    index = index[design.valid[index]]
+    rank = np.cumsum(design.valid) - 1
+    bins = rank[index]
+    return UnitSpikes(bins, index, np.bincount(bins, minlength=design.n_bins).astype(float))
