@@ -52,7 +52,7 @@ def read_arena(opened: OpenRecording, settings: IntakeSettings) -> Arena | None:
         corners, place = np.asarray(settings.arena_corners_m, dtype=np.float64), "intake.arena_corners_m"
     else:
         candidates = arena_candidates(opened)
-        chosen = choose(opened, "an arena", "arena_place", settings.arena_place, candidates, required=False)
+        chosen = choose(opened, "arena", "arena_place", settings.arena_place, candidates, required=False)
         if chosen is None:
             return None
         if chosen not in candidates:

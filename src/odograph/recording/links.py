@@ -22,8 +22,16 @@ class MissingLink:
         return f"{self.place} -> {target}"
 
 
-def missing_links(path: Path) -> list[MissingLink]:
-    """All soft and external links of an HDF5 file, and of files it links to, that lead nowhere.
+@dataclass(frozen=True)
+class Links:
+    """The links of a file: those that lead nowhere, and the other files that those which hold lead into."""
+
+    missing: tuple[MissingLink, ...]
+    files: tuple[Path, ...]
+
+
+def follow_links(path: Path) -> Links:
+    """Follow all soft and external links of an HDF5 file, and those in the files it links to.
 
     Only names and links are looked at, no data.
 
@@ -34,29 +42,39 @@ def missing_links(path: Path) -> list[MissingLink]:
 
     Returns
     -------
-    list of MissingLink
-        Sorted by place; empty when every link resolves.
+    Links
+        Missing links sorted by place, other files sorted by path.
     """
-    found: list[MissingLink] = []
+    missing: list[MissingLink] = []
+    files: set[Path] = set()
     with h5py.File(path, "r") as file:
-        _walk(file, "", found, {_address(file)})
-    return sorted(found, key=lambda link: link.place)
+        _walk(file, "", missing, files, {_address(file)})
+    files.discard(path)
+    return Links(tuple(sorted(missing, key=lambda link: link.place)), tuple(sorted(files)))
 
 
-def _walk(group: h5py.Group, above: str, found: list[MissingLink], seen: set[tuple[int, int]]) -> None:
+def _walk(
+    group: h5py.Group,
+    above: str,
+    missing: list[MissingLink],
+    files: set[Path],
+    seen: set[tuple[int, int]],
+) -> None:
     for name in group:
         place = f"{above}/{name}" if above else name
         link = group.get(name, getlink=True)
         target = _resolve(group, name)
         if target is None:
             target_file = link.filename if isinstance(link, h5py.ExternalLink) else None
-            found.append(MissingLink(place, target_file, getattr(link, "path", name)))
+            missing.append(MissingLink(place, target_file, getattr(link, "path", name)))
             continue
+        if isinstance(link, h5py.ExternalLink):
+            files.add(Path(target.file.filename))
         if isinstance(target, h5py.Group):
             address = _address(target)
             if address not in seen:
                 seen.add(address)
-                _walk(target, place, found, seen)
+                _walk(target, place, missing, files, seen)
 
 
 def _resolve(group: h5py.Group, name: str) -> h5py.HLObject | None:

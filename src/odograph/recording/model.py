@@ -15,7 +15,10 @@ Finding = dict[str, str | None]
 
 @dataclass(frozen=True)
 class FileFacts:
-    """What the file says of itself; `session_start_time` is its own text (ISO 8601)."""
+    """What the file says of itself; `session_start_time` is its own text (ISO 8601).
+
+    `linked_files` are the other files that its links lead into.
+    """
 
     path: Path
     nwb_version: str
@@ -23,6 +26,7 @@ class FileFacts:
     session_id: str | None
     session_start_time: str | None
     description: str | None
+    linked_files: tuple[Path, ...] = ()
 
     @property
     def name(self) -> str:

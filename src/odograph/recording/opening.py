@@ -6,7 +6,7 @@ import re
 import warnings
 from collections.abc import Iterator
 from contextlib import contextmanager
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
 
@@ -14,7 +14,7 @@ import h5py
 import numpy as np
 
 from odograph.errors import InputError, OdographError
-from odograph.recording.links import missing_links, resolve_place
+from odograph.recording.links import Links, follow_links, resolve_place
 from odograph.recording.model import FileFacts, Finding, finding
 from odograph.settings.intake import IntakeSettings
 
@@ -93,16 +93,17 @@ def open_recording(path: str | Path, settings: IntakeSettings) -> Iterator[OpenR
     """
     path = Path(path)
     facts = _file_facts(path)
-    lost = _check_links(path, settings)
+    links = _check_links(path, settings)
+    facts = replace(facts, linked_files=links.files)
     pynwb = _import_pynwb()
     with warnings.catch_warnings():
         warnings.simplefilter("ignore")
         io, nwbfile = _read(pynwb, path)
         try:
             opened = OpenRecording(
-                path, nwbfile, facts, _places(io, nwbfile), tuple(link.place for link in lost)
+                path, nwbfile, facts, _places(io, nwbfile), tuple(link.place for link in links.missing)
             )
-            for link in lost:
+            for link in links.missing:
                 opened.note(
                     "warn",
                     f"the link leads nowhere: {link.describe()}",
@@ -213,9 +214,9 @@ def _open_error(path: Path, error: OSError) -> InputError:
     return InputError(found, file=str(path), expected="an NWB file that is whole", remedy=remedy)
 
 
-def _check_links(path: Path, settings: IntakeSettings) -> list[Any]:
+def _check_links(path: Path, settings: IntakeSettings) -> Links:
     try:
-        lost = missing_links(path)
+        links = follow_links(path)
     except (OSError, RuntimeError) as error:
         raise InputError(
             f"the file's structure cannot be walked ({_first_line(error)})",
@@ -223,6 +224,7 @@ def _check_links(path: Path, settings: IntakeSettings) -> list[Any]:
             expected="an NWB file that is whole",
             remedy="copy it anew from its source",
         ) from error
+    lost = links.missing
     if lost and settings.missing_links == "refuse":
         raise InputError(
             f"{len(lost)} link(s) lead nowhere: " + "; ".join(link.describe() for link in lost[:8]),
@@ -231,7 +233,7 @@ def _check_links(path: Path, settings: IntakeSettings) -> list[Any]:
             expected="every linked file at the place the link names",
             remedy="put the linked files back, or set intake.missing_links to warn if they are not needed",
         )
-    return lost
+    return links
 
 
 def _read(pynwb: Any, path: Path) -> tuple[Any, Any]:

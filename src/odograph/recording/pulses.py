@@ -41,6 +41,15 @@ def _has_event_times(thing: Any) -> bool:
     return not is_series(thing) and not hasattr(thing, "colnames") and hasattr(thing, "timestamps")
 
 
+def event_count(thing: Any) -> int | None:
+    """How many events an object holds; None for a sampled line, which has to be read to know."""
+    if getattr(thing, "colnames", None):
+        name = next((known for known in TIME_COLUMNS if known in thing.colnames), None)
+        return None if name is None else len(getattr(thing[name], "target", thing[name]).data)
+    stamps = getattr(thing, "timestamps", None)
+    return int(np.shape(stamps)[0]) if stamps is not None and np.ndim(stamps) == 1 else None
+
+
 def read_pulses(opened: OpenRecording, settings: IntakeSettings) -> Pulses | None:
     """Times of the frame pulses on the recording clock.
 

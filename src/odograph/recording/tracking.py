@@ -91,7 +91,7 @@ def _point_places(opened: OpenRecording, settings: IntakeSettings) -> list[str]:
     holder = None
     if settings.position_place is not None:
         holder = choose(
-            opened, "a position", "position_place", settings.position_place, candidates, required=True
+            opened, "position", "position_place", settings.position_place, candidates, required=True
         )
         inside = {place: thing for place, thing in candidates.items() if place.startswith(f"{holder}/")}
         candidates = inside or {holder: opened.places[holder]}
@@ -109,7 +109,7 @@ def _point_places(opened: OpenRecording, settings: IntakeSettings) -> list[str]:
                 remedy="set intake.front_point and, for the head direction from two points, "
                 "intake.back_point; or intake.position_place for one point alone",
             )
-        place = choose(opened, "a position", "position_place", None, candidates, required=True)
+        place = choose(opened, "position", "position_place", None, candidates, required=True)
         return [place] if place else []
     return [_named_point(opened, key, name, candidates) for key, name in named]
 
@@ -121,8 +121,8 @@ def _named_point(opened: OpenRecording, key: str, name: str, candidates: dict[st
     if len(matches) == 1:
         return matches[0]
     if not candidates:
-        choose(opened, "a position", "position_place", None, candidates, required=True)
-    place = choose(opened, "a tracked point", key, name, candidates, required=True)
+        choose(opened, "position", "position_place", None, candidates, required=True)
+    place = choose(opened, "tracked point", key, name, candidates, required=True)
     assert place is not None
     return place
 
@@ -237,7 +237,7 @@ def read_direction(opened: OpenRecording, settings: IntakeSettings) -> Direction
     """
     place = choose(
         opened,
-        "a measured head direction",
+        "measured head direction",
         "direction_place",
         settings.direction_place,
         direction_candidates(opened),

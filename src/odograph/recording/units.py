@@ -58,7 +58,7 @@ def read_units(
         )
     table = tables[place]
     rows = _rows(opened, table, place, wanted)
-    columns = _scalar_columns(opened, table, place)
+    columns = scalar_columns(opened, table, place)
     regions = _regions(opened, table, place, settings, columns)
     spikes = _ragged(opened, table, place, "spike_times", list(rows.values()))
     observed = _ragged(opened, table, place, "obs_intervals", list(rows.values()))
@@ -260,7 +260,7 @@ def _observed(opened: OpenRecording, stored: np.ndarray | None, times: np.ndarra
     return intervals
 
 
-def _scalar_columns(opened: OpenRecording, table: Any, place: str) -> dict[str, list[Scalar]]:
+def scalar_columns(opened: OpenRecording, table: Any, place: str) -> dict[str, list[Scalar]]:
     """Columns with one plain value per unit; waveforms, ragged columns and references are passed by."""
     columns: dict[str, list[Scalar]] = {}
     for name in sorted(table.colnames):
