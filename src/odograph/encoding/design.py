@@ -230,7 +230,7 @@ def prepare_session(behaviour: dict[str, np.ndarray], settings: EncodingSettings
                     remedy="correct the term's columns, or name the covariate under intake.covariates",
                 )
             valid &= np.isfinite(np.asarray(behaviour[column], dtype=float))
-    bin_s = float(np.median(np.diff(time_s)))
+    bin_s = round(float(np.median(np.diff(time_s))), 9)
     return _discretise(behaviour, time_s, valid, bin_s, settings)
 
 
