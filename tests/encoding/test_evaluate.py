@@ -137,5 +137,7 @@ def test_selection_does_not_depend_on_the_order_of_the_models():
 def test_paired_differences_ignore_what_is_common_to_the_folds():
     hard = np.array([-50.0, 40, 10, -30])
     one = paired_shortfall(score("ab", [3, 4, 5, 4]), score("a", [2, 4, 4, 4]))
-    other = paired_shortfall(score("ab", hard + [3, 4, 5, 4]), score("a", hard + [2, 4, 4, 4]))
+    other = paired_shortfall(
+        score("ab", hard + np.array([3, 4, 5, 4])), score("a", hard + np.array([2, 4, 4, 4]))
+    )
     assert one == pytest.approx(other)

@@ -1,8 +1,8 @@
 """Smoothing selection against values of mgcv 1.8-41 (R 4.2.2) on the coal-mining disaster series.
 
 Data: yearly numbers of coal-mining disasters 1851-1962 (Jarrett 1979, Biometrika 66:191; data set `coal` of
-the R package boot). Model: 20 cubic B-splines on uniform knots with second-difference penalty, log link. mgcv's
-`bam(method="fREML")` has the fixed point of the generalized Fellner-Schall update; its strengths divide by 16
+the R package boot). Model: 20 cubic B-splines on uniform knots with second-difference penalty, log link.
+mgcv's `bam(method="fREML")` has the fixed point of the generalized Fellner-Schall update; its strengths divide by 16
 in the scale of plain second differences. `gam(method="REML")` gives the score at its own optimum.
 """
 
