@@ -120,7 +120,14 @@ def gather_scores(score_tables: Iterable[pd.DataFrame]) -> pd.DataFrame:
 
 def variables_of(units: pd.DataFrame) -> list[str]:
     """Variables that the units were tested for: position, head direction, speed, then others by name."""
-    found = {column.removeprefix("encodes_") for column in units.columns if column.startswith("encodes_")}
+    return in_order(
+        column.removeprefix("encodes_") for column in units.columns if column.startswith("encodes_")
+    )
+
+
+def in_order(variables: Iterable[str]) -> list[str]:
+    """The variables in the order of all tables: position, head direction, speed, then others by name."""
+    found = set(variables)
     standard = [variable for variable in STANDARD_VARIABLES if variable in found]
     return [*standard, *sorted(found - set(standard))]
 

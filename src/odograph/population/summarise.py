@@ -10,11 +10,10 @@ import numpy as np
 import pandas as pd
 
 from odograph.population.composition import AT_LEAST_ONE, TWO_OR_MORE
-from odograph.population.gather import UNNAMED_ANIMAL, fitted_units, variables_of
+from odograph.population.gather import UNNAMED_ANIMAL, fitted_units, in_order, variables_of
 from odograph.population.intervals import FEW_ANIMALS, counted
 from odograph.population.speed import SHAPES, compared_variables
 
-N_LINES = 10
 _LINE_LENGTH = 160
 
 
@@ -83,17 +82,15 @@ def summary_lines(summary: Mapping[str, Any]) -> list[str]:
     summary : dict
         Of the function `summary`, also when it was read back from its file.
     """
-    variables = list(summary["variables"].items())
-    further = (
-        [_variable_line(*item) for item in variables[2:3]] if len(variables) == 3 else [_further(variables)]
-    )
+    # Read back from its file the document has its keys in the order of the alphabet.
+    variables = [(name, summary["variables"][name]) for name in in_order(summary["variables"])]
     lines = [
         _sessions_line(summary),
         _left_out_line(summary["sessions"]["left_out"]),
         _units_line(summary["units"]),
-        *(_variable_line(*item) for item in variables[:2]),
+        *(_variable_line(*variable) for variable in variables[:2]),
         *["No second variable was asked about."] * (len(variables) < 2),
-        *further,
+        _further_line(variables[2:]),
         _mixture_line(summary),
         _shapes_line(summary["speed_shapes"]),
         _information_line(summary["information_change"]),
@@ -140,9 +137,12 @@ def _variable_line(variable: str, share: Mapping[str, Any]) -> str:
     return f"{_words(variable).capitalize()}: {_of_units(share)}{_interval(share)}."
 
 
-def _further(variables: list[tuple[str, Mapping[str, Any]]]) -> str:
-    told = [f"{_words(name)} {_of_units(share)}" for name, share in variables[2:]]
-    return f"Further variables: {'; '.join(told)}." if told else "No third variable was asked about."
+def _further_line(variables: list[tuple[str, Mapping[str, Any]]]) -> str:
+    if not variables:
+        return "No third variable was asked about."
+    if len(variables) == 1:
+        return _variable_line(*variables[0])
+    return f"Also {'; '.join(f'{_words(name)} {_of_units(share)}' for name, share in variables)}."
 
 
 def _mixture_line(summary: Mapping[str, Any]) -> str:
@@ -161,7 +161,8 @@ def _shapes_line(shapes: Mapping[str, Mapping[str, Any]]) -> str:
 
 def _information_line(changes: Mapping[str, Mapping[str, Any]]) -> str:
     told = []
-    for variable, change in changes.items():
+    for variable in in_order(changes):
+        change = changes[variable]
         if not change["n"]:
             told.append(f"{_words(variable)} not compared")
             continue
