@@ -2,8 +2,8 @@
 
 Data: yearly numbers of coal-mining disasters 1851-1962 (Jarrett 1979, Biometrika 66:191; data set `coal` of
 the R package boot). Model: 20 cubic B-splines on uniform knots with second-difference penalty, log link.
-mgcv's `bam(method="fREML")` has the fixed point of the generalized Fellner-Schall update; its strengths divide by 16
-in the scale of plain second differences. `gam(method="REML")` gives the score at its own optimum.
+mgcv's `bam(method="fREML")` has the fixed point of the generalized Fellner-Schall update; its strengths
+divide by 16 in the scale of plain second differences. `gam(method="REML")` gives the score at its own optimum.
 """
 
 import numpy as np

@@ -110,7 +110,7 @@ def fit_model(
         gradient, information = space.derivatives(total)
         if rho is None:
             rho = neutral_strengths(information, spectra)
-        quadratic = Quadratic(information, spikes - gradient + information @ beta, space.terms, spectra)
+        quadratic = Quadratic(information, spikes - gradient + information @ beta, spectra)
         state = tune(quadratic, rho, choose=choose, tolerance=tolerance)
         step = state.coefficients - beta
         decrement = float(step @ (information @ step) + _twice_roughness(step, state.log_strengths, spectra))

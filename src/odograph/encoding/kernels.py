@@ -148,3 +148,12 @@ def column_sums(h, cell_start, cell_end, columns, weights, supports, offsets, ou
         for c in range(cell_start[t], cell_end[t]):
             for j in range(supports[t]):
                 out[offsets[t] + columns[c, j]] += h[c] * weights[c, j]
+
+
+@njit(cache=True, nogil=True)
+def mirror(matrix):
+    """Copy the lower triangle of a square matrix onto its upper one."""
+    n = matrix.shape[0]
+    for i in range(n):
+        for j in range(i):
+            matrix[j, i] = matrix[i, j]

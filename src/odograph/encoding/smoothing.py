@@ -18,7 +18,7 @@ from functools import cached_property
 import numpy as np
 from scipy.linalg import lapack
 
-from odograph.encoding.design import Term
+from odograph.encoding import kernels
 
 LARGEST_LOG_STRENGTH = 20.0
 SMALLEST_LOG_STRENGTH = -12.0
@@ -36,13 +36,11 @@ class Quadratic:
         H = X'WX.
     target : ndarray, (n,)
         w = X'(y - mu) + H b at the rates around which the problem was made.
-    terms : tuple of Term
     spectra : ndarray, (n_penalties, n)
     """
 
     information: np.ndarray
     target: np.ndarray
-    terms: tuple[Term, ...]
     spectra: np.ndarray
 
 
@@ -78,11 +76,11 @@ def factorise(matrix: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     for ridge in (1e-12, 1e-9, 1e-6, 1e-3):
         lifted = matrix.copy()
         lifted.flat[:: len(matrix) + 1] += ridge * scale
-        lower, status = lapack.dpotrf(lifted, lower=1, clean=1)
+        lower, status = lapack.dpotrf(lifted.T, lower=1, clean=0, overwrite_a=1)
         if status == 0:
             inverse, status = lapack.dpotri(lower, lower=1)
         if status == 0:
-            inverse = np.tril(inverse) + np.tril(inverse, -1).T
+            kernels.mirror(inverse)
             return lower, inverse
     raise FloatingPointError("the penalised information matrix is not positive definite")
 
@@ -94,22 +92,15 @@ class _Solved:
         self.problem, self.rho, self.strengths = problem, rho, np.exp(rho)
         penalised = problem.information.copy()
         if len(rho):
-            penalised.flat[:: len(penalised) + 1] += self.strengths @ problem.spectra
+            penalised.flat[:: len(penalised) + 1] += self.total
         lower, self.covariance = factorise(penalised)
         self.coefficients = self.covariance @ problem.target
         self._half_log_determinant = float(np.log(np.diag(lower)).sum())
 
-    def _by_term(self):
-        i = 0
-        for term in self.problem.terms:
-            count = len(term.coordinates.spectra)
-            yield term, slice(i, i + count)
-            i += count
-
     @property
     def value(self) -> float:
         """V(rho): the negative restricted log-likelihood, to be minimised."""
-        prior = sum(term.coordinates.log_determinant(self.strengths[s]) for term, s in self._by_term())
+        prior = np.log(self.total[self.total > 0]).sum()
         return float(-(self.problem.target @ self.coefficients) / 2 + self._half_log_determinant - prior / 2)
 
     @cached_property
@@ -118,11 +109,20 @@ class _Solved:
         return self.strengths[:, None] * self.problem.spectra
 
     @cached_property
+    def total(self) -> np.ndarray:
+        """Diagonal of S_lam, (n,)."""
+        return self.strengths @ self.problem.spectra
+
+    @cached_property
+    def share(self) -> np.ndarray:
+        """Each penalty's share of S_lam by coordinate, (n_penalties, n); no coordinate has two terms' penalties."""
+        return np.divide(self.weighted, self.total, out=np.zeros_like(self.weighted), where=self.total > 0)
+
+    @cached_property
     def parts(self) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
         """strength_j times b'S_j b, tr(S_lam^- S_j) and tr(A^-1 S_j)."""
         rough = self.weighted @ self.coefficients**2
-        ratio = np.concatenate([t.coordinates.trace_ratio(self.strengths[s]) for t, s in self._by_term()])
-        return rough, ratio, self.weighted @ np.diag(self.covariance)
+        return rough, self.share.sum(axis=1), self.weighted @ np.diag(self.covariance)
 
     @property
     def gradient(self) -> np.ndarray:
@@ -133,10 +133,7 @@ class _Solved:
         rough, ratio, trace = self.parts
         pull = self.weighted * self.coefficients
         out = -(pull @ self.covariance @ pull.T) - self.weighted @ self.covariance**2 @ self.weighted.T / 2
-        for _, s in self._by_term():
-            total = self.weighted[s].sum(axis=0)
-            share = np.divide(self.weighted[s], total, out=np.zeros_like(self.weighted[s]), where=total > 0)
-            out[s, s] += share @ share.T / 2
+        out += self.share @ self.share.T / 2
         out[np.diag_indices_from(out)] += (rough - ratio + trace) / 2
         return out
 
