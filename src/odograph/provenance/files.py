@@ -143,7 +143,7 @@ def read_columns(path: str | Path, columns: Sequence[str] | None = None) -> dict
 
 
 def write_tsv(path: str | Path, table: Table) -> None:
-    """Write a table as tab-separated text: shortest floats, ``true``/``false``, nothing for missing values."""
+    """Write a table as tab-separated text: shortest floats, `true` and `false`, blank for missing."""
     columns = as_arrow(table).to_pydict()
     lines = ["\t".join(columns)]
     lines += ["\t".join(map(_tsv_cell, row)) for row in zip(*columns.values(), strict=True)]

@@ -33,6 +33,16 @@ def clock(session: str) -> Path:
     return session_folder(session) / "sync" / "clock.json"
 
 
+def residuals(session: str) -> Path:
+    """How far each frame pulse lies from that map."""
+    return session_folder(session) / "sync" / "residuals.parquet"
+
+
+def behaviour(session: str) -> Path:
+    """One session's position, head direction and speed on the analysis bins."""
+    return session_folder(session) / "behaviour" / "behaviour.parquet"
+
+
 def audit(session: str) -> Path:
     """What was dropped from one session's behaviour, and its verdict."""
     return session_folder(session) / "behaviour" / "audit.json"

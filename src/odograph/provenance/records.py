@@ -2,8 +2,8 @@
 
 A record lies beside its products as ``record.json`` or ``NAME.record.json``. Its identifier is a digest of
 everything that decides the result: the rule, its keys, the digests of the inputs and the identifiers of the
-records that made them, the settings, the code and the software. Time, host, the place of the recordings and the
-products stay outside, so the same work has the same identifier anywhere.
+records that made them, the settings, the code and the software. Time, host, the place of the recordings and
+the products stay outside, so the same work has the same identifier anywhere.
 """
 
 from __future__ import annotations
@@ -78,9 +78,9 @@ class RecordDraft:
         """Note a unit's spike train as an input."""
         self._add_input({"kind": "unit", "unit": unit, "digest": digest, "file": file})
 
-    def add_table_input(self, name: str, rows: Any, *, file: str) -> None:
+    def add_table_input(self, name: str, rows: Any) -> None:
         """Note the rows of a user's table as an input."""
-        self._add_input({"kind": "table", "table": name, "digest": digest_value(rows), "file": file})
+        self._add_input({"kind": "table", "table": name, "digest": digest_value(rows)})
 
     def _add_input(self, entry: dict[str, Any]) -> None:
         if self._record_id is not None:

@@ -1,0 +1,26 @@
+from snakemake.utils import min_version
+
+min_version("9.19")
+
+
+configfile: "config/config.yaml"
+
+
+include: "workflow/rules/common.smk"
+
+
+rule all:
+    default_target: True
+    input:
+        "results/report.html",
+        all_cards,
+        all_session_figures,
+
+
+include: "workflow/rules/intake.smk"
+include: "workflow/rules/sync.smk"
+include: "workflow/rules/behaviour.smk"
+include: "workflow/rules/encoding.smk"
+include: "workflow/rules/population.smk"
+include: "workflow/rules/figures.smk"
+include: "workflow/rules/report.smk"

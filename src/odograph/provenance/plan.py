@@ -1,0 +1,330 @@
+"""Planning before the graph: what does each recording hold now, and does that differ from the last time.
+
+When the workflow is parsed, every recording is looked at by its size and time stamps. Only where these moved
+is it read and are its signals and units digested. The digests go to small files under ``results/plan/``, one for
+each job, written only when their content changed. A job depends on its plan file, on the digest of that file
+(as a param of its rule), on the settings that it reads and on the fingerprint of its code: those say everything
+that can change its result, and nothing else does.
+"""
+
+from __future__ import annotations
+
+import json
+import os
+import sys
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import Any
+
+from odograph.errors import InputError
+from odograph.provenance.canonical import canonical_json, digest_text, readable_json
+from odograph.provenance.files import write_if_changed
+from odograph.provenance.fingerprint import code_fingerprint
+from odograph.provenance.layout import PLAN, plan_folder, shard_of
+from odograph.provenance.survey import Request, survey
+from odograph.settings.load import load_settings, read_sessions, resolve_session
+
+STEPS = (
+    "intake",
+    "sync",
+    "behaviour",
+    "encoding",
+    "cards",
+    "session_quality",
+    "population",
+    "population_figures",
+    "report",
+)
+#: The settings that each step reads.
+STAGES_READ = {
+    "intake": ("intake",),
+    "sync": ("sync",),
+    "behaviour": ("behaviour",),
+    "encoding": ("encoding",),
+    "cards": ("figures",),
+    "session_quality": ("figures",),
+    "population": ("population",),
+    "population_figures": ("figures",),
+    "report": ("study", "intake", "sync", "behaviour", "encoding", "population", "figures"),
+}
+_CACHE_FORMAT = 1
+_READER = "odograph.steps.survey_recordings"
+
+
+@dataclass(frozen=True)
+class Plan:
+    """What the rules need to know; made by `make_plan`.
+
+    Parameters
+    ----------
+    sessions : tuple of str
+        All sessions of the table, sorted.
+    unreadable : mapping of str to dict
+        The finding that tells why, for each session whose recording cannot be used.
+    shards : int
+        Jobs that the units of a session are spread over.
+    digests : mapping of str to str
+        Digest of every plan file, by ``session/step``.
+    settings : mapping of str to str
+        Settings of every step as canonical JSON, by ``session/step`` or ``step``.
+    code : mapping of str to str
+        Code fingerprint of every step.
+    """
+
+    sessions: tuple[str, ...]
+    unreadable: Mapping[str, Mapping[str, Any]]
+    shards: int
+    digests: Mapping[str, str]
+    settings: Mapping[str, str]
+    code: Mapping[str, str]
+    figure_formats: tuple[str, ...] = field(default=("png",))
+
+    @property
+    def readable(self) -> tuple[str, ...]:
+        """The sessions whose recording can be used."""
+        return tuple(session for session in self.sessions if session not in self.unreadable)
+
+    def settings_of(self, step: str, session: str | None = None) -> str:
+        """The settings a step reads, as canonical JSON."""
+        return self.settings[f"{session}/{step}" if session is not None else step]
+
+
+def make_plan(
+    config: Mapping[str, Any], *, main_process: bool = True, config_file: str | None = None
+) -> Plan:
+    """Look at every recording and write what changed to ``results/plan/``.
+
+    Parameters
+    ----------
+    config : mapping
+        The configuration, as the workflow engine parsed it.
+    main_process : bool
+        False in a job that parses the workflow again: then nothing is read anew and nothing is written.
+    config_file : str, optional
+        The file that the configuration came from, to name its lines in errors.
+
+    Returns
+    -------
+    Plan
+
+    Raises
+    ------
+    SettingsError
+        When the configuration or the sessions table cannot be used.
+    """
+    settings = load_settings(config, file=config_file)
+    table = settings.study.sessions_table
+    rows = sorted(read_sessions(table), key=lambda row: row.session)
+    own = {
+        row.session: resolve_session(settings, row.overrides, session=row.session, file=table)
+        if any(text.strip() for text in row.overrides.values())
+        else settings
+        for row in rows
+    }
+    cache = _read_cache()
+    code = {step: code_fingerprint(f"odograph.steps.{step}", cache["code"]) for step in STEPS}
+    if main_process:
+        intake = {id(model): canonical_json(model.intake) for model in own.values()}
+        requests = [Request(row.session, row.nwb, intake[id(own[row.session])]) for row in rows]
+        cache = _refresh(requests, cache, settings.study, rows)
+    sessions = cache["sessions"]
+    digests = {
+        f"{session}/{step}": digest
+        for session, entry in sessions.items()
+        for step, digest in entry["digests"].items()
+    } | cache["study"]
+    return Plan(
+        sessions=tuple(row.session for row in rows),
+        unreadable={name: entry["error"] for name, entry in sessions.items() if entry["error"] is not None},
+        shards=settings.study.shards_per_session,
+        digests=digests,
+        settings=_settings_texts(settings, own),
+        code=code,
+        figure_formats=tuple(settings.figures.formats),
+    )
+
+
+def use_this_python() -> None:
+    """Put the folder of the Python that runs this first in PATH, so that jobs call the same one."""
+    folder = str(Path(sys.executable).parent)
+    path = os.environ.get("PATH", "")
+    if path.split(os.pathsep)[0] != folder:
+        os.environ["PATH"] = os.pathsep.join([folder, path])
+
+
+def _settings_texts(settings: Any, own: Mapping[str, Any]) -> dict[str, str]:
+    """The settings of every step; equal models are written out once, since most sessions share them."""
+    written: dict[tuple[int, str], str] = {}
+
+    def text(model: Any, step: str) -> str:
+        if (id(model), step) not in written:
+            read = {stage: getattr(model, stage) for stage in STAGES_READ[step]}
+            if step == "population":
+                read["study"] = {"on_bad_session": model.study.on_bad_session}
+            written[id(model), step] = canonical_json(read)
+        return written[id(model), step]
+
+    texts = {step: text(settings, step) for step in STEPS}
+    for session, model in own.items():
+        for step in ("intake", "sync", "behaviour", "encoding", "cards", "session_quality"):
+            texts[f"{session}/{step}"] = text(model, step)
+    return texts
+
+
+# The cache of what is known
+
+
+def _read_cache() -> dict[str, Any]:
+    try:
+        cache = json.loads((PLAN / "cache.json").read_bytes())
+        if cache["format"] == _CACHE_FORMAT:
+            return cache
+    except (FileNotFoundError, ValueError, KeyError, TypeError):
+        pass
+    return {"format": _CACHE_FORMAT, "code": {}, "sessions": {}, "study": {}}
+
+
+def _refresh(
+    requests: Sequence[Request], cache: dict[str, Any], study: Any, rows: Sequence[Any]
+) -> dict[str, Any]:
+    """Survey the recordings that moved, and write the plan files whose content changed."""
+    reader = code_fingerprint(_READER, cache["code"])
+    shards = study.shards_per_session
+    known = cache["sessions"]
+    keys = {request.session: _key(request, reader, known.get(request.session)) for request in requests}
+    moved = [
+        request
+        for request in requests
+        if (entry := known.get(request.session)) is None
+        or entry["key"] != keys[request.session]
+        or entry["key"] is None
+    ]
+    gone = {request.session: _no_file(request) for request in moved if not Path(request.nwb).is_file()}
+    answers = gone | survey([request for request in moved if request.session not in gone])
+    entries = {}
+    for request in requests:
+        session = request.session
+        if session in answers:
+            answer = answers[session]
+            entry = {"error": answer.get("error"), "links": answer.get("links", []), "shards": None}
+            entry["key"] = _key(request, reader, entry) if answer.get("settled", True) else None
+        else:
+            answer, entry = None, dict(known[session])
+        if answer is not None or entry["shards"] != shards or _some_missing(session, entry):
+            _write_session(session, answer or _planned_intake(session), entry, shards)
+        _write_source(request, study)
+        entries[session] = entry
+    fresh = {
+        "format": _CACHE_FORMAT,
+        "code": cache["code"],
+        "sessions": entries,
+        "study": _write_study(rows, entries, shards),
+    }
+    write_if_changed(PLAN / "cache.json", json.dumps(fresh, sort_keys=True))
+    _tell_unreadable(entries)
+    return fresh
+
+
+def _no_file(request: Request) -> dict[str, Any]:
+    error = InputError(
+        "there is no such file",
+        file=request.nwb,
+        expected="an NWB file",
+        remedy="correct the path in the sessions table; it is relative to the folder the workflow is run in",
+    )
+    return {"error": error.finding() | {"file": request.nwb}, "settled": False}
+
+
+def _key(request: Request, reader: str, entry: Mapping[str, Any] | None) -> list[Any] | None:
+    """What a recording and the files it links to look like from outside: path, size, time stamp, inode."""
+    stamps = []
+    for path in (request.nwb, *(entry["links"] if entry else ())):
+        try:
+            stat = os.stat(path)  # noqa: PTH116 (a plain call: this runs for every session at every start)
+        except OSError:
+            return None
+        stamps.append([path, stat.st_size, stat.st_mtime_ns, stat.st_ino])
+    return [stamps, digest_text(request.settings), reader]
+
+
+def _some_missing(session: str, entry: Mapping[str, Any]) -> bool:
+    folder = str(plan_folder(session))
+    return not all(os.path.exists(f"{folder}/{step}.json") for step in entry["digests"])  # noqa: PTH110
+
+
+def _planned_intake(session: str) -> dict[str, Any]:
+    return json.loads((plan_folder(session) / "intake.json").read_bytes())
+
+
+def _write_session(session: str, answer: Mapping[str, Any], entry: dict[str, Any], shards: int) -> None:
+    """Write one session's plan files: for each job the digests of what it reads from the recording."""
+    signals, units = answer.get("signals", {}), answer.get("units", {})
+    documents: dict[str, Any] = {}
+    if answer.get("error") is not None:
+        documents["intake"] = {"error": answer["error"]}
+    else:
+        documents["intake"] = {"inventory": answer["inventory"], "signals": signals, "units": units}
+        documents["sync"] = {"signals": _chosen(signals, ("tracking", "frame_pulses"))}
+        documents["behaviour"] = {
+            "signals": {name: digest for name, digest in signals.items() if name != "frame_pulses"}
+        }
+        for shard in range(shards):
+            documents[f"shard-{shard}"] = {
+                "units": {
+                    unit: digest
+                    for unit, digest in units.items()
+                    if shard_of(session, int(unit), shards) == shard
+                }
+            }
+    folder = plan_folder(session)
+    entry["digests"] = {}
+    for step, document in documents.items():
+        text = readable_json(document)
+        write_if_changed(folder / f"{step}.json", text)
+        entry["digests"][step] = digest_text(text)
+    entry["shards"] = shards
+
+
+def _chosen(signals: Mapping[str, str], names: Sequence[str]) -> dict[str, str]:
+    return {name: signals[name] for name in names if name in signals}
+
+
+def _write_source(request: Request, study: Any) -> None:
+    """Tell the jobs where the recording lies and how to read it; no rule depends on this file."""
+    source = {
+        "nwb": request.nwb,
+        "intake": json.loads(request.settings),
+        "on_bad_session": study.on_bad_session,
+    }
+    write_if_changed(plan_folder(request.session) / "source.json", readable_json(source))
+
+
+def _write_study(
+    rows: Sequence[Any], entries: Mapping[str, Mapping[str, Any]], shards: int
+) -> dict[str, str]:
+    """Write what the population depends on besides products: who belongs to it."""
+    document = {
+        "sessions": [
+            {
+                "session": row.session,
+                "animal": row.animal,
+                "group": row.group,
+                "settings": row.overrides,
+                "readable": entries[row.session]["error"] is None,
+            }
+            for row in rows
+        ],
+        "shards": shards,
+    }
+    text = readable_json(document)
+    write_if_changed(PLAN / "population.json", text)
+    return {"population": digest_text(text)}
+
+
+def _tell_unreadable(entries: Mapping[str, Mapping[str, Any]]) -> None:
+    bad = {session: entry["error"] for session, entry in entries.items() if entry["error"] is not None}
+    for session, finding in sorted(bad.items())[:5]:
+        print(f"odograph: session {session} cannot be used: {finding['found']}", file=sys.stderr)
+    if len(bad) > 5:
+        print(f"odograph: ... and {len(bad) - 5} more of {len(entries)} sessions", file=sys.stderr)

@@ -1,0 +1,80 @@
+"""Step of rule `report`: the page that shows the whole run."""
+
+from __future__ import annotations
+
+import sys
+from typing import Any
+
+from odograph.provenance import layout
+from odograph.provenance.files import read_arrays, read_json
+from odograph.provenance.records import producer_of, software_versions
+from odograph.provenance.step import Step, run_step
+
+
+def work(step: Step) -> None:
+    """Gather what the page shows and write it."""
+    from odograph.figures.captions import POPULATION_FIGURES
+    from odograph.report.context import PageContext, PageFigure
+    from odograph.report.page import build_page
+    from odograph.settings.all import Settings
+    from odograph.settings.load import settings_table
+
+    members = step.plan["sessions"]
+    step.record.add_table_input("sessions", members)
+    settings = Settings.model_validate(step.settings)
+    units, sessions = step.read_table("units"), step.read_table("sessions")
+    summary = step.read_json("summary")
+    documents = _documents(step, members)
+    miniatures = _miniatures(step, members, settings.figures)
+    figures = []
+    for name in POPULATION_FIGURES:
+        path = step.use(layout.FIGURES / f"{name}.png")
+        place = path.relative_to(layout.RESULTS).as_posix()
+        figures.append(PageFigure(name, path.read_bytes(), producer_of(path), place))
+    context = PageContext(
+        study=settings.study.name,
+        summary_lines=summary["lines"],
+        verdicts=sessions,
+        documents=documents,
+        units=units,
+        miniatures=miniatures,
+        figures=figures,
+        settings=settings_table(settings),
+        session_settings={row["session"]: row["settings"] for row in members if row["settings"]},
+        record_id=step.record_id,
+        software=software_versions(),
+        results_folder=layout.RESULTS.as_posix(),
+    )
+    with step.product(step.output("page")) as temporary:
+        temporary.write_text(build_page(context), encoding="utf-8")
+
+
+def _documents(step: Step, members: list[dict[str, Any]]) -> dict[str, dict[str, Any]]:
+    """The documents of every stage by session, as far as they are there."""
+    readable = [row["session"] for row in members if row["readable"]]
+    return {
+        "intake": {row["session"]: read_json(step.use(layout.inventory(row["session"]))) for row in members},
+        "sync": {session: read_json(step.use(layout.clock(session))) for session in readable},
+        "behaviour": {session: read_json(step.use(layout.audit(session))) for session in readable},
+    }
+
+
+def _miniatures(step: Step, members: list[dict[str, Any]], settings: Any) -> dict[tuple[str, int], Any]:
+    """A small picture of every unit that has curves."""
+    from odograph.figures.miniature import draw_miniature
+
+    drawn = {}
+    for row in members:
+        for shard in range(step.plan["shards"]) if row["readable"] else ():
+            arrays = read_arrays(step.use(layout.shard_folder(row["session"], shard) / "curves.npz"))
+            curves: dict[int, dict[str, Any]] = {}
+            for name, values in arrays.items():
+                unit, _, curve = name.partition("/")
+                curves.setdefault(int(unit), {})[curve] = values
+            for unit, own in curves.items():
+                drawn[row["session"], unit] = draw_miniature(own, settings)
+    return drawn
+
+
+if __name__ == "__main__":
+    sys.exit(run_step("report", work))

@@ -1,0 +1,82 @@
+"""Survey of recordings for the planning: reads requests line by line and answers each with its digests.
+
+Started by `odograph.provenance.survey`; no rule runs it.
+"""
+
+from __future__ import annotations
+
+import json
+import sys
+from collections.abc import Mapping
+from typing import Any
+
+from odograph.errors import OdographError
+from odograph.provenance.canonical import digest_value
+from odograph.recording.digest import signal_digests, unit_digests
+from odograph.recording.inventory import make_inventory
+from odograph.recording.reader import read_recording
+from odograph.settings.intake import IntakeSettings
+
+
+def survey_recording(session: str, nwb: str, settings: IntakeSettings) -> dict[str, Any]:
+    """Digest everything of a recording that any step uses.
+
+    Parameters
+    ----------
+    session : str
+        Name of the session.
+    nwb : str
+        Path of the recording.
+    settings : IntakeSettings
+        How to read it.
+
+    Returns
+    -------
+    dict
+        ``inventory`` (digest), ``signals`` and ``units`` (digests by name), ``links`` (paths of other files
+        that were read); or ``error`` (a finding) and ``settled``, whether reading again would end the same.
+    """
+    try:
+        recording = read_recording(nwb, settings)
+        document = make_inventory(session, recording)
+    except OdographError as error:
+        return {"error": error.finding() | {"file": error.file}, "settled": True}
+    except Exception as error:
+        return {"error": _unforeseen(error), "settled": False}
+    return {
+        "inventory": inventory_digest(document),
+        "signals": signal_digests(recording),
+        "units": {str(unit): digest for unit, digest in unit_digests(recording).items()},
+        "links": [],
+    }
+
+
+def inventory_digest(document: Mapping[str, Any]) -> str:
+    """Digest of an inventory; the name of the file has no part in it, so a file may be moved and renamed."""
+    named = {key: value for key, value in document["file"].items() if key != "name"}
+    return digest_value({**document, "file": named})
+
+
+def _unforeseen(error: Exception) -> dict[str, Any]:
+    return {
+        "level": "fail",
+        "place": None,
+        "found": f"the recording could not be read ({type(error).__name__}: {error})",
+        "expected": "a readable NWB file",
+        "remedy": "look into the file with `odograph look`; if it is sound, please report this",
+    }
+
+
+def main() -> None:
+    """Answer the requests on the standard input until it ends."""
+    answers, sys.stdout = sys.stdout, sys.stderr
+    for line in sys.stdin:
+        request = json.loads(line)
+        settings = IntakeSettings.model_validate_json(request["settings"])
+        answer = survey_recording(request["session"], request["nwb"], settings)
+        answers.write(json.dumps(answer) + "\n")
+        answers.flush()
+
+
+if __name__ == "__main__":
+    main()
