@@ -240,7 +240,7 @@ def _draw_maps(
             values, origin="lower", extent=box, cmap=colours, norm=norm, interpolation="nearest", zorder=1
         )
         draw_arena(axes, corners)
-        square_map_axes(axes, extent, first=axes is observed_axes and False)
+        square_map_axes(axes, extent, first=False)
     bar = scale_axes.figure.colorbar(ScalarMappable(norm, colours), cax=scale_axes)
     bar.outline.set_visible(False)
     bar.ax.tick_params(length=2)
@@ -359,9 +359,6 @@ def _draw_scores(axes: Any, row: Mapping[str, Any], scores: pd.DataFrame) -> Non
         axes.plot([value - se, value + se], [y, y], color=colour, lw=1.4 if chosen else 0.9, zorder=2)
         axes.plot(value, y, "D" if chosen else "o", ms=4.6 if chosen else 3.4, mec=colour, mew=0.9,
                   mfc=INK if chosen else "white", zorder=3)  # fmt: skip
-    if np.isfinite(score).any():
-        best = int(np.nanargmax(score))
-        axes.axvline(score[best] - spread[best], color=SOFT_INK, lw=0.7, ls=(0, (2, 2)), zorder=1)
     axes.axvline(0, color=RULE, lw=0.8, zorder=0)
     axes.set_ylim(-0.6, len(table) - 0.4)
     axes.set_yticks(level, [model_label(model) for model in table["model"]])

@@ -48,6 +48,11 @@ def model_label(model: str) -> str:
     return " + ".join(term_label(term) for term in model.split("+"))
 
 
+def shape_label(shape: str) -> str:
+    """The name of a shape of speed tuning as text: `non_monotonic` -> `non-monotonic`."""
+    return "non-monotonic" if shape == "non_monotonic" else shape.replace("_", " ")
+
+
 def model_terms(model: str) -> tuple[str, ...]:
     """The variables of a model, none for the constant one."""
     return () if model in ("", "constant", "none") else tuple(model.split("+"))

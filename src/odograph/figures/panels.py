@@ -85,7 +85,7 @@ def square_map_axes(axes: Any, extent: Extent, first: bool = True) -> None:
     if first:
         axes.set_ylabel("y (m)")
     else:
-        axes.tick_params(labelleft=False)
+        axes.tick_params(left=False, labelleft=False)
 
 
 def edges_of(centres: np.ndarray) -> tuple[float, float]:

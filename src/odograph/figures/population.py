@@ -24,6 +24,7 @@ from odograph.figures.shares import (
 from odograph.figures.style import axes_at, figure_style, new_figure
 from odograph.settings.figures import FiguresSettings
 
+_OTHERS = "#98a2ac"
 _TERM_ORDER = ("position", "head_direction", "speed")
 
 
@@ -87,11 +88,11 @@ def draw_slow_against_fast(units: pd.DataFrame, speed: pd.DataFrame, settings: F
         fitted = _fitted(units)
         if not len(fitted):
             return empty_figure(settings, title, "No unit was fitted, so there is nothing to compare.")
-        figure = new_figure(WIDTH_IN, 3.55, settings)
+        figure = new_figure(WIDTH_IN, 4.35, settings)
         headline(figure, title, n_text(len(fitted), len(_animals(fitted))))
         marks = animal_marks(_animals(fitted))
         for place, variable in enumerate(("position", "head_direction")):
-            axes = axes_at(figure, 0.55 + 3.6 * place, 0.78, 2.1, 2.1)
+            axes = axes_at(figure, 0.6 + 3.55 * place, 1.15, 2.6, 2.6)
             _draw_pairs(axes, fitted, speed, variable, marks)
         animal_legend(figure, marks, 0.1, 0.06)
     return figure
@@ -111,7 +112,7 @@ def _draw_pairs(
     encodes = pairs[f"encodes_{variable}"].to_numpy(bool)
     animal = pairs["animal"].astype(str).to_numpy()
     for name, mark in marks.items():
-        for chosen, face, edge in ((~encodes, "white", RULE), (encodes, colour, "white")):
+        for chosen, face, edge in ((~encodes, "white", _OTHERS), (encodes, colour, "white")):
             part = (animal == name) & chosen
             order = 3 if edge == "white" else 2
             axes.plot(
@@ -140,33 +141,28 @@ def _draw_pairs(
     axes.set_aspect("equal")
     axes.set_xlabel("slow (bits per spike)")
     axes.set_ylabel("fast (bits per spike)")
-    axes.text(
-        1.04, 1.0, _change_text(speed, variable, int((~encodes).sum())), transform=axes.transAxes, va="top",
-        color=SOFT_INK, linespacing=1.4,
+    others = int((~encodes).sum())
+    axes.annotate(
+        _change_text(speed, variable, others), (0, 0), (0, -28), xycoords="axes fraction",
+        textcoords="offset points", va="top", color=SOFT_INK, linespacing=1.35,
     )  # fmt: skip
 
 
 def _change_text(speed: pd.DataFrame, variable: str, others: int) -> str:
+    """What the filled and the open marks are, and the median change of the filled ones."""
     lines = []
-    rows = (
-        speed[(speed["measure"] == f"{variable}_information_change") & (speed["level"] == "all")]
-        if len(speed)
-        else speed
-    )
+    wanted = f"{variable}_information_change"
+    rows = speed[(speed["measure"] == wanted) & (speed["level"] == "all")] if len(speed) else speed
     if len(rows) and int(rows["n"].iloc[0]):
         row = rows.iloc[0]
-        lines = [
-            "filled: encode it",
-            f"n = {number(row['n'], 0)}, {number(row['animals'], 0)} animals",
-            f"{number(row['k'], 0)} of {number(row['n'], 0)} gain",
-            "median gain",
-            f"{number(row['value'], 3)}",
-        ]
+        change = f"median change {number(row['value'], 3)}"
         if np.isfinite(row["low"]):
-            lines[-1] += f" [{number(row['low'], 3)},"
-            lines.append(f"{number(row['high'], 3)}]")
-        lines += ["bits per spike", ""]
-    return "\n".join([*lines, "open: the others", f"n = {number(others, 0)}"])
+            change += f" ({number(row['low'], 3)} to {number(row['high'], 3)})"
+        lines = [
+            f"filled: {number(row['n'], 0)} units that encode it, {number(row['k'], 0)} gain,",
+            f"{change} bits per spike",
+        ]
+    return "\n".join([*lines, f"open: the other {number(others, 0)} units" if others else ""])
 
 
 def draw_held_out_scores(units: pd.DataFrame, scores: pd.DataFrame, settings: FiguresSettings) -> Figure:

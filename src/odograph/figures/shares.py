@@ -14,6 +14,7 @@ from odograph.figures.colours import (
     SOFT_INK,
     model_label,
     model_terms,
+    shape_label,
     term_colour,
     term_label,
 )
@@ -22,7 +23,7 @@ from odograph.figures.style import axes_at, figure_style, new_figure, text_at
 from odograph.settings.figures import FiguresSettings
 
 WIDTH_IN = 7.2
-ROW_IN = 0.34
+ROW_IN = 0.36
 ANIMAL_MARKS = ("o", "s", "^", "D", "v", "P", "X", "<", ">", "h")
 # With more animals than marks, or than a row can hold apart, they are drawn alike and not named.
 _MOST_NAMED = len(ANIMAL_MARKS)
@@ -90,10 +91,10 @@ def draw_composition(composition: pd.DataFrame, settings: FiguresSettings) -> Fi
         included = whole.loc[whole["kind"] == "includes", "category"].tolist()
         exact = whole.loc[whole["kind"] == "exact", "category"].tolist()
         upper, lower = ROW_IN * len(included), ROW_IN * len(exact)
-        figure = new_figure(WIDTH_IN, 2.0 + upper + lower, settings)
+        figure = new_figure(WIDTH_IN, 2.1 + upper + lower, settings)
         headline(figure, title, n_text(int(whole["n"].iloc[0]), int(whole["animals"].iloc[0])))
         marks = animal_marks(composition.loc[composition["level"] == "animal", "name"].astype(str).tolist())
-        axes = axes_at(figure, 2.35, 1.3 + lower, 3.9, upper)
+        axes = axes_at(figure, 2.35, 1.36 + lower, 3.9, upper)
         axes.set_title("each variable, whatever else the unit encodes", x=-0.575)
         rows = _rows(composition[composition["kind"] == "includes"], included, marks)
         draw_shares(
@@ -104,7 +105,8 @@ def draw_composition(composition: pd.DataFrame, settings: FiguresSettings) -> Fi
         labels = ["none" if name == "constant" else model_label(name) for name in exact]
         rows = _rows(composition[composition["kind"] == "exact"], exact, marks)
         draw_shares(axes, rows, [_exact_colour(name) for name in exact], labels)
-        axes.set_xlabel("share of fitted units (%)")
+        for each in figure.axes:
+            each.set_xlabel("share of fitted units (%)")
         animal_legend(figure, marks, 0.1, 0.06)
     return figure
 
@@ -136,7 +138,7 @@ def draw_speed_shapes(speed: pd.DataFrame, settings: FiguresSettings) -> Figure:
         axes = axes_at(figure, 2.35, 0.64, 3.9, ROW_IN * len(names))
         rows = _rows(shapes.assign(share=shapes["value"]), names, marks)
         colours = [SOFT_INK if name == "undecided" else term_colour("speed") for name in names]
-        draw_shares(axes, rows, colours, [name.replace("_", " ") for name in names])
+        draw_shares(axes, rows, colours, [shape_label(name) for name in names])
         for place, name in enumerate(names):
             _draw_shape_sign(axes, name, len(names) - 1 - place, colours[place])
         axes.set_xlabel("share of the units that encode speed (%)")
@@ -150,7 +152,7 @@ def _draw_shape_sign(axes: Any, shape: str, y: float, colour: str) -> None:
     if shape not in lines:
         return
     axes.plot(
-        np.linspace(-0.56, -0.49, 3), y - 0.2 + 0.4 * np.array(lines[shape]), color=colour, lw=1.4, clip_on=False,
+        np.linspace(-0.33, -0.26, 3), y - 0.2 + 0.4 * np.array(lines[shape]), color=colour, lw=1.4, clip_on=False,
         transform=axes.get_yaxis_transform(), solid_joinstyle="round",
     )  # fmt: skip
 
@@ -199,31 +201,43 @@ def draw_shares(axes: Any, rows: list[dict[str, Any]], colours: list[str], label
         One for each row.
     """
     top = 0.0
-    several = max((len(row["animals"]) for row in rows), default=0) > 1
+    most = max((len(row["animals"]) for row in rows), default=0)
     for place, (row, colour) in enumerate(zip(rows, colours, strict=True)):
         y = len(rows) - 1 - place
-        whole, animals = row["all"], row["animals"] if several else []
-        axes.barh(y, 100 * whole["share"], height=0.7, color=colour, alpha=0.16, lw=0, zorder=1)
-        offsets = np.linspace(0.28, -0.28, len(animals)) if len(animals) > 1 else np.zeros(len(animals))
-        for animal, offset in zip(animals, offsets, strict=True):
-            if np.isfinite(animal["low"]):
+        whole, animals = row["all"], row["animals"]
+        if most == 1 and np.isfinite(whole["low"]):
+            animals = []
+        above = y + 0.2 if animals else y
+        axes.barh(y, 100 * whole["share"], height=0.8, color=colour, alpha=0.14, lw=0, zorder=1)
+        for animal, offset in zip(animals, np.linspace(-0.02, -0.32, len(animals)), strict=True):
+            if np.isfinite(animal["low"]) and most <= _MOST_NAMED:
                 line = [100 * animal["low"], 100 * animal["high"]]
                 axes.plot(line, [y + offset] * 2, color=SOFT_INK, lw=0.5, zorder=2)
             at = 100 * animal["share"]
-            axes.plot(at, y + offset, animal["mark"], ms=2.8, mfc="white", mec=SOFT_INK, mew=0.6, zorder=3)
-            top = max(top, at, 100 * np.nan_to_num(animal["high"]))
-        if np.isfinite(whole["low"]):
             axes.plot(
-                [100 * whole["low"], 100 * whole["high"]], [y, y], color=colour, lw=2.6, zorder=4, alpha=0.9
+                at,
+                y + offset,
+                animal["mark"],
+                ms=2.8,
+                mfc="white",
+                mec=SOFT_INK,
+                mew=0.6,
+                zorder=3,
+                clip_on=False,
             )
-        axes.plot(100 * whole["share"], y, "o", ms=5.2, color=colour, mec="white", mew=0.8, zorder=5)
-        top = max(top, 100 * whole["share"], 100 * np.nan_to_num(whole["high"]))
+            top = max(top, at, 100 * np.nan_to_num(animal["high"]) if most <= _MOST_NAMED else 0)
+        if np.isfinite(whole["low"]):
+            line = [100 * whole["low"], 100 * whole["high"]]
+            axes.plot(line, [above, above], color=colour, lw=2.6, zorder=4, solid_capstyle="butt")
+        at = 100 * whole["share"]
+        axes.plot(at, above, "o", ms=5.4, color=colour, mec="white", mew=0.8, zorder=5, clip_on=False)
+        top = max(top, at, 100 * np.nan_to_num(whole["high"]))
         axes.text(
-            1.02, y, f"{number(whole['k'], 0)} of {number(whole['n'], 0)}",
+            1.03, y, f"{number(whole['k'], 0)} of {number(whole['n'], 0)}",
             transform=axes.get_yaxis_transform(), va="center", color=SOFT_INK,
         )  # fmt: skip
     axes.set_xlim(0, min(100.0, top * 1.03) if top else 1.0)
     axes.set_ylim(-0.6, len(rows) - 0.4)
     axes.set_yticks(range(len(rows))[::-1], [wrapped(label, 34, 2) for label in labels])
-    axes.tick_params(axis="y", length=0)
+    axes.tick_params(axis="y", length=0, pad=6)
     axes.locator_params(axis="x", nbins=6)

@@ -131,9 +131,9 @@ def sessions_section(context: PageContext) -> str:
         "animal",
         "group",
         "file",
-        "clock drift (ppm)",
-        "valid time",
-        "units fitted",
+        "clock drift (ppm)#",
+        "valid time#",
+        "units fitted#",
     )
     lead = (
         f"<p>{len(used)} of {len(context.verdicts)} sessions were used. A session's name leads to the picture of its "
@@ -149,7 +149,7 @@ def figures_section(context: PageContext) -> str:
         caption = CAPTIONS[figure.name]
         data = base64.b64encode(figure.png).decode()
         parts.append(
-            f'<figure id="figure-{figure.name}"><h3>{text(caption.title)}</h3>'
+            f'<figure id="figure-{figure.name}"><h3 class="unseen">{text(caption.title)}</h3>'
             f'<img src="data:image/png;base64,{data}" alt="{text(caption.title)}. {text(caption.text)}">'
             f"<figcaption>{text(caption.text)} <span class='place'>Numbers: "
             f'<a href="{caption.table}">{caption.table}</a>. File: <a href="{text(figure.path)}">{text(figure.path)}</a>, '

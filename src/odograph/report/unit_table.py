@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 from typing import Any
 
-from odograph.figures.colours import model_label, model_terms
+from odograph.figures.colours import model_label, model_terms, shape_label
 from odograph.figures.miniature import Miniature
 from odograph.report.context import PageContext
 from odograph.report.words import cell, number, row, section, table, text
@@ -16,7 +16,7 @@ _NONE = Miniature("", "", "")
 def units_section(context: PageContext) -> str:
     """A row for each unit; scripts, where they run, add sorting and filters."""
     columns = (
-        "unit", "animal", "region", "spikes", "mean rate (Hz)", "encodes", "held-out bits per spike", "observed map",
+        "unit", "animal", "region", "spikes#", "mean rate (Hz)#", "encodes", "held-out bits per spike#", "observed map",
         "head direction", "speed", "speed shape",
     )  # fmt: skip
     units = context.units.sort_values(["session", "unit"]) if len(context.units) else context.units
@@ -37,7 +37,7 @@ def _unit_row(unit: Mapping[str, Any], miniatures: Mapping[tuple[str, int], Mini
         encoded = "constant"
     picture = miniatures.get((session, name), _NONE)
     shape = unit.get("speed_shape")
-    shape = shape.replace("_", " ") if isinstance(shape, str) and shape != "not_tuned" else None
+    shape = shape_label(shape) if fitted and isinstance(shape, str) and shape != "not_tuned" else None
     bits = unit.get("selected_bits_per_spike")
     attributes = f' data-session="{text(session)}" data-encodes="{" ".join(model_terms(encoded or ""))}"'
     attributes += f' data-animal="{text(unit.get("animal"))}" data-status="{text(unit["status"])}"'

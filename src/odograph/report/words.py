@@ -42,8 +42,11 @@ def cell(content: str, *, kind: str = "", sort: Any = None) -> str:
 def table(
     columns: Sequence[str], rows: Iterable[str], *, caption: str, identifier: str = "", kind: str = ""
 ) -> str:
-    """A table with its caption and column heads; `rows` are ready `<tr>` elements."""
-    heads = "".join(f'<th scope="col">{html.escape(column)}</th>' for column in columns)
+    """A table with its caption and column heads; `rows` are ready `<tr>` elements.
+
+    A column whose name ends in `#` holds numbers; the sign is not shown.
+    """
+    heads = "".join(_head(column) for column in columns)
     name = f' id="{identifier}"' if identifier else ""
     classes = f' class="{kind}"' if kind else ""
     return (
@@ -51,6 +54,11 @@ def table(
         f"<table{name}{classes}><caption>{html.escape(caption)}</caption><thead><tr>{heads}</tr></thead>"
         f"<tbody>{''.join(rows)}</tbody></table></div>"
     )
+
+
+def _head(column: str) -> str:
+    kind = ' class="n"' if column.endswith("#") else ""
+    return f'<th scope="col"{kind}>{html.escape(column.removesuffix("#"))}</th>'
 
 
 def row(head: str, cells: Iterable[str], attributes: str = "") -> str:
