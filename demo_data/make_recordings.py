@@ -17,7 +17,7 @@ import numpy as np
 from simulate_camera import Camera, simulate_camera
 from simulate_journey import Journey, simulate_journey
 from simulate_units import UnitTruth, simulate_spikes, unit_truths
-from study_plan import ARENA_SIDE_M, STUDY, SessionPlan, generator, plans
+from study_plan import ARENA_SIDE_M, FEWEST_UNITS, STUDY, SessionPlan, generator, plans
 from truth_table import write_truth
 
 RECORDINGS = Path(__file__).with_name("recordings")
@@ -96,6 +96,8 @@ def main(arguments: Sequence[str] | None = None) -> int:
     try:
         named = [options.resort] if options.resort else options.sessions
         wanted = plans(named, minutes=options.minutes, units=options.units)
+        if options.resort and wanted[0].units < FEWEST_UNITS:
+            raise ValueError(f"--units is {wanted[0].units}; a second sorting needs {FEWEST_UNITS} or more")
     except ValueError as error:
         print(f"make_recordings.py: {error}", file=sys.stderr)
         return 2

@@ -131,9 +131,7 @@ def _add_arena(nwbfile: NWBFile) -> None:
 
 
 def _add_electrodes(nwbfile: NWBFile) -> None:
-    device = nwbfile.create_device(
-        name="probe", description="Two-shank silicon probe on a microdrive", manufacturer="made in-house"
-    )
+    device = nwbfile.create_device(name="probe", description="Two-shank silicon probe on a microdrive")
     for shank, region in enumerate(REGIONS):
         group = nwbfile.create_electrode_group(
             name=f"shank_{shank + 1}",

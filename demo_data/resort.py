@@ -8,10 +8,9 @@ from dataclasses import dataclass
 import numpy as np
 from nwb_file import SortedUnit
 from simulate_units import UnitTruth, on_sample_grid
-from study_plan import SessionPlan, generator
+from study_plan import FEWEST_UNITS, SessionPlan, generator
 
 CHANGED_SHARE = 0.03
-FEWEST_UNITS = 4
 
 
 @dataclass(frozen=True)

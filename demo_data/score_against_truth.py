@@ -164,6 +164,12 @@ def read_tables(results: Path, truth_file: Path) -> tuple[pd.DataFrame, pd.DataF
         missing = [name for name in columns if name not in table]
         if missing:
             raise ValueError(f"{path} lacks the columns {', '.join(missing)}; was it made by this version?")
+        twice = table[table.duplicated(["session", "unit"])]
+        if len(twice):
+            raise ValueError(
+                f"{path} has unit {twice['unit'].iloc[0]} of {twice['session'].iloc[0]} more than once; "
+                "make the table again"
+            )
     return units, truth
 
 

@@ -11,6 +11,7 @@ from simulate_tuning import Tuning, head_direction_gain, position_gain, sharpeni
 from study_plan import ARENA_SIDE_M, SAMPLE_RATE_HZ, SessionPlan, generator
 
 REFRACTORY_S = 0.002
+SPIKES_PER_BURST = 2.6
 
 
 @dataclass(frozen=True)
@@ -122,20 +123,29 @@ def simulate_spikes(truth: UnitTruth, journey: Journey) -> np.ndarray:
     event; spikes within the refractory period of the one before are removed.
     """
     rng = generator(truth.session, "spikes", truth.unit)
-    relative_rate = _relative_rate(truth, journey)
-    overall = _slow_drift(journey, rng) if truth.drift else np.ones(journey.time_s.size)
-    on_path = overall * relative_rate(*journey.at(journey.time_s))
-    spikes_per_event = 2.6 if truth.burst else 1.0
-    scale_hz = truth.mean_rate_hz / spikes_per_event / on_path.mean()
-    ceiling_hz = 1.05 * scale_hz * on_path.max()
-
+    event_rate_hz = event_rate(truth, journey)
+    ceiling_hz = 1.1 * event_rate_hz(journey.time_s).max()
     duration_s = float(journey.time_s[-1])
     candidates = np.sort(rng.random(rng.poisson(ceiling_hz * duration_s))) * duration_s
-    rate_hz = scale_hz * relative_rate(*journey.at(candidates))
-    rate_hz *= np.interp(candidates, journey.time_s, overall)
-    events = candidates[rng.random(candidates.size) * ceiling_hz < rate_hz]
-    spikes = _bursts(events, spikes_per_event, rng) if truth.burst else events
+    events = candidates[rng.random(candidates.size) * ceiling_hz < event_rate_hz(candidates)]
+    spikes = _bursts(events, SPIKES_PER_BURST, rng) if truth.burst else events
     return on_sample_grid(spikes[(spikes > 0) & (spikes < duration_s)])
+
+
+def event_rate(truth: UnitTruth, journey: Journey) -> Callable[[np.ndarray], np.ndarray]:
+    """The true rate of a unit's events (spikes, or bursts) as a function of time, (k,) [s] to (k,) [Hz]."""
+    relative_rate = _relative_rate(truth, journey)
+    overall = np.ones(journey.time_s.size)
+    if truth.drift:
+        overall = _slow_drift(journey, generator(truth.session, "drift", truth.unit))
+    mean_on_path = np.mean(overall * relative_rate(*journey.at(journey.time_s)))
+    mean_hz = truth.mean_rate_hz / (SPIKES_PER_BURST if truth.burst else 1.0)
+
+    def rate_hz(time_s: np.ndarray) -> np.ndarray:
+        slow = np.interp(time_s, journey.time_s, overall)
+        return mean_hz / mean_on_path * slow * relative_rate(*journey.at(time_s))
+
+    return rate_hz
 
 
 def on_sample_grid(time_s: np.ndarray, refractory_s: float = REFRACTORY_S) -> np.ndarray:
@@ -207,7 +217,7 @@ def _slow_drift(journey: Journey, rng: np.random.Generator) -> np.ndarray:
 
 
 def _bursts(events: np.ndarray, mean_spikes: float, rng: np.random.Generator) -> np.ndarray:
-    """Each event (k,) followed by a geometric number of further spikes, 3 to 8 ms apart. [s]"""
+    """Each event (k,) as the first of a geometric number of spikes, 3 to 8 ms apart. [s]"""
     count = rng.geometric(1 / mean_spikes, events.size)
     first = np.repeat(np.cumsum(count) - count, count)
     gaps = rng.uniform(0.003, 0.008, count.sum())

@@ -13,6 +13,7 @@ import numpy as np
 FRAME_INTERVAL_S = 0.02
 SAMPLE_RATE_HZ = 30_000
 ARENA_SIDE_M = 1.1
+FEWEST_UNITS = 4  # for a second sorting: two merged, one split, one changed
 SESSIONS_TABLE = Path(__file__).with_name("sessions.tsv")
 
 

@@ -1,0 +1,149 @@
+"""The scores against the truth: what counts as found, as false, and when the limits hold."""
+
+from __future__ import annotations
+
+import json
+
+import numpy as np
+import pandas as pd
+import pytest
+from score_against_truth import join_truth, main, mistakes, score
+from simulate_units import unit_truths
+from study_plan import STUDY
+
+INFORMATION = [
+    f"{name}_information_{pace}_bits_per_spike"
+    for name in ("position", "head_direction")
+    for pace in ("slow", "fast")
+]
+
+
+@pytest.fixture
+def truth() -> pd.DataFrame:
+    return pd.DataFrame([truth.row() for plan in STUDY for truth in unit_truths(plan)])
+
+
+@pytest.fixture
+def perfect(truth) -> pd.DataFrame:
+    """The table of units of a run that found everything and nothing else."""
+    units = truth[["session", "unit"]].copy()
+    units["n_spikes"] = 1000
+    for name in ("position", "head_direction", "speed"):
+        units[f"encodes_{name}"] = truth[name].astype(bool)
+    units["speed_shape"] = truth["speed_shape"].where(truth["speed_shape"] != "", "not_tuned")
+    sharper = truth["sharpens"].astype(float)
+    for column in INFORMATION:
+        units[column] = 1.0 + (sharper if "fast" in column else 0.5 * (1 - sharper))
+    return units
+
+
+@pytest.fixture
+def run(tmp_path, truth):
+    """Write a table of units beside the truth, score it by the command; its exit status."""
+
+    def score_table(units: pd.DataFrame, *options: str) -> int:
+        folder = tmp_path / "results" / "population"
+        folder.mkdir(parents=True, exist_ok=True)
+        units.to_parquet(folder / "units.parquet")
+        truth.to_csv(tmp_path / "truth.tsv", sep="\t", index=False)
+        return main([str(tmp_path / "results"), "--truth", str(tmp_path / "truth.tsv"), *options])
+
+    return score_table
+
+
+def test_a_perfect_run_holds(run, perfect, capsys):
+    assert run(perfect, "--mistakes") == 0
+    printed = capsys.readouterr().out
+    assert "DOES NOT HOLD" not in printed
+    assert "no mistakes" in printed
+
+
+def test_counts_are_variables_of_units(perfect, truth):
+    scores = {share.what.strip(): share for share in score(join_truth(perfect, truth, 300))}
+    tuned = truth[["position", "head_direction", "speed"]].sum().sum()
+    assert scores["encoded variables found"].k == scores["encoded variables found"].n == tuned
+    assert scores["variables found that are not encoded"].k == 0
+    assert scores["variables found that are not encoded"].n == 3 * len(truth) - tuned
+    assert scores["speed shape named right"].share == 1
+    sharpening = scores["more position information when fast, sharpening"]
+    assert sharpening.k == sharpening.n == (truth["position"] & truth["sharpens"]).sum() > 0
+    assert scores["more position information when fast, others"].k == 0
+
+
+def test_interval_is_wilsons(perfect, truth):
+    """81 of 263: 0.2553 to 0.3662 (Newcombe 1998, Statistics in Medicine 17:857, Table I)."""
+    joined = join_truth(perfect, truth, 300)
+    tuned = int(truth["position"].sum())
+    share = next(
+        share for share in score(joined) if share.what.strip() == "position found where it is encoded"
+    )
+    assert (share.k, share.n) == (tuned, tuned)
+    low, high = type(share)("", 81, 263).interval
+    assert (low, high) == (pytest.approx(0.2553, abs=5.1e-5), pytest.approx(0.3662, abs=5.1e-5))
+
+
+def test_limits_break_on_either_side(run, perfect, truth, capsys):
+    missed = perfect.copy()
+    missed.loc[truth["position"] == 1, "encodes_position"] = False
+    assert run(missed) == 1
+    assert "DOES NOT HOLD" in capsys.readouterr().out
+    false = perfect.copy()
+    false["encodes_speed"] = True
+    assert run(false) == 1
+
+
+def test_limits_are_ninety_and_five_percent(truth, perfect):
+    joined = join_truth(perfect, truth, 300)
+    tuned = [
+        (i, v) for v in ("position", "head_direction", "speed") for i in np.flatnonzero(joined[f"true_{v}"])
+    ]
+    allowed = int(0.10 * len(tuned))
+    for count, holds in ((allowed, True), (allowed + 1, False)):
+        worse = joined.copy()
+        for index, name in tuned[:count]:
+            worse.loc[index, f"encodes_{name}"] = False
+        assert score(worse)[0].holds is holds
+        assert len(mistakes(worse)) == count
+
+
+def test_units_with_few_spikes_are_not_judged(truth, perfect):
+    perfect.loc[:9, "n_spikes"] = 299
+    perfect.loc[10, "n_spikes"] = 300
+    assert len(join_truth(perfect, truth, 300)) == len(truth) - 10
+
+
+def test_failed_units_count_as_missed_and_unknown_ones_are_left_aside(truth, perfect):
+    perfect["encodes_position"] = perfect["encodes_position"].astype(object)
+    perfect.loc[0, "encodes_position"] = None
+    unknown = perfect.iloc[[0]].assign(unit=9999)
+    joined = join_truth(pd.concat([perfect, unknown]), truth, 300)
+    assert len(joined) == len(truth)
+    assert truth.loc[0, "position"] == 1
+    assert len(mistakes(joined)) == 1 and mistakes(joined)[0].startswith("missed")
+
+
+def test_order_of_rows_does_not_matter(truth, perfect):
+    shuffled = perfect.sample(frac=1, random_state=1)
+    assert join_truth(shuffled, truth, 300).equals(join_truth(perfect, truth, 300))
+
+
+def test_json_says_the_same(run, perfect, capsys):
+    assert run(perfect, "--json") == 0
+    document = json.loads(capsys.readouterr().out)
+    assert document["scores"][0]["holds"] is True
+    assert document["mistakes"] == []
+
+
+def test_what_is_missing_is_said(run, perfect, tmp_path, capsys):
+    assert main([str(tmp_path / "nowhere")]) == 66
+    assert "run the workflow first" in capsys.readouterr().err
+    assert run(perfect.drop(columns="encodes_speed")) == 66
+    assert "lacks the columns encodes_speed" in capsys.readouterr().err
+    assert run(perfect.assign(session="other_" + perfect["session"])) == 66
+    assert "were the demo recordings run" in capsys.readouterr().err
+    assert run(pd.concat([perfect, perfect.iloc[[3]]])) == 66
+    assert "more than once" in capsys.readouterr().err
+    broken = tmp_path / "results" / "population" / "units.parquet"
+    broken.write_bytes(b"not a table")
+    assert main([str(tmp_path / "results"), "--truth", str(tmp_path / "truth.tsv")]) == 66
+    assert "cannot be read" in capsys.readouterr().err
