@@ -2,7 +2,7 @@
 
 import numpy as np
 import pytest
-from scipy.stats import quantile_test
+from scipy.stats import binom, quantile_test
 from statsmodels.stats.multitest import multipletests
 from statsmodels.stats.proportion import proportion_confint
 
@@ -114,6 +114,20 @@ def test_a_resample_keeps_each_animal_whole():
         times = [count / sizes[name] for name, count in zip(names, counts, strict=True)]
         assert all(time == int(time) for time in times)
         assert sum(times) == 3
+
+
+@pytest.mark.parametrize("confidence", [0.8, 0.95])
+def test_bootstrap_of_single_units_is_binomial(confidence):
+    """Exact: with one unit an animal the resampled count is binomial, and so are the limits."""
+    values = (np.arange(38) < 17).astype(float)
+    settings = PopulationSettings(confidence=confidence, bootstrap_draws=10_000)
+    interval = bootstrap_interval(values, np.arange(38).astype(str), np.mean, "x", settings)[0]
+    tail = (1 - confidence) / 2
+    expected = binom.ppf([tail, 1 - tail], 38, 17 / 38)
+    # Far from a step of the distribution the draws cannot miss the count.
+    for count, level in zip(expected, [tail, 1 - tail], strict=True):
+        assert min(abs(binom.cdf([count - 1, count], 38, 17 / 38) - level)) > 4 * np.sqrt(tail / 10_000)
+    assert (interval.low * 38, interval.high * 38) == pytest.approx(tuple(expected))
 
 
 def test_bootstrap_interval_covers():
