@@ -20,7 +20,7 @@ PYTHON ?= $(shell for name in python3 python3.11 python3.12 python3.13 python3.1
 # Jobs call `python`; it has to be the one of the environment.
 RUN := PATH="$(CURDIR)/$(BIN):$$PATH"
 
-.PHONY: help env recordings demo test lint format documents truth clean clean-results
+.PHONY: help env has-python recordings demo test lint format documents truth clean clean-results
 .DEFAULT_GOAL := help
 
 help:
@@ -36,6 +36,10 @@ help:
 	@echo "make clean-results  remove results/ and logs/ of this folder"
 
 env: $(ENVIRONMENT_STAMP)
+
+# For scripts: is there a Python to build with?
+has-python:
+	@test -n "$(PYTHON)"
 
 $(ENVIRONMENT_STAMP): constraints.txt pyproject.toml
 	@test -n "$(PYTHON)" || { \
