@@ -28,7 +28,9 @@ wildcard_constraints:
 
 def planned(step):
     """The digest of the plan file of a session's step."""
-    return lambda wildcards: PLAN.digests[f"{wildcards.session}/{step.format(**wildcards)}"]
+    return lambda wildcards: PLAN.digests[
+        f"{wildcards.session}/{step.format(**wildcards)}"
+    ]
 
 
 def settings(step):
@@ -53,7 +55,9 @@ def all_cards(wildcards):
 
 def all_session_figures(wildcards):
     """The quality figures of all sessions, those that cannot be read among them."""
-    return expand("results/sessions/{session}/session_quality.png", session=PLAN.sessions)
+    return expand(
+        "results/sessions/{session}/session_quality.png", session=PLAN.sessions
+    )
 
 
 def documents_of_session(wildcards):

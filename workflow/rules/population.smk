@@ -6,8 +6,12 @@ rule population:
         ),
         clocks=of_sessions("results/sessions/{session}/sync/clock.json"),
         audits=of_sessions("results/sessions/{session}/behaviour/audit.json"),
-        units=of_shards("results/sessions/{session}/encoding/shard-{shard}/units.parquet"),
-        scores=of_shards("results/sessions/{session}/encoding/shard-{shard}/scores.parquet"),
+        units=of_shards(
+            "results/sessions/{session}/encoding/shard-{shard}/units.parquet"
+        ),
+        scores=of_shards(
+            "results/sessions/{session}/encoding/shard-{shard}/scores.parquet"
+        ),
     output:
         units="results/population/units.parquet",
         units_tsv="results/population/units.tsv",

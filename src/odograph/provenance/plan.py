@@ -1,10 +1,10 @@
 """Planning before the graph: what does each recording hold now, and does that differ from the last time.
 
-When the workflow is parsed, every recording is looked at by its size and time stamps. Only where these moved
-is it read and are its signals and units digested. The digests go to small files under ``results/plan/``, one for
-each job, written only when their content changed. A job depends on its plan file, on the digest of that file
-(as a param of its rule), on the settings that it reads and on the fingerprint of its code: those say everything
-that can change its result, and nothing else does.
+When the workflow is parsed, every recording is looked at by its size and time stamps. Only where these
+moved is it read and are its signals and units digested. The digests go to small files under
+``results/plan/``, one for each job, written only when their content changed. A job depends on its plan
+file, on the digest of that file (as a param of its rule), on the settings that it reads and on the
+fingerprint of its code: those say everything that can change its result, and nothing else does.
 """
 
 from __future__ import annotations

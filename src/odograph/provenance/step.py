@@ -1,8 +1,8 @@
 """The harness of the steps: arguments, log, planned digests, verdicts, and the record at the end.
 
-A step module has a function ``work(step)`` that reads the inputs its rule names, calls the library and writes
-the products. `run_step` does the rest. Exit codes: 0 done, 65 bad data, 70 a fault of the program, 75 an input
-changed under the run, 78 bad settings, 130 stopped.
+A step module has a function ``work(step)`` that reads the inputs its rule names, calls the library and
+writes the products. `run_step` does the rest. Exit codes: 0 done, 65 bad data, 70 a fault of the program,
+75 an input changed under the run, 78 bad settings, 130 stopped.
 """
 
 from __future__ import annotations
@@ -15,6 +15,7 @@ import sys
 import time
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
+from datetime import UTC, datetime
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -59,6 +60,8 @@ class Step:
     """
 
     def __init__(self, rule: str, arguments: argparse.Namespace) -> None:
+        self._started = time.monotonic()
+        self._started_at = datetime.now(UTC).isoformat(timespec="milliseconds")
         self.rule = rule
         self.session: str | None = arguments.session
         self.shard: int | None = arguments.shard
@@ -69,7 +72,6 @@ class Step:
         self.plan = _checked_plan(arguments.plan, arguments.planned)
         self.code = {rule: _checked_code(rule, arguments.code)}
         self._draft: RecordDraft | None = None
-        self._started = time.monotonic()
 
     @property
     def name(self) -> str:
@@ -171,6 +173,7 @@ class Step:
 
     def finish(self) -> None:
         """Write the record."""
+        self.record.run["started"] = self._started_at
         self.record.run["seconds"] = round(time.monotonic() - self._started, 3)
         self.record.write(self.output("record"))
 

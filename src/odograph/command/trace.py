@@ -1,0 +1,184 @@
+"""`odograph trace PRODUCT`: from a figure, table or record back to the recordings and the settings."""
+
+from __future__ import annotations
+
+import argparse
+import json
+import sys
+from collections.abc import Iterator
+from pathlib import Path
+from typing import Any
+
+from odograph.errors import OdographError
+
+EXIT_OK, EXIT_DATA, EXIT_NO_INPUT = 0, 65, 66
+_MOST_UNITS = 12
+
+_EXAMPLES = """\
+examples:
+  odograph trace results/figures/composition.png       a figure
+  odograph trace results/population/units.tsv          a table
+  odograph trace 3f9c20a1b7de                          the digits in the margin of a figure
+  odograph trace paper/figure2.pdf --results results   a figure that was copied elsewhere
+
+exit codes: 0 traced, 65 traced with problems (something changed since), 66 no such product or record
+"""
+
+
+def add_parser(subparsers: argparse._SubParsersAction[argparse.ArgumentParser]) -> None:
+    """Add the command to the parser of `odograph`."""
+    parser = subparsers.add_parser(
+        "trace",
+        help="what stands behind a figure or table",
+        description="Walk the records from a product back to the signals in the recordings, the settings "
+        "that were read and the code that ran, and say whether any of it changed since.",
+        epilog=_EXAMPLES,
+        formatter_class=argparse.RawDescriptionHelpFormatter,
+    )
+    parser.add_argument(
+        "target", metavar="PRODUCT", help="a figure, table, page or record, or a record's digits"
+    )
+    parser.add_argument(
+        "--results", type=Path, default=Path("results"), help="folder of the results (results)"
+    )
+    parser.add_argument("--all", action="store_true", help="show every setting, not only those of your own")
+    parser.add_argument("--json", action="store_true", help="write one JSON document instead of text")
+    parser.set_defaults(run=run)
+
+
+def run(args: argparse.Namespace) -> int:
+    """Trace the product named by `args.target`; returns the exit code."""
+    from odograph.provenance.trace import find_start, trace
+
+    try:
+        found = trace(find_start(args.target, args.results), args.results)
+    except OdographError as error:
+        if args.json:
+            print(json.dumps({"schema_version": 1, "problems": [error.message()]}, indent=1))
+        print(error.message(), file=sys.stderr)
+        return EXIT_NO_INPUT
+    config = args.results.resolve().parent / "config" / "config.yaml"
+    settings = with_places(found.settings(), config)
+    if args.json:
+        print(json.dumps(found.document() | {"settings": settings}, indent=1, sort_keys=True))
+    else:
+        print("\n".join(text_lines(found, settings, everything=args.all)))
+    return EXIT_DATA if found.problems else EXIT_OK
+
+
+def with_places(rows: list[dict[str, Any]], config: Path) -> list[dict[str, Any]]:
+    """Add to each setting its line of the configuration, its default, and its value there now."""
+    from odograph.settings.load import key_lines, load_settings, settings_table
+
+    lines: dict[tuple, int] = {}
+    now: dict[str, Any] = {}
+    defaults: dict[str, Any] = {}
+    try:
+        lines = key_lines(config)
+        now = load_settings(config).model_dump(mode="json")
+    except OdographError:
+        config = None
+    from odograph.settings.all import Settings
+
+    for row in settings_table(Settings()):
+        stage, _, key = row["path"].partition(".")
+        defaults.setdefault(stage, {})[key] = row["default"]
+    placed = []
+    for row in rows:
+        stage, _, key = row["setting"].partition(".")
+        line = lines.get((stage, key))
+        placed.append(
+            row
+            | {
+                "line": f"{config.parent.name}/{config.name}:{line}" if line is not None else None,
+                "default": defaults.get(stage, {}).get(key),
+                "now": now.get(stage, {}).get(key, row["value"]),
+            }
+        )
+    return placed
+
+
+def text_lines(found: Any, settings: list[dict[str, Any]], *, everything: bool = False) -> Iterator[str]:
+    """The trace in words."""
+    start = found.start
+    yield str(start.path or start.file)
+    record = start.record
+    yield f"  record {_short(record['record_id'])}, rule {record['rule']}{_keys(record['keys'])}"
+    yield f"  made {record['run']['started'][:19].replace('T', ' ')} UTC on {record['run']['host']}"
+    yield ""
+    yield "made by, the last first"
+    yield from _chain(found)
+    yield ""
+    yield "from the recordings"
+    yield from _sources(found)
+    yield ""
+    yield from _settings(settings, everything)
+    yield ""
+    versions = record["software"]
+    yield "with " + ", ".join(f"{name} {versions[name]}" for name in sorted(versions, key=_software_order))
+    yield ""
+    if found.problems:
+        yield "does not fit"
+        yield from (f"  {problem}" for problem in found.problems)
+    else:
+        yield "every product on the way is as it was when it was read"
+
+
+def _chain(found: Any) -> Iterator[str]:
+    """One line for every rule on the way, with the number of its records and their code."""
+    by_rule: dict[str, list[dict[str, Any]]] = {}
+    for record in found.records.values():
+        by_rule.setdefault(record["rule"], []).append(record)
+    for rule, records in by_rule.items():
+        code = sorted({record["code"][rule].removeprefix("sha256:")[:12] for record in records})
+        sessions = {record["keys"].get("session") for record in records} - {None}
+        number = (
+            f"{len(records)} records of {len(sessions)} sessions"
+            if len(records) > 1
+            else (f"record {_short(records[0]['record_id'])}{_keys(records[0]['keys'])}")
+        )
+        yield f"  {rule:<19} {number}; code {', '.join(code)}"
+
+
+def _sources(found: Any) -> Iterator[str]:
+    for session, facts in found.sources().items():
+        missing = "" if Path(facts["file"]).is_file() else "   (not there now)"
+        yield f"  session {session}: {facts['file']}{missing}"
+        for name, signal in sorted(facts["signals"].items()):
+            yield f"    {name:<18} {_short(signal['digest'])}  {signal['place'] or ''}".rstrip()
+        units = facts["units"]
+        if len(units) == 1:
+            ((unit, digest),) = units.items()
+            yield f"    {f'unit {unit}':<18} {_short(digest)}"
+        elif units:
+            named = ", ".join(str(unit) for unit in sorted(units)[:_MOST_UNITS])
+            more = f" and {len(units) - _MOST_UNITS} more" if len(units) > _MOST_UNITS else ""
+            yield f"    {f'{len(units)} units':<18} {named}{more}"
+
+
+def _settings(settings: list[dict[str, Any]], everything: bool) -> Iterator[str]:
+    own = [row for row in settings if row["value"] != row["default"]]
+    shown = settings if everything else own
+    yield f"with {len(settings)} settings read, {len(own)} of them not the default" + (
+        "" if everything else " (--all shows every one)"
+    )
+    width = max((len(row["setting"]) for row in shown), default=0)
+    for row in shown:
+        line = f"  {row['setting']:<{width}}  {json.dumps(row['value'], ensure_ascii=False)}"
+        if sum(other["setting"] == row["setting"] for other in settings) > 1:
+            line += f"   for {', '.join(row['sessions'] or ['the study'])}"
+        elif row["value"] != row["now"]:
+            line += f"   (the configuration now says {json.dumps(row['now'], ensure_ascii=False)})"
+        yield line + (f"   {row['line']}" if row["line"] else "")
+
+
+def _keys(keys: dict[str, Any]) -> str:
+    return "".join(f", {name} {value}" for name, value in keys.items())
+
+
+def _short(identifier: str) -> str:
+    return identifier.rpartition(":")[2][:12]
+
+
+def _software_order(name: str) -> tuple[int, str]:
+    return (("odograph", "python").index(name) if name in ("odograph", "python") else 2, name)
