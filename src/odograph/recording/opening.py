@@ -98,7 +98,7 @@ def open_recording(path: str | Path, settings: IntakeSettings) -> Iterator[OpenR
     pynwb = _import_pynwb()
     with warnings.catch_warnings():
         warnings.simplefilter("ignore")
-        io, nwbfile = _read(pynwb, path)
+        io, nwbfile = _read(pynwb, path, links)
         try:
             opened = OpenRecording(
                 path, nwbfile, facts, _places(io, nwbfile), tuple(link.place for link in links.missing)
@@ -236,7 +236,7 @@ def _check_links(path: Path, settings: IntakeSettings) -> Links:
     return links
 
 
-def _read(pynwb: Any, path: Path) -> tuple[Any, Any]:
+def _read(pynwb: Any, path: Path, links: Links) -> tuple[Any, Any]:
     io = None
     try:
         io = pynwb.NWBHDF5IO(path, "r", load_namespaces=True)
@@ -245,16 +245,23 @@ def _read(pynwb: Any, path: Path) -> tuple[Any, Any]:
         # pynwb and hdmf raise many kinds for a malformed file, down to KeyError and TypeError.
         if io is not None:
             io.close()
-        place = re.search(r"\(at (root\S*?)\)|'(root/[^']+)'|(root/\S+)", str(error))
-        found_at = next((part for part in place.groups() if part), "") if place else ""
+        place = re.search(r"root/([^\s'\")]+)", str(error))
+        lost = f"; {len(links.missing)} link(s) of the file lead nowhere" if links.missing else ""
         raise InputError(
-            f"malformed NWB: {type(error).__name__}: {_first_line(error)}",
+            f"malformed NWB: {_reason(error)}{lost}",
             file=str(path),
-            place=found_at.removeprefix("root").strip("/") or None,
+            place=place.group(1) if place else None,
             expected="a file that pynwb can read",
-            remedy="run `pynwb-validate` on it and mend the object it names; every part of the file has to "
-            "be readable",
+            remedy=("put the linked files back, or " if lost else "")
+            + "run `pynwb-validate` on the file and mend the object it names; every part has to be readable",
         ) from error
+
+
+def _reason(error: BaseException) -> str:
+    """What hdmf says went wrong, without the dump of the object that it puts before it."""
+    _, cut, cause = str(error).rpartition("due to:")
+    text = (cause.strip(" )\"'") if cut else _first_line(error)).split("\n")[0]
+    return f"{type(error).__name__}: {text[:240]}"
 
 
 def _places(io: Any, nwbfile: Any) -> dict[str, Any]:
