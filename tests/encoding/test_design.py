@@ -3,7 +3,8 @@
 import numpy as np
 import pytest
 
-from odograph.encoding.design import make_folds, model_name, prepare_session, restrict
+from odograph.encoding.design import model_name, prepare_session, restrict
+from odograph.encoding.folds import make_folds
 from odograph.errors import InputError
 from odograph.settings.encoding import EncodingSettings, TermSettings
 

@@ -3,7 +3,8 @@
 Data: yearly numbers of coal-mining disasters 1851-1962 (Jarrett 1979, Biometrika 66:191; data set `coal` of
 the R package boot). Model: 20 cubic B-splines on uniform knots with second-difference penalty, log link.
 mgcv's `bam(method="fREML")` has the fixed point of the generalized Fellner-Schall update; its strengths
-divide by 16 in the scale of plain second differences. `gam(method="REML")` gives the score at its own optimum.
+divide by 16 in the scale of plain second differences. `gam(method="REML")` gives the score at its own
+optimum.
 """
 
 import numpy as np
@@ -11,9 +12,10 @@ import pytest
 from scipy.special import gammaln, xlogy
 
 from odograph.encoding.bases import Coordinates, _diagonalise, open_basis
-from odograph.encoding.design import RowTable, Term
+from odograph.encoding.design import RowTable
 from odograph.encoding.fit import fit_model
 from odograph.encoding.layout import Workspace, make_layout
+from odograph.encoding.terms import Term
 
 COUNTS = np.array(
     list(

@@ -16,7 +16,7 @@ import numpy as np
 from odograph.descriptors.information import information_bits_per_spike
 from odograph.encoding import design as design_module
 from odograph.encoding.curves import seconds_per_cell, tuning_curves
-from odograph.encoding.design import SessionDesign, Term, model_name
+from odograph.encoding.design import SessionDesign, model_name
 from odograph.encoding.evaluate import Score, evaluate, fold_spikes
 from odograph.encoding.layout import Workspace, cell_basis, make_layout
 from odograph.encoding.select import best_score, select_model
@@ -24,6 +24,7 @@ from odograph.encoding.shapes import curve_shape
 from odograph.encoding.shifts import draw_shifts, residuals, shift_test
 from odograph.encoding.slow_fast import NOT_AVAILABLE, compare_halves, running_halves
 from odograph.encoding.spikes import UnitSpikes, bin_spikes
+from odograph.encoding.terms import Term
 from odograph.settings.encoding import EncodingSettings
 
 prepare_session = design_module.prepare_session

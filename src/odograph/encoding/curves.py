@@ -9,10 +9,11 @@ import numpy as np
 from scipy.stats import norm
 
 from odograph.descriptors.rate_map import circular_rate, line_rate, smoothed_rate
-from odograph.encoding.design import SessionDesign, Term
+from odograph.encoding.design import SessionDesign
 from odograph.encoding.fit import Fit
 from odograph.encoding.layout import Layout, cell_basis
 from odograph.encoding.spikes import UnitSpikes
+from odograph.encoding.terms import Term
 
 BAND = float(norm.ppf(0.975))
 OBSERVED_SIGMA_CELLS = 1.5

@@ -13,50 +13,10 @@ from itertools import combinations
 
 import numpy as np
 
-from odograph.encoding.bases import (
-    Coordinates,
-    SparseBasis,
-    curve_coordinates,
-    cyclic_basis,
-    level_coordinates,
-    open_basis,
-    surface_coordinates,
-    tensor_basis,
-)
+from odograph.encoding.folds import Folds, make_folds
+from odograph.encoding.terms import Term, make_drift, make_term
 from odograph.errors import InputError
-from odograph.settings.encoding import EncodingSettings, TermSettings
-
-DRIFT = "drift"
-
-
-@dataclass(frozen=True)
-class Term:
-    """One term on its grid.
-
-    Attributes
-    ----------
-    basis : SparseBasis
-        Evaluated at the cells' centres, (n_cells, support).
-    cell : ndarray of int32, (n_bins,)
-        The cell of every valid bin.
-    axes : tuple of ndarray
-        Cell centres along each axis, in the covariate's unit; a plane's cells run over y first, then x.
-    spans : tuple of (low, high)
-        Range of each axis.
-    """
-
-    name: str
-    kind: str
-    columns: tuple[str, ...]
-    basis: SparseBasis
-    coordinates: Coordinates
-    cell: np.ndarray
-    axes: tuple[np.ndarray, ...]
-    spans: tuple[tuple[float, float], ...]
-
-    @property
-    def n_cells(self) -> int:
-        return len(self.basis.columns)
+from odograph.settings.encoding import EncodingSettings
 
 
 @dataclass(frozen=True)
@@ -77,31 +37,6 @@ class RowTable:
     cells: np.ndarray
     seconds: np.ndarray
     group: np.ndarray
-
-
-@dataclass(frozen=True)
-class Folds:
-    """Interleaved contiguous blocks with guard gaps.
-
-    A bin's group says which fold holds it out and, near a block's border, which neighbouring fold's training
-    leaves it out as well: group = fold + n_folds * (0, or 1 + the neighbour's fold).
-    """
-
-    n_folds: int
-    group: np.ndarray
-
-    @property
-    def n_groups(self) -> int:
-        return self.n_folds * (self.n_folds + 1)
-
-    def training(self, fold: int) -> np.ndarray:
-        """Which groups train when `fold` is held out, (n_groups,) of bool."""
-        groups = np.arange(self.n_groups)
-        return (groups % self.n_folds != fold) & (groups // self.n_folds != fold + 1)
-
-    def held_out(self, fold: int) -> np.ndarray:
-        """Which groups are scored when `fold` is held out, (n_groups,) of bool."""
-        return np.arange(self.n_groups) % self.n_folds == fold
 
 
 @dataclass(frozen=True)
@@ -175,34 +110,6 @@ def collapse(terms: list[Term], folds: Folds, bin_s: float) -> RowTable:
     return RowTable(tuple(ordered), cells, counts * bin_s, group.astype(np.int32))
 
 
-def make_folds(time_s: np.ndarray, settings: EncodingSettings) -> Folds:
-    """Cut valid time into equal blocks and deal them out in turn.
-
-    Parameters
-    ----------
-    time_s : ndarray, (n_bins,)
-        Centres of the valid bins, ascending.
-    settings : EncodingSettings
-        Uses `folds`, `blocks_per_fold` and `guard_s`.
-    """
-    n_blocks = settings.folds * settings.blocks_per_fold
-    # Blocks hold equal amounts of valid time, so that no fold is empty however the mask lies.
-    block = (np.arange(len(time_s)) * n_blocks) // max(len(time_s), 1)
-    fold = block % settings.folds
-    first = np.searchsorted(block, np.arange(n_blocks))
-    last = np.searchsorted(block, np.arange(n_blocks), side="right") - 1
-    guard = np.zeros(len(time_s), dtype=np.int64)
-    half = (time_s[last] - time_s[first]) / 2
-    for b in range(n_blocks):
-        inside = slice(first[b], last[b] + 1)
-        t, reach = time_s[inside], min(settings.guard_s, half[b])
-        if b > 0:
-            guard[inside][t - time_s[last[b - 1]] <= reach] = 1 + (b - 1) % settings.folds
-        if b + 1 < n_blocks:
-            guard[inside][time_s[first[b + 1]] - t <= reach] = 1 + (b + 1) % settings.folds
-    return Folds(settings.folds, fold + settings.folds * guard)
-
-
 def prepare_session(behaviour: dict[str, np.ndarray], settings: EncodingSettings) -> SessionDesign:
     """Discretise a session's behaviour table.
 
@@ -249,7 +156,7 @@ def _discretise(behaviour, time_s, valid, bin_s, settings) -> SessionDesign:
             remedy="look at the audit of the behaviour stage: too much was dropped",
         )
     columns = {name: np.asarray(behaviour[name]) for term in settings.terms for name in term.columns}
-    terms = tuple(_term(term, [columns[name][valid] for name in term.columns]) for term in settings.terms)
+    terms = tuple(make_term(term, [columns[name][valid] for name in term.columns]) for term in settings.terms)
     speed = np.asarray(behaviour.get("speed_cm_s", np.empty(0)), dtype=float)
     if len(speed):
         columns["speed_cm_s"] = speed
@@ -259,110 +166,9 @@ def _discretise(behaviour, time_s, valid, bin_s, settings) -> SessionDesign:
         edges_s=edges,
         valid=valid,
         terms=terms,
-        drift=_drift(time_s[valid], settings) if settings.drift else None,
+        drift=make_drift(time_s[valid], settings) if settings.drift else None,
         folds=make_folds(time_s[valid], settings),
         speed_cm_s=speed[valid] if len(speed) else speed,
         columns=columns,
         settings=settings,
-    )
-
-
-def _span(values: np.ndarray, term: TermSettings) -> tuple[float, float]:
-    """The configured range, else the data's, without the outermost fractions of a percent of the time."""
-    if term.kind == "plane":
-        low, high = np.quantile(values, [0.001, 0.999])
-    else:
-        low, high = np.quantile(values, [0.0025, 0.995])
-    low = float(low) if term.low is None else term.low
-    high = float(high) if term.high is None else term.high
-    if not high > low:
-        raise InputError(
-            f"the covariate of the term '{term.name}' is constant ({low:g})",
-            place=", ".join(term.columns),
-            expected="a covariate that varies",
-            remedy="leave the term out, or check the column",
-        )
-    return low, high
-
-
-def _axis(values: np.ndarray, low: float, high: float, cells: int) -> tuple[np.ndarray, np.ndarray]:
-    width = (high - low) / cells
-    index = np.clip(((values - low) / width).astype(np.int64), 0, cells - 1)
-    return index, low + width * (np.arange(cells) + 0.5)
-
-
-def _term(term: TermSettings, values: list[np.ndarray]) -> Term:
-    make = {"plane": _plane, "line": _line, "circle": _circle, "category": _category}[term.kind]
-    basis, coordinates, cell, axes, spans = make(term, values)
-    return Term(
-        term.name, term.kind, tuple(term.columns), basis, coordinates, cell.astype(np.int32), axes, spans
-    )
-
-
-def _plane(term, values):
-    spans = tuple(_span(v, term) for v in values)
-    (ix, x), (iy, y) = (_axis(v, *span, term.cells) for v, span in zip(values, spans, strict=True))
-    gx, gy = np.meshgrid(x, y)  # (y, x): maps come out as images
-    basis = tensor_basis(
-        open_basis(gx.ravel(), *spans[0], term.basis_size), open_basis(gy.ravel(), *spans[1], term.basis_size)
-    )
-    return basis, surface_coordinates(term.basis_size), iy * term.cells + ix, (x, y), spans
-
-
-def _line(term, values):
-    span = _span(values[0], term)
-    cell, centres = _axis(values[0], *span, term.cells)
-    return (
-        open_basis(centres, *span, term.basis_size),
-        curve_coordinates(term.basis_size),
-        cell,
-        (centres,),
-        (span,),
-    )
-
-
-def _circle(term, values):
-    period = 2 * np.pi
-    cell, centres = _axis(np.mod(values[0], period), 0.0, period, term.cells)
-    coordinates = curve_coordinates(term.basis_size, cyclic=True)
-    return cyclic_basis(centres, term.basis_size), coordinates, cell, (centres,), ((0.0, period),)
-
-
-def _category(term, values):
-    levels, cell = np.unique(values[0], return_inverse=True)
-    if len(levels) < 2:
-        raise InputError(
-            f"the covariate of the term '{term.name}' has a single level",
-            place=term.columns[0],
-            expected="at least two levels",
-            remedy="leave the term out, or check the column",
-        )
-    n = len(levels)
-    basis = SparseBasis(np.arange(n, dtype=np.int32)[:, None], np.ones((n, 1)), n)
-    return (
-        basis,
-        level_coordinates(n),
-        cell,
-        (levels.astype(float),),
-        ((float(levels[0]), float(levels[-1])),),
-    )
-
-
-def _drift(time_s: np.ndarray, settings: EncodingSettings) -> Term:
-    low, high = float(time_s[0]), float(time_s[-1])
-    size = max(4, int(np.ceil((high - low) / settings.drift_knot_s)) + 3)
-    cells = settings.folds * settings.blocks_per_fold
-    while (high - low) / cells > settings.drift_knot_s / 4:
-        cells *= 2
-    cell, centres = _axis(time_s, low, high, cells)
-    basis = open_basis(centres, low, high, size)
-    return Term(
-        DRIFT,
-        "line",
-        ("time_s",),
-        basis,
-        curve_coordinates(size),
-        cell.astype(np.int32),
-        (centres,),
-        ((low, high),),
     )

@@ -120,6 +120,140 @@ def information(
                 offsets[u],
                 hessian,
             )
+    fill_symmetric(hessian)
+
+
+@njit(cache=True, nogil=True)
+def plane_information(
+    cells,
+    mu,
+    row_start,
+    x_columns,
+    x_weights,
+    y_columns,
+    y_weights,
+    n_x,
+    n_y,
+    padded_start,
+    padded_weights,
+    padded_column,
+    cell_start,
+    cell_end,
+    offsets,
+    sizes,
+    hessian,
+    sums,
+):
+    """X'WX of a model whose first term is a plane, and the sums of `mu` per cell; both overwritten.
+
+    Rows are sorted by the plane's cell (y first, then x), so each cell's rows, row_start[c]:row_start[c + 1],
+    are met once: what they give to the other terms' columns is gathered in a short vector, and the plane's
+    tensor basis is applied one axis at a time. Arguments as for `information`; x_columns/x_weights and
+    y_columns/y_weights are the plane's margins with n_x and n_y splines. The other terms' bases come padded
+    (`pad_bases`): four adjacent columns from padded_start[k] on for cell k, and the column among those of the
+    other terms that each padded column stands for.
+    """
+    hessian[:, :] = 0.0
+    sums[:] = 0.0
+    n_terms = cells.shape[0]
+    first = offsets[0] + sizes[0]  # columns of the other terms follow those of the plane
+    n_other = hessian.shape[0] - first
+    beside = np.empty(n_other + 1)
+    padded = np.zeros(len(padded_column))
+    along = np.empty((n_x, n_other + 1))
+    band = np.empty((n_x, n_x))
+    for iy in range(len(y_columns)):
+        along[:, :] = 0.0
+        band[:, :] = 0.0
+        for ix in range(len(x_columns)):
+            c = iy * len(x_columns) + ix
+            if row_start[c] == row_start[c + 1]:
+                continue
+            total = 0.0
+            for r in range(row_start[c], row_start[c + 1]):
+                m = mu[r]
+                total += m
+                for t in range(1, n_terms):
+                    k = cell_start[t] + cells[t, r]
+                    sums[k] += m
+                    p = padded_start[k]
+                    padded[p] += m * padded_weights[k, 0]
+                    padded[p + 1] += m * padded_weights[k, 1]
+                    padded[p + 2] += m * padded_weights[k, 2]
+                    padded[p + 3] += m * padded_weights[k, 3]
+            beside[:] = 0.0
+            for p in range(len(padded)):
+                beside[padded_column[p]] += padded[p]
+                padded[p] = 0.0
+            beside[n_other] = total
+            sums[c] = total
+            for i in range(4):
+                a, w = x_columns[ix, i], x_weights[ix, i]
+                for k in range(n_other + 1):
+                    along[a, k] += w * beside[k]
+                for j in range(4):
+                    band[a, x_columns[ix, j]] += w * total * x_weights[ix, j]
+        for i in range(4):
+            b, w = y_columns[iy, i], y_weights[iy, i]
+            for a in range(n_x):
+                row = offsets[0] + a * n_y + b
+                for k in range(n_other):
+                    hessian[row, first + k] += w * along[a, k]
+                hessian[row, 0] += w * along[a, n_other]
+                for j in range(4):
+                    v = w * y_weights[iy, j]
+                    column = offsets[0] + y_columns[iy, j]
+                    for d in range(max(0, a - 3), min(n_x, a + 4)):
+                        hessian[row, column + d * n_y] += v * band[a, d]
+    hessian[0, 0] = 0.0
+    for c in range(cell_start[0], cell_end[0]):
+        hessian[0, 0] += sums[c]
+
+
+@njit(cache=True, nogil=True)
+def joint_histograms(cells, mu, n_cells, start, out):
+    """Joint sums of `mu` over the cells of every pair of terms but the first, laid end to end in `out`.
+
+    start (n_terms, n_terms): where the pair (t, u), 0 < t < u, begins; n_cells (n_terms,).
+    """
+    out[:] = 0.0
+    n_terms = cells.shape[0]
+    for t in range(1, n_terms):
+        for u in range(t + 1, n_terms):
+            base, width = start[t, u], n_cells[u]
+            for r in range(cells.shape[1]):
+                out[base + cells[t, r] * width + cells[u, r]] += mu[r]
+
+
+@njit(cache=True, nogil=True)
+def small_blocks(
+    histograms, start, sums, cell_start, cell_end, columns, weights, supports, offsets, sizes, hessian
+):
+    """Blocks of X'WX among all terms but the first, from their joint histograms; completes the matrix."""
+    n_terms = len(cell_start)
+    for t in range(1, n_terms):
+        a, z, s = cell_start[t], cell_end[t], supports[t]
+        _diagonal_block(sums[a:z], columns[a:z, :s], weights[a:z, :s], offsets[t], hessian)
+        for u in range(t + 1, n_terms):
+            b, y, q = cell_start[u], cell_end[u], supports[u]
+            row = np.empty(sizes[u])
+            for c in range(z - a):
+                row[:] = 0.0
+                for d in range(y - b):
+                    value = histograms[start[t, u] + c * (y - b) + d]
+                    if value != 0.0:
+                        for j in range(q):
+                            row[columns[b + d, j]] += value * weights[b + d, j]
+                for i in range(s):
+                    w, line = weights[a + c, i], offsets[t] + columns[a + c, i]
+                    for k in range(sizes[u]):
+                        hessian[line, offsets[u] + k] += w * row[k]
+    fill_symmetric(hessian)
+
+
+@njit(cache=True, nogil=True)
+def fill_symmetric(hessian):
+    """Complete a matrix of which each pair of mirrored entries has one filled, or both alike."""
     n = hessian.shape[0]
     for i in range(n):
         for j in range(i):

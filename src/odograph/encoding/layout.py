@@ -8,7 +8,8 @@ import numpy as np
 
 from odograph.encoding import kernels
 from odograph.encoding.bases import Coordinates
-from odograph.encoding.design import RowTable, Term
+from odograph.encoding.design import RowTable
+from odograph.encoding.terms import Term
 
 
 @dataclass(frozen=True)
@@ -113,6 +114,40 @@ def from_coordinates(coordinates: Coordinates, values: np.ndarray) -> np.ndarray
     return (first @ values.reshape(len(first), len(second)) @ second.T).ravel()
 
 
+def _joint_places(n_cells: list[int]) -> tuple[np.ndarray, int]:
+    """Where each pair of terms but the first begins in an array of their joint histograms, and its length."""
+    start, size = np.zeros((len(n_cells), len(n_cells)), dtype=np.int64), 0
+    for t in range(1, len(n_cells)):
+        for u in range(t + 1, len(n_cells)):
+            start[t, u] = size
+            size += n_cells[t] * n_cells[u]
+    return start, size
+
+
+def pad_bases(layout: Layout) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """The bases of all terms but the first as four adjacent columns a cell; cyclic ones repeat their start.
+
+    Returns
+    -------
+    start : ndarray of int64, (all cells,)
+        First of the four padded columns.
+    weights : ndarray, (all cells, 4)
+    column : ndarray of int64, (n_padded,)
+        The column that each padded one stands for, counted from the first column after the plane's.
+    """
+    start = np.zeros(len(layout.columns), dtype=np.int64)
+    weights = np.zeros((len(layout.columns), 4))
+    column: list[int] = []
+    base = 0
+    for t in range(1, len(layout.cell_start)):
+        cells, size = slice(layout.cell_start[t], layout.cell_end[t]), int(layout.spline_count[t])
+        start[cells] = len(column) + layout.columns[cells, 0]
+        weights[cells, : layout.support[t]] = layout.weights[cells, : layout.support[t]]
+        column += [base + i % size for i in range(size + 3)]
+        base += size
+    return start, weights, np.array(column, dtype=np.int64)
+
+
 class Workspace:
     """The buffers of one model, reused over units and folds; not to be shared between threads."""
 
@@ -125,6 +160,20 @@ class Workspace:
         self._sums = np.empty(n_cells)
         self._splines = np.zeros(n)
         self._information = np.empty((n, n))
+        self._flat = (
+            layout.cell_start,
+            layout.cell_end,
+            layout.columns,
+            layout.weights,
+            layout.support,
+            layout.spline_start,
+        )
+        if self.terms and self.terms[0].kind == "plane":
+            first = layout.table.cells[0]
+            self._row_start = np.searchsorted(first, np.arange(self.terms[0].n_cells + 1))
+            self._joint_start, size = _joint_places([term.n_cells for term in self.terms])
+            self._joint = np.empty(size)
+            self._padded = pad_bases(layout)
 
     def expected(self, coefficients: np.ndarray, use: np.ndarray) -> float:
         """Fill `mu` (expected count per row) and `eta` (per cell); returns the expected number of spikes.
@@ -145,16 +194,7 @@ class Workspace:
             self._splines[first : first + lay.spline_count[t]] = from_coordinates(
                 term.coordinates, coefficients[lay.slices[t]]
             )
-        kernels.cell_values(
-            self._splines,
-            lay.cell_start,
-            lay.cell_end,
-            lay.columns,
-            lay.weights,
-            lay.support,
-            lay.spline_start,
-            self.eta,
-        )
+        kernels.cell_values(self._splines, *self._flat, self.eta)
         factor = np.exp(self.eta)
         factor[: lay.cell_end[0]] *= np.exp(coefficients[0])
         return kernels.expected_counts(
@@ -166,27 +206,53 @@ class Workspace:
         lay, n = self.layout, self.layout.n_coordinates
         if not self.terms:
             return np.array([total]), np.array([[total]])
-        kernels.cell_sums(lay.table.cells, self.mu, lay.cell_start, self._sums)
+        if self.terms[0].kind == "plane":
+            self._plane_information()
+        else:
+            kernels.cell_sums(lay.table.cells, self.mu, lay.cell_start, self._sums)
+            kernels.information(
+                lay.table.cells,
+                self.mu,
+                total,
+                self._sums,
+                *self._flat,
+                lay.spline_count,
+                self._information,
+            )
         gradient = self.project(self._sums, total)
-        kernels.information(
-            lay.table.cells,
-            self.mu,
-            total,
-            self._sums,
-            lay.cell_start,
-            lay.cell_end,
-            lay.columns,
-            lay.weights,
-            lay.support,
-            lay.spline_start,
-            lay.spline_count,
-            self._information,
-        )
         half = np.empty((n, lay.n_splines))
         self._reduce(self._information, half)
         whole = np.empty((n, n))
         self._reduce(np.ascontiguousarray(half.T), whole)
         return gradient, whole
+
+    def _plane_information(self) -> None:
+        lay = self.layout
+        x, y = self.terms[0].margins
+        kernels.plane_information(
+            lay.table.cells,
+            self.mu,
+            self._row_start,
+            x.columns,
+            x.weights,
+            y.columns,
+            y.weights,
+            x.size,
+            y.size,
+            *self._padded,
+            lay.cell_start,
+            lay.cell_end,
+            lay.spline_start,
+            lay.spline_count,
+            self._information,
+            self._sums,
+        )
+        kernels.joint_histograms(
+            lay.table.cells, self.mu, lay.cell_end - lay.cell_start, self._joint_start, self._joint
+        )
+        kernels.small_blocks(
+            self._joint, self._joint_start, self._sums, *self._flat, lay.spline_count, self._information
+        )
 
     def _reduce(self, array: np.ndarray, out: np.ndarray) -> None:
         out[0] = array[0]
@@ -201,16 +267,7 @@ class Workspace:
         out[0] = total
         if self.terms:
             splines = np.empty(lay.n_splines)
-            kernels.column_sums(
-                cell_totals,
-                lay.cell_start,
-                lay.cell_end,
-                lay.columns,
-                lay.weights,
-                lay.support,
-                lay.spline_start,
-                splines,
-            )
+            kernels.column_sums(cell_totals, *self._flat, splines)
             for t, term in enumerate(self.terms):
                 first = lay.spline_start[t]
                 out[lay.slices[t]] = to_coordinates(

@@ -17,10 +17,11 @@ import numpy as np
 from numba import njit
 from scipy import linalg
 
-from odograph.encoding.design import SessionDesign, Term
+from odograph.encoding.design import SessionDesign
 from odograph.encoding.fit import Fit
 from odograph.encoding.layout import Workspace
 from odograph.encoding.spikes import UnitSpikes
+from odograph.encoding.terms import Term
 
 
 @njit(cache=True, nogil=True)

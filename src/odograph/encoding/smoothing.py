@@ -115,7 +115,7 @@ class _Solved:
 
     @cached_property
     def share(self) -> np.ndarray:
-        """Each penalty's share of S_lam by coordinate, (n_penalties, n); no coordinate has two terms' penalties."""
+        """Each penalty's share of S_lam by coordinate, (n_penalties, n); terms share no coordinates."""
         return np.divide(self.weighted, self.total, out=np.zeros_like(self.weighted), where=self.total > 0)
 
     @cached_property

@@ -6,7 +6,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from odograph.encoding.design import SessionDesign, Term
+from odograph.encoding.design import SessionDesign
+from odograph.encoding.terms import Term
 
 
 @dataclass(frozen=True)
