@@ -4,11 +4,13 @@ from __future__ import annotations
 
 import math
 import textwrap
+from collections.abc import Mapping
 from typing import Any
 
 import numpy as np
+import pandas as pd
 
-from odograph.figures.colours import PATH, SOFT_INK
+from odograph.figures.colours import PATH, SOFT_INK, term_label
 
 Extent = tuple[float, float, float, float]
 
@@ -102,3 +104,26 @@ def say(axes: Any, text: str, columns: int = 34) -> None:
         0.0, 0.92, wrapped(text, columns, 8), transform=axes.transAxes, va="top", ha="left", color=SOFT_INK,
         linespacing=1.35,
     )  # fmt: skip
+
+
+def column(behaviour: pd.DataFrame, name: str) -> np.ndarray:
+    """A column of the behaviour as floats; NaN where there is no such column."""
+    return behaviour[name].to_numpy(float) if name in behaviour else np.full(len(behaviour), np.nan)
+
+
+def valid_bins(behaviour: pd.DataFrame) -> np.ndarray:
+    """Which bins of the behaviour are valid, (n_bins,) bool."""
+    return behaviour["valid"].to_numpy(bool) if "valid" in behaviour else np.ones(len(behaviour), bool)
+
+
+def unit_status(row: Mapping[str, Any]) -> str:
+    """A unit's status: fitted, too_few_spikes or failed."""
+    return str(row.get("status") or "fitted")
+
+
+def absent(row: Mapping[str, Any], what: str) -> str:
+    """Why there is no fit of `what` for this unit."""
+    status = unit_status(row)
+    if status == "fitted":
+        return f"There is no fit of {term_label(what)} for this unit."
+    return "Not fitted: too few spikes." if status == "too_few_spikes" else "Not fitted: the fit failed."

@@ -47,21 +47,28 @@ def draw_session_quality(
     Returns
     -------
     Figure
-        7.2 by 6.2 inches.
+        7.2 inches wide, 6.2 high where all was computed and lower for a session that failed before.
     """
     documents = {"intake": inventory, "sync": clock or {}, "behaviour": audit or {}}
     corners = (inventory.get("arena") or {}).get("corners_m")
     with figure_style(settings):
-        figure = new_figure(WIDTH_IN, HEIGHT_IN, settings)
+        seen = _has(behaviour, "time_s", "valid")
+        matched = residuals is not None and len(residuals) > 0
+        # What was never computed takes no room: the reason stands where the picture would be.
+        base = 0.0 if seen else -2.5 if matched else -3.6
+        figure = new_figure(WIDTH_IN, HEIGHT_IN + base, settings)
         _draw_head(figure, inventory, documents)
-        _draw_findings(figure, documents)
-        residual_axes = axes_at(figure, 0.66, 3.2, 2.5, 1.5)
-        _draw_residuals(residual_axes, documents["sync"], residuals)
-        _draw_strip(axes_at(figure, 0.5, 2.42, 6.5, 0.17), behaviour, documents["behaviour"])
-        _draw_occupancy(figure, behaviour, corners, settings)
-        _draw_speed(axes_at(figure, 2.66, 0.5, 1.06, 0.98), behaviour)
-        _draw_direction(axes_at(figure, 4.32, 0.5, 1.06, 0.98), behaviour)
-        _draw_rates(axes_at(figure, 5.98, 0.5, 1.06, 0.98), inventory)
+        if not seen and not matched:
+            _draw_findings(axes_at(figure, 0.1, 0.25, 7.0, 1.75), documents, 130)
+            return figure
+        _draw_findings(axes_at(figure, 3.6, 3.0 + base, 3.5, 2.55), documents, 66)
+        _draw_residuals(axes_at(figure, 0.66, 3.2 + base, 2.5, 1.5), documents["sync"], residuals)
+        if seen:
+            _draw_strip(axes_at(figure, 0.5, 2.42, 6.5, 0.17), behaviour)
+            _draw_occupancy(figure, behaviour, corners, settings)
+            _draw_speed(axes_at(figure, 2.66, 0.5, 1.06, 0.98), behaviour)
+            _draw_direction(axes_at(figure, 4.32, 0.5, 1.06, 0.98), behaviour)
+            _draw_rates(axes_at(figure, 5.98, 0.5, 1.06, 0.98), inventory)
     return figure
 
 
@@ -75,7 +82,7 @@ def _draw_head(
     figure: Figure, inventory: Mapping[str, Any], documents: Mapping[str, Mapping[str, Any]]
 ) -> None:
     verdict = worst_verdict(documents)
-    top = HEIGHT_IN - 0.16
+    top = figure.get_size_inches()[1] - 0.16
     text_at(figure, 0.1, top, str(inventory.get("session")), va="top", fontsize=11, weight="bold")
     text_at(
         figure, WIDTH_IN - 0.12, top - 0.01, f" {verdict} ", va="top", ha="right", fontsize=10, weight="bold",
@@ -98,12 +105,14 @@ def _draw_head(
     text_at(figure, 0.1, top - 0.24, wrapped(line, 120, 1), va="top", color=SOFT_INK)
 
 
-def _draw_findings(figure: Figure, documents: Mapping[str, Mapping[str, Any]]) -> None:
-    axes = axes_at(figure, 3.6, 3.0, 3.5, 2.6)
+def _draw_findings(axes: Any, documents: Mapping[str, Mapping[str, Any]], columns: int) -> None:
+    """The stages' verdicts, then what was found, the worst first, as many as there is room for."""
+    figure_width, figure_height = axes.figure.get_size_inches()
+    box = axes.get_position()
     axes.set_axis_off()
-    axes.set_xlim(0, 3.5)
-    axes.set_ylim(0, 2.6)
-    y = 2.6
+    axes.set_xlim(0, box.width * figure_width)
+    axes.set_ylim(0, box.height * figure_height)
+    y = box.height * figure_height
     axes.text(0, y, "checks", va="top", weight="bold", fontsize=8)
     y -= 0.22
     told = []
@@ -122,7 +131,7 @@ def _draw_findings(figure: Figure, documents: Mapping[str, Mapping[str, Any]]) -
         text = f"{stage}, {level}: {finding.get('found')}{where}"
         if finding.get("remedy") and level == "fail":
             text += f". What to do: {finding['remedy']}"
-        lines = wrapped(text, 66, 6 if place == 0 else 3)
+        lines = wrapped(text, columns, 6 if place == 0 else 3)
         height = 0.125 * (lines.count("\n") + 1) + 0.06
         if y - height < 0.08 and place + 1 < len(told):
             axes.text(0, y, f"and {len(told) - place} more, in the report", va="top", color=SOFT_INK)
@@ -199,11 +208,7 @@ def _has(behaviour: pd.DataFrame | None, *columns: str) -> bool:
     return behaviour is not None and len(behaviour) > 1 and all(column in behaviour for column in columns)
 
 
-def _draw_strip(axes: Any, behaviour: pd.DataFrame | None, audit: Mapping[str, Any]) -> None:
-    axes.set_title("valid time")
-    if not _has(behaviour, "time_s", "valid"):
-        say(axes, "There is no behaviour of this session.", 80)
-        return
+def _draw_strip(axes: Any, behaviour: pd.DataFrame) -> None:
     time = behaviour["time_s"].to_numpy(float)
     valid = behaviour["valid"].to_numpy(bool)
     reason = behaviour["reason"].astype(str).to_numpy() if "reason" in behaviour else np.full(len(time), "")

@@ -205,7 +205,9 @@ def draw_shares(axes: Any, rows: list[dict[str, Any]], colours: list[str], label
     for place, (row, colour) in enumerate(zip(rows, colours, strict=True)):
         y = len(rows) - 1 - place
         whole, animals = row["all"], row["animals"]
-        if most == 1 and np.isfinite(whole["low"]):
+        if most == 1:
+            # One animal is the whole: its own interval is all there is.
+            whole = {**whole, "low": animals[0]["low"], "high": animals[0]["high"]}
             animals = []
         above = y + 0.2 if animals else y
         axes.barh(y, 100 * whole["share"], height=0.8, color=colour, alpha=0.14, lw=0, zorder=1)
