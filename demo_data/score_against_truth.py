@@ -14,7 +14,7 @@ from dataclasses import dataclass
 from pathlib import Path
 
 import pandas as pd
-from truth_table import TRUTH_COLUMNS
+from truth_table import TRUTH_COLUMNS, read_truth
 
 from odograph.population.intervals import wilson_interval
 
@@ -22,6 +22,7 @@ VARIABLES = ("position", "head_direction", "speed")
 SHARPENING = ("position", "head_direction")
 FEWEST_FOUND = 0.90
 MOST_FALSE = 0.05
+DRIFT_TOLERANCE_PPM = 0.1
 RECORDINGS = Path(__file__).with_name("recordings")
 _TEXT = ("session", "kind", "position_shape", "speed_shape", "region")
 
@@ -125,6 +126,27 @@ def _sharpening(joined: pd.DataFrame, truly: pd.DataFrame) -> list[Share]:
     return shares
 
 
+def score_clocks(results: Path, clocks_file: Path) -> list[Share]:
+    """How many camera clocks got the verdict they deserve, and the right drift, of the sessions that ran.
+
+    A clock that leaps must fail; of a sound one the drift must be right to `DRIFT_TOLERANCE_PPM`.
+    """
+    judged, measured = [], []
+    for row in read_truth(clocks_file) if clocks_file.is_file() else []:
+        document = results / "sessions" / row["session"] / "sync" / "clock.json"
+        if not document.is_file():
+            continue
+        clock = json.loads(document.read_text(encoding="utf-8"))
+        sound = float(row["clock_jump_s"]) == 0
+        judged.append((clock["verdict"] != "fail") == sound)
+        if sound and clock["drift_ppm"] is not None:
+            measured.append(abs(clock["drift_ppm"] - float(row["drift_ppm"])) <= DRIFT_TOLERANCE_PPM)
+    return [
+        Share("camera clocks with the verdict they deserve", sum(judged), len(judged)),
+        Share(f"  drift right to {DRIFT_TOLERANCE_PPM:g} ppm, sound clocks", sum(measured), len(measured)),
+    ]
+
+
 def mistakes(joined: pd.DataFrame) -> list[str]:
     """One line for each variable of a unit that was missed or found wrongly."""
     lines, found = [], _found(joined)
@@ -193,7 +215,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
         print(f"score_against_truth.py: {error}", file=sys.stderr)
         return 66
     joined = join_truth(units, truth, options.fewest_spikes)
-    shares = score(joined)
+    shares = score(joined) + score_clocks(options.results, options.truth.with_name("clocks.tsv"))
     if joined.empty:
         print(
             f"score_against_truth.py: no unit of {options.truth} with {options.fewest_spikes} spikes or more "

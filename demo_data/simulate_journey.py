@@ -43,8 +43,8 @@ class Journey:
 def simulate_journey(duration_s: float, side_m: float, rng: np.random.Generator) -> Journey:
     """Walk from goal to goal, running and pausing, with a wavering heading and a scanning head.
 
-    The state is rounded at every step: without that, the last bit of a sine, which differs between
-    processors, could grow into another journey.
+    The state is rounded at every step, so that the last bit of a sine, which differs between C libraries,
+    cannot grow into another journey.
     """
     n = round(duration_s / STEP_S) + 1
     path = _walk(n, side_m, rng)

@@ -188,7 +188,7 @@ def test_files_are_made_only_when_they_are_not_current(tmp_path, capsys):
     assert main(size) == 0
     assert is_current(path, plan)
     assert not is_current(path, plans(["bracken_1"], minutes=0.5, units=5)[0])
-    assert sorted(file.name for file in tmp_path.iterdir()) == ["bracken_1.nwb", "truth.tsv"]
+    assert sorted(file.name for file in tmp_path.iterdir()) == ["bracken_1.nwb", "clocks.tsv", "truth.tsv"]
 
 
 def test_truth_keeps_the_sessions_that_have_a_recording(small_files):
@@ -196,6 +196,7 @@ def test_truth_keeps_the_sessions_that_have_a_recording(small_files):
     rows = read_truth(folder / "truth.tsv")
     assert {row["session"] for row in rows} == {"bracken_2", "teasel_2"}
     assert len(rows) == 12
+    assert [row["session"] for row in read_truth(folder / "clocks.tsv")] == ["bracken_2", "teasel_2"]
     assert rows == sorted(rows, key=lambda row: (row["session"], int(row["unit"])))
 
 

@@ -133,7 +133,7 @@ def test_last_bits_of_a_processor_do_not_grow_into_another_journey(monkeypatch):
     import simulate_journey
 
     def journey():
-        return simulate_journey.simulate_journey(600.0, ARENA_SIDE_M, generator("last bits"))
+        return simulate_journey.simulate_journey(300.0, ARENA_SIDE_M, generator("last bits"))
 
     expected = journey()
     nudged = SimpleNamespace(**vars(math))

@@ -7,7 +7,7 @@ import json
 import numpy as np
 import pandas as pd
 import pytest
-from score_against_truth import join_truth, main, mistakes, score
+from score_against_truth import join_truth, main, mistakes, score, score_clocks
 from simulate_units import unit_truths
 from study_plan import STUDY
 
@@ -147,3 +147,25 @@ def test_what_is_missing_is_said(run, perfect, tmp_path, capsys):
     broken.write_bytes(b"not a table")
     assert main([str(tmp_path / "results"), "--truth", str(tmp_path / "truth.tsv")]) == 66
     assert "cannot be read" in capsys.readouterr().err
+
+
+def test_clocks_are_scored_by_verdict_and_drift(tmp_path):
+    write_clocks = "session\tcamera_ahead_s\tdrift_ppm\tclock_jump_s\n"
+    found = {
+        "sound": (20.05, "warn"),
+        "off": (21.0, "pass"),
+        "leaps": (None, "fail"),
+        "passed": (5.0, "pass"),
+    }
+    for session, (drift_ppm, verdict) in found.items():
+        jump = 1.5 if session in ("leaps", "passed") else 0.0
+        write_clocks += f"{session}\t10.0\t20.0\t{jump}\n"
+        folder = tmp_path / "results" / "sessions" / session / "sync"
+        folder.mkdir(parents=True)
+        (folder / "clock.json").write_text(json.dumps({"drift_ppm": drift_ppm, "verdict": verdict}))
+    write_clocks += "never_run\t10.0\t20.0\t0.0\n"
+    clocks = tmp_path / "clocks.tsv"
+    clocks.write_text(write_clocks)
+    verdicts, drifts = score_clocks(tmp_path / "results", clocks)
+    assert (verdicts.k, verdicts.n) == (3, 4)
+    assert (drifts.k, drifts.n) == (1, 2)
