@@ -163,7 +163,12 @@ def as_arrow(table: Table) -> pa.Table:
     else:
         names = list(table[0]) if table else []
         result = pa.table({name: pa.array([row[name] for row in table], from_pandas=True) for name in names})
-    return result.replace_schema_metadata(None)
+    # Which of arrow's two types of text a column gets depends on the version of pandas.
+    fields = [
+        field.with_type(pa.string()) if pa.types.is_large_string(field.type) else field
+        for field in result.schema
+    ]
+    return result.cast(pa.schema(fields))
 
 
 def columns_digest(columns: Mapping[str, np.ndarray]) -> str:

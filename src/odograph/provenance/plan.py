@@ -325,6 +325,7 @@ def _write_study(
 def _tell_unreadable(entries: Mapping[str, Mapping[str, Any]]) -> None:
     bad = {session: entry["error"] for session, entry in entries.items() if entry["error"] is not None}
     for session, finding in sorted(bad.items())[:5]:
-        print(f"odograph: session {session} cannot be used: {finding['found']}", file=sys.stderr)
+        where = f"{finding['file']}: " if finding.get("file") else ""
+        print(f"odograph: session {session} cannot be used: {where}{finding['found']}", file=sys.stderr)
     if len(bad) > 5:
         print(f"odograph: ... and {len(bad) - 5} more of {len(entries)} sessions", file=sys.stderr)
