@@ -1,4 +1,4 @@
-"""Names, titles and captions of the population's figures; plain text, so that the report needs no drawing library."""
+"""Names, titles and captions of the population's figures, as plain text that needs no drawing library."""
 
 from __future__ import annotations
 
@@ -27,28 +27,29 @@ class Caption:
 CAPTIONS = {
     "composition": Caption(
         "What the units encode",
-        "Shares of the fitted units. Dot, bar and thick line: all units with the interval of the bootstrap over "
-        "animals (Wilson's where there is one animal). Small marks and thin lines: each animal with Wilson's interval "
-        "over its units. Above, units that encode a variable whatever else they encode; below, exact combinations.",
+        "Shares of the fitted units. Dot, bar and thick line: all units with the interval of the bootstrap "
+        "over animals (Wilson's where there is one animal). Small marks and thin lines: each animal with "
+        "Wilson's interval over its units. Above, units that encode a variable whatever else they encode; "
+        "below, exact combinations.",
         "population/composition.tsv",
     ),
     "speed_shapes": Caption(
         "Shape of the speed tuning",
-        "Of the units that encode running speed, the shares whose rate rises with speed, falls with it, turns, or "
-        "cannot be told. Marks and lines as in the figure of what the units encode.",
+        "Of the units that encode running speed, the shares whose rate rises with speed, falls with it, "
+        "turns, or cannot be told. Marks and lines as in the figure of what the units encode.",
         "population/speed.tsv",
     ),
     "slow_against_fast": Caption(
         "Information at slow and at fast running",
-        "Bits per spike about position and about head direction in the slow and in the fast half of running, each "
-        "unit a mark, the halves matched in occupancy and in spikes. Filled: units that encode the variable. "
-        "Above the broken line the code is sharper at fast running.",
+        "Bits per spike about position and about head direction in the slow and in the fast half of running, "
+        "each unit a mark, the halves matched in occupancy and in spikes. Filled: units that encode the "
+        "variable. Above the broken line the code is sharper at fast running.",
         "population/units.tsv",
     ),
     "held_out_scores": Caption(
         "Held-out score of every model",
-        "Log-likelihood of held-out spikes over that of a constant rate, in bits per spike: each unit a dot, with "
-        "quartiles and median; at the right, how often the model was selected.",
+        "Log-likelihood of held-out spikes over that of a constant rate, in bits per spike: each unit a dot, "
+        "with quartiles and median; at the right, how often the model was selected.",
         "population/scores.parquet",
     ),
 }

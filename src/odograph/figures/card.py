@@ -1,4 +1,4 @@
-"""The card of one unit: path and spikes, maps and curves with bands, and the held-out scores of all models."""
+"""The card of one unit: path and spikes, maps and curves with bands, held-out scores of all models."""
 
 from __future__ import annotations
 
@@ -41,7 +41,8 @@ def draw_card(
     Parameters
     ----------
     row : mapping
-        The unit's row of the units table (session, unit, n_spikes, mean_rate_hz, status, selected_model, ...).
+        The unit's row of the units table (session, unit, n_spikes, mean_rate_hz, status, selected_model,
+        ...).
     scores : DataFrame
         The unit's rows of the scores table: model, bits_per_spike, bits_per_spike_se, converged, ...
     curves : mapping of arrays
@@ -56,7 +57,8 @@ def draw_card(
     Returns
     -------
     Figure
-        7.2 by 5.35 inches, taller where more variables than the usual three were fitted. A unit that was not fitted gets a card too, which says why.
+        7.2 by 5.35 inches, taller where more variables than the usual three were fitted. A unit that was not
+        fitted gets a card too, which says why.
     """
     with figure_style(settings):
         extent = place_extent(column(behaviour, "x_m"), column(behaviour, "y_m"), arena_corners_m)
@@ -142,7 +144,7 @@ def _head(figure: Figure, row: Mapping[str, Any], behaviour: pd.DataFrame) -> No
     top = figure.get_size_inches()[1] - 0.16
     title = f"{row.get('session')}  unit {row.get('unit')}"
     outcome = _outcome(row)
-    # 0.0096 in is the mean width of a bold letter per point: a long name gets smaller letters, not a collision.
+    # 0.0096 in is the mean width of a bold letter per point; a long name gets smaller letters.
     room = WIDTH_IN - 0.5 - 9 * 0.0096 * len(outcome)
     size = float(np.clip(room / (0.0096 * len(title)), 7, 11))
     text_at(figure, 0.1, top, title, va="top", fontsize=size, weight="bold")
@@ -196,7 +198,10 @@ def _foot(figure: Figure, row: Mapping[str, Any]) -> None:
                 text += f" (slow {number(slow)}, fast {number(fast)})"
             parts.append(text)
     if unit_status(row) == "fitted":
-        key = "Curves: fitted with 95 % band; dots: observed; broken line: mean rate. Scores ± standard error; diamond: selected."
+        key = (
+            "Curves: fitted with 95 % band; dots: observed; broken line: mean rate. "
+            "Scores ± standard error; diamond: selected."
+        )
         text_at(figure, 0.1, 0.19, key, va="bottom", fontsize=7, color=SOFT_INK)
     if parts:
         text = "Information, bits per spike: " + "; ".join(parts)

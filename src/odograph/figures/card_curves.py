@@ -34,7 +34,8 @@ def _term_title(axes: Any, row: Mapping[str, Any], term: str) -> None:
         notes.append("p < 0.001" if float(p) < 0.001 else f"p = {float(p):.3f}")
     axes.set_title(term_label(term), color=term_colour(term), pad=14 if notes else None)
     axes.annotate(
-        ", ".join(notes), (0, 1), (0, 4), xycoords="axes fraction", textcoords="offset points", color=SOFT_INK,
+        ", ".join(notes), (0, 1), (0, 4), xycoords="axes fraction", textcoords="offset points",
+        color=SOFT_INK,
     )  # fmt: skip
 
 
@@ -132,7 +133,7 @@ def draw_extra(axes: Any, row: Mapping[str, Any], curves: Mapping[str, np.ndarra
 
 
 def score_rows(scores: pd.DataFrame, selected: str) -> pd.DataFrame:
-    """The models to list, singles first: all of them, or the best twelve with the selected and the constant one."""
+    """The models to list, singles first; of many the best, the selected and the constant one."""
     order = [
         "".join("0" if term in model_terms(model) else "1" for term in STANDARD_TERMS)
         for model in scores["model"]

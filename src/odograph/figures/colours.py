@@ -1,8 +1,8 @@
 """The colours and words every picture and the report share.
 
-The three variables differ in hue, in lightness and in the mark that stands for them, so that a figure can be read in
-grey and by colour-blind readers. The cyclic scale `compass` runs through lightness on one axis and through
-blue and yellow on the other: the two differences that the common colour deficiencies leave intact.
+The three variables differ in hue, in lightness and in the mark that stands for them, so that a figure can be
+read in grey and by colour-blind readers. The cyclic scale `compass` runs through lightness on one axis and
+through blue and yellow on the other: the two differences that the common colour deficiencies leave intact.
 """
 
 from __future__ import annotations

@@ -79,7 +79,8 @@ def draw_slow_against_fast(units: pd.DataFrame, speed: pd.DataFrame, settings: F
     units : DataFrame
         The population's units table with `<variable>_information_slow_bits_per_spike` and `..._fast_...`.
     speed : DataFrame
-        The population's speed table, whose rows `<variable>_information_change` give the median and its interval.
+        The population's speed table, whose rows `<variable>_information_change` give the median and its
+        interval.
     settings : FiguresSettings
         How it is drawn.
     """

@@ -35,8 +35,8 @@ def draw_session_quality(
     Parameters
     ----------
     inventory, clock, audit : mapping
-        The documents of intake, sync and behaviour: verdict, findings and their figures. `clock` and `audit` may be
-        None or hold only the verdict, as they do for a session that failed before.
+        The documents of intake, sync and behaviour: verdict, findings and their figures. `clock` and `audit`
+        may be None or hold only the verdict, as they do for a session that failed before.
     residuals : DataFrame or None
         time_s, residual_ms of every matched pulse.
     behaviour : DataFrame or None
@@ -153,11 +153,13 @@ def _draw_residuals(axes: Any, clock: Mapping[str, Any], residuals: pd.DataFrame
         facts.append(f"{number(matched, 0)} of {number(clock.get('n_frames'), 0)} frames matched")
     if clock.get("dropped_frames") is not None:
         facts.append(
-            f"{number(clock['dropped_frames'], 0)} frames dropped, {number(clock.get('missing_pulses'), 0)} pulses missing"
+            f"{number(clock['dropped_frames'], 0)} frames dropped, {number(clock.get('missing_pulses'), 0)} "
+            f"pulses missing"
         )
     rows = ["  ·  ".join(facts[:2]), "  ·  ".join(facts[2:3]), "  ·  ".join(facts[3:])]
     axes.annotate(
-        "\n".join(row for row in rows if row), (0, 1), (0, 5), xycoords="axes fraction", textcoords="offset points",
+        "\n".join(row for row in rows if row), (0, 1), (0, 5), xycoords="axes fraction",
+        textcoords="offset points",
         va="bottom", color=SOFT_INK, linespacing=1.3,
     )  # fmt: skip
     if residuals is None or not len(residuals):
@@ -215,7 +217,7 @@ def _draw_strip(axes: Any, behaviour: pd.DataFrame) -> None:
     step = float(np.median(np.diff(time[:1000])))
     label = np.where(valid, "", np.where(reason == "", "no reason given", reason))
     names = sorted(set(label) - {""}, key=lambda name: (-int((label == name).sum()), name))
-    # One column per 1200th of the session, wide enough to be seen: the commonest reason wins where any bin was dropped.
+    # A column is wide enough to be seen, and is marked where any of its bins was dropped.
     columns = min(1200, len(time))
     column = np.clip(((time - time[0]) / (time[-1] - time[0] + step) * columns).astype(int), 0, columns - 1)
     strip = np.zeros(columns)
@@ -234,7 +236,8 @@ def _draw_strip(axes: Any, behaviour: pd.DataFrame) -> None:
     axes.set_xlabel("recording time (min)")
     share = float(valid.mean())
     axes.set_title(
-        f"valid time: {number(valid.sum() * step / 60, 1)} min, {100 * share:.1f} % of {number(len(time) * step / 60, 1)} min"
+        f"valid time: {number(valid.sum() * step / 60, 1)} min, {100 * share:.1f} % of "
+        f"{number(len(time) * step / 60, 1)} min"
     )
     handles = [
         Patch(color=colour, label=f"{name.replace('_', ' ')} {number((label == name).sum() * step, 1)} s")

@@ -47,8 +47,8 @@ def animal_legend(figure: Figure, marks: dict[str, str], left_in: float, bottom_
         for name, mark in marks.items()
     ]
     figure.legend(
-        handles=handles, loc="lower left", bbox_to_anchor=(left_in / width, bottom_in / height), ncols=len(marks),
-        handletextpad=0.1, columnspacing=1.0, borderaxespad=0, borderpad=0,
+        handles=handles, loc="lower left", bbox_to_anchor=(left_in / width, bottom_in / height),
+        ncols=len(marks), handletextpad=0.1, columnspacing=1.0, borderaxespad=0, borderpad=0,
     )  # fmt: skip
 
 
@@ -152,8 +152,8 @@ def _draw_shape_sign(axes: Any, shape: str, y: float, colour: str) -> None:
     if shape not in lines:
         return
     axes.plot(
-        np.linspace(-0.33, -0.26, 3), y - 0.2 + 0.4 * np.array(lines[shape]), color=colour, lw=1.4, clip_on=False,
-        transform=axes.get_yaxis_transform(), solid_joinstyle="round",
+        np.linspace(-0.33, -0.26, 3), y - 0.2 + 0.4 * np.array(lines[shape]), color=colour, lw=1.4,
+        clip_on=False, transform=axes.get_yaxis_transform(), solid_joinstyle="round",
     )  # fmt: skip
 
 

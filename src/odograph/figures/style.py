@@ -117,7 +117,8 @@ def figure_bytes(
     figure : Figure
         Gets a small stamp with the first 12 digits of the identifier in its lower right margin.
     file_format : "png" | "svg" | "pdf"
-        PNG carries the identifier in a text chunk `odograph-record`, SVG as Dublin Core identifier, PDF as keywords.
+        PNG carries the identifier in a text chunk `odograph-record`, SVG as Dublin Core identifier, PDF as
+        keywords.
     record_id : str
         `record:` and 64 hexadecimal digits.
     title : str

@@ -46,8 +46,7 @@ class PageContext:
     verdicts : DataFrame
         The table of `odograph.population.sessions.session_table`.
     documents : dict of stage to {session: document}
-        Stages "intake", "sync", "behaviour": the sessions' documents with their findings. Missing ones are shown as
-        not run.
+        Stages "intake", "sync", "behaviour": the sessions' documents with their findings; any may be missing.
     units : DataFrame
         The population's units table.
     miniatures : mapping of (session, unit) to Miniature

@@ -8,7 +8,8 @@ from typing import Any
 from odograph.figures.colours import term_label
 
 REFERENCES = {
-    "nwb": "Rübel et al. 2022, The Neurodata Without Borders ecosystem for neurophysiological data science, eLife 11:e78362",
+    "nwb": "Rübel et al. 2022, The Neurodata Without Borders ecosystem for neurophysiological data science, "
+    "eLife 11:e78362",
     "kalman": "Kalman 1960, Journal of Basic Engineering 82:35",
     "rts": "Rauch, Tung & Striebel 1965, AIAA Journal 3:1445",
     "splines": "Eilers & Marx 1996, Statistical Science 11:89",
@@ -17,7 +18,8 @@ REFERENCES = {
     "one_se": "Breiman, Friedman, Olshen & Stone 1984, Classification and Regression Trees, section 3.4.3",
     "rank": "Davison & Hinkley 1997, Bootstrap Methods and their Application, sections 3.8 and 4.2",
     "fdr": "Benjamini & Hochberg 1995, Journal of the Royal Statistical Society B 57:289",
-    "information": "Skaggs, McNaughton, Gothard & Markus 1993, Advances in Neural Information Processing Systems 5:1030",
+    "information": "Skaggs, McNaughton, Gothard & Markus 1993, Advances in Neural Information Processing "
+    "Systems 5:1030",
     "wilson": "Wilson 1927, Journal of the American Statistical Association 22:209",
     "signed_rank": "Wilcoxon 1945, Biometrics Bulletin 1:80",
     "engine": "Mölder et al. 2021, Sustainable data analysis with Snakemake, F1000Research 10:33",
@@ -64,10 +66,10 @@ def _plain(value: Any) -> str:
 def _recordings(value: Callable[[str], Any], cite: Callable[..., str]) -> str:
     if value("intake.frame_pulses_place"):
         clock = (
-            "The camera's clock was put on the recording's clock by matching frame pulses to camera frames by the "
-            "pattern of their intervals and fitting a robust line through the pairs; sessions whose clock departed "
-            f"from the line by more than {_plain(value('sync.max_bend_ms'))} ms, or drifted by more than "
-            f"{_plain(value('sync.max_drift_ppm'))} ppm, were left out."
+            "The camera's clock was put on the recording's clock by matching frame pulses to camera frames "
+            "by the pattern of their intervals and fitting a robust line through the pairs; sessions whose "
+            f"clock departed from the line by more than {_plain(value('sync.max_bend_ms'))} ms, or drifted "
+            f"by more than {_plain(value('sync.max_drift_ppm'))} ppm, were left out."
         )
     else:
         clock = "Tracking was taken to be on the recording's clock already."
@@ -83,13 +85,14 @@ def _behaviour(value: Callable[[str], Any], cite: Callable[..., str]) -> str:
     slow = float(value("behaviour.min_speed_cm_s") or 0)
     mask = f" Bins slower than {slow:g} cm/s were masked." if slow else ""
     return (
-        f"Tracked points that implied movement faster than {_plain(value('behaviour.max_speed_m_s'))} m/s, or lay more "
-        f"than {_plain(value('behaviour.gate_sd'))} standard deviations from the prediction of a Kalman filter "
-        f"{cite('kalman')}, were dropped.{swaps} The track was smoothed {cite('rts')}, gaps of up to "
-        f"{_plain(value('behaviour.max_gap_s'))} s were interpolated, and position, head direction and running speed "
-        f"were taken from it in bins of {1000 * float(value('behaviour.bin_s')):g} ms.{mask} Sessions with less than "
-        f"{100 * float(value('behaviour.min_valid_share')):g} % or {_plain(value('behaviour.min_valid_s'))} s of valid "
-        "time were left out."
+        f"Tracked points that implied movement faster than {_plain(value('behaviour.max_speed_m_s'))} m/s, "
+        f"or lay more than {_plain(value('behaviour.gate_sd'))} standard deviations from the prediction of a "
+        f"Kalman filter {cite('kalman')}, were dropped.{swaps} The track was smoothed {cite('rts')}, gaps of "
+        f"up to {_plain(value('behaviour.max_gap_s'))} s were interpolated, and position, head direction and "
+        f"running speed were taken from it in bins of {1000 * float(value('behaviour.bin_s')):g} ms.{mask} "
+        f"Sessions with less than {100 * float(value('behaviour.min_valid_share')):g} % or "
+        f"{_plain(value('behaviour.min_valid_s'))} s of valid time "
+        "were left out."
     )
 
 
@@ -108,33 +111,35 @@ def _encoding(value: Callable[[str], Any], cite: Callable[..., str]) -> list[str
     )
     models = 2 ** len(terms) - 1
     drift = (
-        f" Every model, the constant one too, held a slow drift with knots {_plain(value('encoding.drift_knot_s'))} s "
-        "apart."
+        " Every model, the constant one too, held a slow drift with knots "
+        f"{_plain(value('encoding.drift_knot_s'))} s apart."
         if value("encoding.drift")
         else ""
     )
     first = (
-        f"Spike counts were modelled as Poisson with the log rate a sum of smooth terms under second-derivative "
-        f"penalties {cite('splines')}: {bases}. Smoothing strengths were chosen from the training data by restricted "
-        f"marginal likelihood {cite('strengths')}.{drift} All {models} subsets of the terms and the constant model were "
-        f"compared by held-out log-likelihood in {_plain(value('encoding.folds'))} folds of "
-        f"{_plain(value('encoding.blocks_per_fold'))} interleaved contiguous blocks each, "
-        f"{_plain(value('encoding.guard_s'))} s beside each held-out block being left out of training. The simplest "
-        f"model within one standard error of the best was selected {cite('one_se')}. Units with fewer than "
-        f"{_plain(value('encoding.minimum_spikes'))} spikes in valid time were not fitted. Bands are pointwise 95 % "
-        f"{cite('bands')}."
+        f"Spike counts were modelled as Poisson with the log rate a sum of smooth terms under "
+        f"second-derivative penalties {cite('splines')}: {bases}. Smoothing strengths were chosen from the "
+        f"training data by restricted marginal likelihood {cite('strengths')}.{drift} All {models} subsets "
+        f"of the terms and the constant model were compared by held-out log-likelihood in "
+        f"{_plain(value('encoding.folds'))} folds of {_plain(value('encoding.blocks_per_fold'))} interleaved "
+        f"contiguous blocks each, {_plain(value('encoding.guard_s'))} s beside each held-out block being "
+        f"left out of training. The simplest model within one standard error of the best was selected "
+        f"{cite('one_se')}. Units with fewer than {_plain(value('encoding.minimum_spikes'))} spikes in valid "
+        f"time were not fitted. Bands are pointwise 95 % {cite('bands')}."
     )
     shifts = int(value("encoding.test_shifts") or 0)
     test = (
-        f"Each term was tested against the other terms by {shifts:,} circular shifts of its covariate, none shorter "
-        f"than {_plain(value('encoding.test_minimum_shift_s'))} s; p is the rank of the true alignment {cite('rank')}. "
+        f"Each term was tested against the other terms by {shifts:,} circular shifts of its covariate, none "
+        f"shorter than {_plain(value('encoding.test_minimum_shift_s'))} s; p is the rank of the true "
+        f"alignment {cite('rank')}. "
         if shifts
         else "Terms were not tested beyond the selection. "
     )
     second = (
-        f"{test}Information per spike {cite('information')} at slow and at fast running was compared in the two halves "
-        f"of running time (above {_plain(value('encoding.running_above_cm_s'))} cm/s, cut at its median) after matching "
-        f"them in occupancy and in spikes, over {_plain(value('encoding.matching_repeats'))} repeats."
+        f"{test}Information per spike {cite('information')} at slow and at fast running was compared in the "
+        f"two halves of running time (above {_plain(value('encoding.running_above_cm_s'))} cm/s, cut at its "
+        f"median) after matching them in occupancy and in spikes, over "
+        f"{_plain(value('encoding.matching_repeats'))} repeats."
     )
     return [first, second]
 
@@ -142,12 +147,13 @@ def _encoding(value: Callable[[str], Any], cite: Callable[..., str]) -> list[str
 def _population(value: Callable[[str], Any], cite: Callable[..., str]) -> str:
     level = f"{100 * float(value('population.confidence')):g} %"
     return (
-        "A unit counts as encoding a variable when its selected model holds it and, where the variable was tested, its "
-        f"p passes a false discovery rate of {_plain(value('population.false_discovery_rate'))} over all fitted units "
-        f"{cite('fdr')}. Shares have {level} intervals: within an animal Wilson's {cite('wilson')}, over animals a "
-        f"bootstrap that resamples animals and then their units {cite('rank')} "
-        f"({_plain(value('population.bootstrap_draws'))} draws, seed {value('population.bootstrap_seed')}). Changes from "
-        f"slow to fast running were tested by the signed-rank test {cite('signed_rank')}, units taken as independent."
+        "A unit counts as encoding a variable when its selected model holds it and, where the variable was "
+        f"tested, its p passes a false discovery rate of {_plain(value('population.false_discovery_rate'))} over all "
+        f"fitted units {cite('fdr')}. Shares have {level} intervals: within an animal Wilson's "
+        f"{cite('wilson')}, over animals a bootstrap that resamples animals and then their units "
+        f"{cite('rank')} ({_plain(value('population.bootstrap_draws'))} draws, seed "
+        f"{value('population.bootstrap_seed')}). Changes from slow to fast running were tested by the "
+        f"signed-rank test {cite('signed_rank')}, units taken as independent."
     )
 
 

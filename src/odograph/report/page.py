@@ -1,4 +1,4 @@
-"""The report: one HTML page that holds all it shows, opens from disk and needs neither network nor scripts."""
+"""The report: one HTML page that opens from disk and needs neither network nor scripts."""
 
 from __future__ import annotations
 
@@ -66,7 +66,8 @@ def build_page(context: PageContext) -> str:
         f'<meta name="odograph-record" content="{text(context.record_id)}">'
         f"<title>{text(context.study)}: report</title><style>{_resource('page.css')}</style></head><body>"
         '<a class="skip" href="#main">to the content</a>'
-        f"<header><h1>{text(context.study)}</h1><p>what its units encode, and what stands behind it {record}</p>"
+        f"<header><h1>{text(context.study)}</h1><p>what its units encode, and what stands behind it "
+        f"{record}</p>"
         f'<nav aria-label="sections">{anchors}</nav></header>'
         f'<main id="main">{"".join(body)}</main>'
         f"<footer><p>Made by odograph. For research; not for diagnosis or treatment. {record}</p></footer>"
@@ -81,7 +82,7 @@ def _resource(name: str) -> str:
 def _methods_section(context: PageContext) -> str:
     paragraphs, references = methods(context.value, dict(context.software))
     cited = "".join(f"<li>{text(reference)}</li>" for reference in references)
-    note = "<p class='note'>Written from the settings of this run; settings of single sessions are listed above.</p>"
+    note = "<p class='note'>Written from the run's settings; those of single sessions are listed above.</p>"
     body = "".join(f"<p>{text(paragraph)}</p>" for paragraph in paragraphs)
     return section(
         "methods", "Methods", f"{note}{body}<h3>References</h3><ol class='references'>{cited}</ol>"
@@ -91,11 +92,11 @@ def _methods_section(context: PageContext) -> str:
 def _cautions_section() -> str:
     items = (
         "For research; not for diagnosis or treatment.",
-        "That a unit encodes a variable says that the variable helps to predict its spikes beyond the others that "
-        "were measured. A variable that was not measured may stand behind it.",
+        "That a unit encodes a variable says that the variable helps to predict its spikes beyond the others "
+        "that were measured. A variable that was not measured may stand behind it.",
         "Sorting decides what a unit is: spikes of two cells under one number look like mixed coding.",
-        "Units come in few animals. Intervals over animals are wide where there are few, and with fewer than ten "
-        "they are narrower than they should be.",
+        "Units come in few animals. Intervals over animals are wide where there are few, and with fewer than "
+        "ten they are narrower than they should be.",
         "Fitted curves are sure only where the animal was: look at the bands, and at the time spent.",
     )
     return section(

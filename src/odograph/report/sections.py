@@ -44,7 +44,7 @@ def _findings(context: PageContext) -> Iterator[tuple[str, str, Mapping[str, Any
 
 
 def checks_section(context: PageContext) -> str:
-    """Findings of all sessions, failures first, with what to do about them; then units that were not fitted."""
+    """Findings of all sessions, failures first, with what to do; then units that were not fitted."""
     columns = ("session", "stage", "verdict", "found", "expected", "what to do")
     rows, notes = [], []
     for session, stage, finding in _findings(context):
@@ -136,8 +136,8 @@ def sessions_section(context: PageContext) -> str:
         "units fitted#",
     )
     lead = (
-        f"<p>{len(used)} of {len(context.verdicts)} sessions were used. A session's name leads to the picture of its "
-        "quality.</p>"
+        f"<p>{len(used)} of {len(context.verdicts)} sessions were used. A session's name leads to the "
+        "picture of its quality.</p>"
     )
     return section("sessions", "Sessions", lead + table(columns, rows, caption="Sessions", kind="sortable"))
 
@@ -152,7 +152,8 @@ def figures_section(context: PageContext) -> str:
             f'<figure id="figure-{figure.name}"><h3 class="unseen">{text(caption.title)}</h3>'
             f'<img src="data:image/png;base64,{data}" alt="{text(caption.title)}. {text(caption.text)}">'
             f"<figcaption>{text(caption.text)} <span class='place'>Numbers: "
-            f'<a href="{caption.table}">{caption.table}</a>. File: <a href="{text(figure.path)}">{text(figure.path)}</a>, '
+            f'<a href="{caption.table}">{caption.table}</a>. '
+            f'File: <a href="{text(figure.path)}">{text(figure.path)}</a>, '
             f"record {short_record(figure.record_id)}.</span></figcaption></figure>"
         )
     return section("population", "The population", "".join(parts) or "<p>No figures were drawn.</p>")
@@ -199,8 +200,9 @@ def trace_section(context: PageContext) -> str:
     return section(
         "trace",
         "How to trace a number",
-        "<p>Every figure carries the identifier of its record: inside the file, and its first twelve digits in the lower "
-        "right margin. The file and the short code both lead back to the signals in the NWB files and to the settings "
+        "<p>Every figure carries the identifier of its record: inside the file, and its first twelve digits "
+        "in the lower right margin. The file and the short code both lead back to the signals in the NWB "
+        "files and to the settings "
         f"that were read:</p><pre><code>{commands}</code></pre>"
         "<p>The tables beside the figures hold the numbers that are drawn.</p>",
     )

@@ -16,14 +16,14 @@ _NONE = Miniature("", "", "")
 def units_section(context: PageContext) -> str:
     """A row for each unit; scripts, where they run, add sorting and filters."""
     columns = (
-        "unit", "animal", "region", "spikes#", "mean rate (Hz)#", "encodes", "held-out bits per spike#", "observed map",
-        "head direction", "speed", "speed shape",
+        "unit", "animal", "region", "spikes#", "mean rate (Hz)#", "encodes", "held-out bits per spike#",
+        "observed map", "head direction", "speed", "speed shape",
     )  # fmt: skip
     units = context.units.sort_values(["session", "unit"]) if len(context.units) else context.units
     rows = [_unit_row(unit, context.miniatures) for unit in units.to_dict("records")]
     lead = (
-        "<p>A unit's name leads to its full card. Maps are observed rates, curves are fitted ones with 95 % bands; the "
-        "number under each is its peak rate.</p>"
+        "<p>A unit's name leads to its full card. Maps are observed rates, curves are fitted ones with 95 % "
+        "bands; the number under each is its peak rate.</p>"
     )
     body = table(columns, rows, caption="All units", identifier="unit-table", kind="sortable units")
     return section("units", "Units", lead + body if rows else "<p>No session that was used holds units.</p>")
