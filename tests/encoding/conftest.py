@@ -68,7 +68,7 @@ def table():
 
 @pytest.fixture(scope="session")
 def settings():
-    return EncodingSettings(test_shifts=199)
+    return EncodingSettings()
 
 
 @pytest.fixture(scope="session")

@@ -5,7 +5,7 @@ import pytest
 
 from odograph.encoding.analyse import analyse_unit, prepare_session
 from odograph.encoding.shapes import classify, curve_shape, largest_climb
-from odograph.encoding.shifts import draw_shifts, shift_test, shifted_cell_sums
+from odograph.encoding.shifts import plan_shifts, shift_test, shifted_cell_sums, transform_covariate
 from odograph.encoding.slow_fast import compare_halves, running_halves
 
 
@@ -19,7 +19,7 @@ def test_a_unit_tuned_to_one_variable_is_said_to_encode_that_one(design, simulat
     row = analyse_unit(design, simulate(kind, 1), None, settings).row
     assert row["status"] == "fitted"
     assert row["selected_model"] == kind
-    assert row[f"{kind}_p"] == pytest.approx(1 / 200)
+    assert row[f"{kind}_p"] == pytest.approx(1 / (1 + row[f"{kind}_shifts"]))
 
 
 def test_a_mixture_is_found_and_its_curves_have_the_true_shape(table, mixed):
@@ -100,13 +100,19 @@ def test_unsorted_spike_times_change_nothing(design, simulate, settings):
     )
 
 
-def test_shifts_are_distinct_admissible_and_seeded():
-    shifts = draw_shifts(50_000, 0.02, 500, 20.0, seed=1)
-    assert len(np.unique(shifts)) == 500
-    assert shifts.min() >= 1000 and shifts.max() <= 49_000
-    np.testing.assert_array_equal(shifts, draw_shifts(50_000, 0.02, 500, 20.0, seed=1))
-    assert len(draw_shifts(1500, 0.02, 500, 20.0, seed=1)) == 0
-    np.testing.assert_array_equal(draw_shifts(2010, 0.02, 500, 20.0, seed=1), np.arange(1000, 1011))
+def plan_of(design, **options):
+    options = {"step_s": 0.1, "minimum_s": 20.0, "draws": 99, "seed": 2} | options
+    return plan_shifts(design.n_bins, design.bin_s, **options)
+
+
+def test_shifts_are_distinct_admissible_and_seeded(design):
+    plan = plan_of(design)
+    assert plan.bins_per_step == 5 and plan.n_steps == design.n_bins // 5
+    np.testing.assert_array_equal(plan.shifts, np.arange(200, plan.n_steps - 199))
+    assert len(np.unique(plan.drawn)) == 99 and set(plan.drawn) <= set(plan.shifts)
+    np.testing.assert_array_equal(plan.drawn, plan_of(design).drawn)
+    assert not np.array_equal(plan.drawn, plan_of(design, seed=3).drawn)
+    assert len(plan_of(design, minimum_s=400.0).shifts) == 0
 
 
 def test_shifted_sums_are_sums_over_the_rolled_covariate():
@@ -117,14 +123,25 @@ def test_shifted_sums_are_sums_over_the_rolled_covariate():
         np.testing.assert_allclose(out, np.bincount(np.roll(cell, -shift), weights=residual, minlength=7))
 
 
-def test_p_of_shuffled_residuals_is_uniform(design):
-    """Davison & Hinkley 1997: the rank of an exchangeable statistic; 200 draws, binomial bounds at 99.9 %."""
-    rng, term = np.random.default_rng(8), design.terms[1]
-    shifts = draw_shifts(design.n_bins, design.bin_s, 99, 20.0, seed=2)
+def test_all_shifts_by_fft_and_one_by_one_agree(design):
+    """The same shifts tested by cross-correlation and by rolling the covariate."""
+    rng, term, plan = np.random.default_rng(4), design.terms[1], plan_of(design, draws=10**6)
     expected = np.full(design.n_bins, 0.06)
+    for seed in range(3):
+        rng = np.random.default_rng(seed)
+        residual = rng.poisson(expected * (1 + 0.1 * np.cos(term.cell / 60 * 2 * np.pi))) - expected
+        by_fft = shift_test(term, np.ones(1), residual, expected, plan, transform_covariate(term, plan))
+        by_hand = shift_test(term, np.ones(1), residual, expected, plan, None)
+        assert by_fft == pytest.approx(by_hand) and by_fft[1] == len(plan.shifts)
+
+
+def test_p_of_exchangeable_residuals_is_uniform(design):
+    """Davison & Hinkley 1997: the rank of an exchangeable statistic; 200 draws, binomial bounds at 99.9 %."""
+    rng, term, plan = np.random.default_rng(8), design.terms[1], plan_of(design)
+    expected, spectrum = np.full(design.n_bins, 0.06), transform_covariate(design.terms[1], plan)
     p = np.array(
         [
-            shift_test(term, np.array([1.0]), rng.poisson(expected) - expected, expected, shifts)
+            shift_test(term, np.ones(1), rng.poisson(expected) - expected, expected, plan, spectrum)[0]
             for _ in range(200)
         ]
     )
@@ -133,8 +150,9 @@ def test_p_of_shuffled_residuals_is_uniform(design):
 
 
 def test_no_admissible_shift_gives_no_p(design):
-    nothing = np.zeros(design.n_bins)
-    assert np.isnan(shift_test(design.terms[2], np.ones(1), nothing, nothing + 1, np.array([], dtype=int)))
+    nothing, plan = np.zeros(design.n_bins), plan_of(design, minimum_s=400.0)
+    p, n = shift_test(design.terms[2], np.ones(1), nothing, nothing + 1, plan, None)
+    assert np.isnan(p) and n == 0
 
 
 def test_shapes_of_known_curves():

@@ -21,7 +21,7 @@ from odograph.encoding.evaluate import Score, evaluate, fold_spikes
 from odograph.encoding.layout import Workspace, cell_basis, make_layout
 from odograph.encoding.select import best_score, select_model
 from odograph.encoding.shapes import curve_shape
-from odograph.encoding.shifts import draw_shifts, residuals, shift_test
+from odograph.encoding.shifts import ShiftPlan, plan_shifts, residuals, shift_test, transform_covariate
 from odograph.encoding.slow_fast import NOT_AVAILABLE, compare_halves, running_halves
 from odograph.encoding.spikes import UnitSpikes, bin_spikes
 from odograph.encoding.terms import Term
@@ -146,6 +146,7 @@ def _empty_row(design: SessionDesign, unit: UnitSpikes) -> dict:
     for term in design.terms:
         row[f"encodes_{term.name}"] = False
         row[f"{term.name}_p"] = np.nan
+        row[f"{term.name}_shifts"] = 0
         row[f"{term.name}_information_bits_per_spike"] = np.nan
         if term.kind in ("plane", "circle"):
             row[f"{term.name}_information_slow_bits_per_spike"] = np.nan
@@ -180,19 +181,38 @@ def _selection(design: SessionDesign, scores: list[Score]) -> dict:
 def _tests(design: SessionDesign, unit: UnitSpikes, scores: list[Score]) -> dict:
     """A shift test for each term, given all other terms."""
     settings, by_model = design.settings, _by_model(scores)
-    if settings.test_shifts == 0:
+    if not settings.tests:
         return {}
-    shifts = draw_shifts(
-        design.n_bins, design.bin_s, settings.test_shifts, settings.test_minimum_shift_s, settings.seed
-    )
+    plan = _shift_plan(design)
     names = tuple(term.name for term in design.terms)
     full_strengths = _strengths_by_term(_workspace(design, names), by_model[names])
     out = {}
     for term in design.terms:
         others = tuple(name for name in names if name != term.name)
         residual, expected = residuals(_workspace(design, others), by_model[others].fit, design, unit)
-        out[f"{term.name}_p"] = shift_test(term, full_strengths[term.name], residual, expected, shifts)
+        spectrum = design.kept["spectrum", term.name]
+        out[f"{term.name}_p"], out[f"{term.name}_shifts"] = shift_test(
+            term, full_strengths[term.name], residual, expected, plan, spectrum
+        )
     return out
+
+
+def _shift_plan(design: SessionDesign) -> ShiftPlan:
+    """The session's shifts, with every term's transform, worked out once."""
+    if "shifts" not in design.kept:
+        settings = design.settings
+        plan = plan_shifts(
+            design.n_bins,
+            design.bin_s,
+            step_s=settings.test_step_s,
+            minimum_s=settings.test_minimum_shift_s,
+            draws=settings.test_draws,
+            seed=settings.seed,
+        )
+        design.kept["shifts"] = plan
+        for term in design.terms:
+            design.kept["spectrum", term.name] = transform_covariate(term, plan)
+    return design.kept["shifts"]
 
 
 def _strengths_by_term(space: Workspace, score: Score) -> dict[str, np.ndarray]:

@@ -62,10 +62,12 @@ class EncodingSettings(StageSettings):
     minimum_spikes: int = setting(
         100, "units with fewer spikes in valid time are not fitted", unit="spikes", ge=20
     )
-    test_shifts: int = setting(
-        400, "circular shifts drawn for each term's test; 0 leaves the tests out", ge=0, le=20000
-    )
+    tests: bool = setting(True, "test each term by circular shifts of its covariate")
     test_minimum_shift_s: float = setting(20.0, "shortest shift used by the tests", unit="s", gt=0)
+    test_step_s: float = setting(0.1, "shifts go in steps of this length", unit="s", gt=0, le=1)
+    test_draws: int = setting(
+        1000, "shifts drawn where a term has too many columns for all of them", ge=99, le=100000
+    )
     information_cells: int = setting(
         20, "cells per axis of the maps used for spatial information", ge=5, le=60
     )
