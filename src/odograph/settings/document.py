@@ -56,7 +56,7 @@ MATTERS = (
     "behaviour.min_valid_share",
     "encoding.terms",
     "encoding.minimum_spikes",
-    "encoding.test_shifts",
+    "encoding.tests",
     "population.false_discovery_rate",
     "figures.formats",
 )
