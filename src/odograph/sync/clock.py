@@ -15,16 +15,17 @@ from typing import Any
 import numpy as np
 
 from odograph.errors import InputError
+from odograph.recording.model import finding, verdict_of
 from odograph.settings.sync import SyncSettings
 from odograph.sync.ambiguity import compare_shifts
 from odograph.sync.faults import ClockFault, describe_fault
-from odograph.sync.judge import finding, judge_clock, verdict_of
+from odograph.sync.judge import judge_clock
 from odograph.sync.line import Line, agreeing_line, robust_line
 from odograph.sync.pairing import WINDOW_FRAMES, find_window, pair_frames, refined_shift
 from odograph.sync.profile import clock_profile, window_starts
 
-# Windows looked for anywhere in the pulses (frames each, how many, tries): long ones only where short ones disagree,
-# because their search takes longer. Three in agreement by chance: less than once in 10,000 sessions.
+# Windows looked for anywhere in the pulses (frames each, how many, tries): long ones only where short ones
+# disagree, because their search takes longer. Three agree by chance less than once in 10,000 sessions.
 _ANCHOR_ROUNDS = ((WINDOW_FRAMES, 10, 3), (4 * WINDOW_FRAMES, 7, 1))
 _LEAST_AGREEING = 3
 _SMALLEST_JITTER_S = 5e-6
@@ -220,6 +221,7 @@ def _unusable(frames, pulses):
             return finding(
                 "fail",
                 f"only {len(times)} {what}",
+                place="frame pulses",
                 expected=f"at least {_SMALLEST_COUNT}",
                 remedy="check the place of the pulses in the file; set intake.frame_pulses_place to null "
                 "if tracking is already on the recording clock",
@@ -229,6 +231,7 @@ def _unusable(frames, pulses):
         return finding(
             "fail",
             f"frames come every {1e3 * frame_s:.3f} ms but pulses every {1e3 * pulse_s:.3f} ms",
+            place="frame pulses",
             expected="one pulse for each frame",
             remedy="check that the pulses are the camera's, one edge each, and both times in seconds",
         )
@@ -239,6 +242,7 @@ def _no_pairs(interval_s):
     return finding(
         "fail",
         "the frames could not be found among the pulses",
+        place="frame pulses",
         expected=f"a pulse within {1e3 * _REACH_SHARE * interval_s:.1f} ms of most frames on one line",
         remedy="check that these pulses belong to this camera and this session",
     )
@@ -266,7 +270,14 @@ def _first_line(frames, pulses, interval_s, settings):
 def _too_regular(frames, pulses):
     """Whether either train lacks any pattern of jitter that could be looked for in the other."""
     steps = (np.diff(frames), np.diff(pulses))
-    return min(float(np.median(np.abs(step - np.median(step)))) for step in steps) < _SMALLEST_JITTER_S
+    # Not the median departure: coarse time stamps leave most intervals equal and the pattern in the rest.
+    spread = [np.abs(step - np.median(step)) for step in steps]
+    return (
+        min(
+            float(part[part < 0.5 * np.median(step)].mean()) for part, step in zip(spread, steps, strict=True)
+        )
+        < _SMALLEST_JITTER_S
+    )
 
 
 def _followed_line(frames, pulses, interval_s):

@@ -7,12 +7,10 @@ from dataclasses import dataclass
 import numpy as np
 
 from odograph.sync.line import Line
-from odograph.sync.pairing import alignment_spreads
 from odograph.sync.profile import Profile
 
 # A step counts as a jump when it makes up at least this share of the clock's whole departure.
 _JUMP_SHARE = 0.5
-_SPLIT_HALF_WINDOW = 16
 
 
 @dataclass(frozen=True)
@@ -24,7 +22,7 @@ class ClockFault:
     kind : str
         "jump" or "bend".
     camera_s, recording_s : float
-        Where it is, on both clocks (recording clock as the line predicts it).
+        Where it is, on both clocks (the recording clock as it was just before a jump).
     size_s : float
         Jump: the step of recording minus camera clock. Bend: the largest departure from the line.
     drift_before_ppm, drift_after_ppm : float
@@ -66,7 +64,7 @@ def describe_fault(
     profile : Profile
         The clock followed window by window.
     reach_s : float
-        See `alignment_spreads`.
+        Distances to pulses count up to this, s.
     """
     found = profile.found()
     x, y = profile.camera_s[found], profile.departure_s(line)[found]
@@ -77,7 +75,7 @@ def describe_fault(
     if abs(steps[k]) >= _JUMP_SHARE * (y.max() - y.min()):
         at = _moment_of_jump(frame_s, pulse_s, line, (x[k], x[k + 1]), (y[k], y[k + 1]), reach_s)
         before, after = _side_drift(line, x[: k + 1], y[: k + 1]), _side_drift(line, x[k + 1 :], y[k + 1 :])
-        return ClockFault("jump", at, float(line.at(at)), float(steps[k]), before, after)
+        return ClockFault("jump", at, float(line.at(at) + y[k]), float(steps[k]), before, after)
     hinge = _hinge(x, y)
     before, after = (
         _side_drift(line, x[x <= hinge], y[x <= hinge]),
@@ -104,14 +102,16 @@ def _hinge(x, y):
 
 
 def _moment_of_jump(frame_s, pulse_s, line, camera_s, departure_s, reach_s):
-    """Camera time between two windows where frames stop fitting the left shift and begin to fit the right."""
-    inside = np.flatnonzero((frame_s >= camera_s[0]) & (frame_s <= camera_s[1]))
-    misfit = np.empty((2, len(inside)))
-    for column, i in enumerate(inside):
-        around = frame_s[max(i - _SPLIT_HALF_WINDOW, 0) : i + _SPLIT_HALF_WINDOW]
-        shifts = line.at(frame_s[i]) - frame_s[i] + np.array(departure_s)
-        misfit[:, column] = np.minimum(alignment_spreads(around, pulse_s, shifts, reach_s), reach_s)
-    left = np.concatenate([[0.0], np.cumsum(misfit[0])])
-    right = np.concatenate([np.cumsum(misfit[1][::-1])[::-1], [0.0]])
-    k = int(np.argmin(left + right))
-    return float(frame_s[inside[min(k, len(inside) - 1)]])
+    """Camera time of the first frame, between two windows, that fits the right shift better than the left."""
+    inside = frame_s[(frame_s >= camera_s[0]) & (frame_s <= camera_s[1])]
+    misfit = [_distances(pulse_s, line.at(inside) + departure, reach_s) for departure in departure_s]
+    # Sum of the misfits if the frames before k follow the left shift and the others the right one.
+    total = np.append(0.0, np.cumsum(misfit[0])) + np.append(np.cumsum(misfit[1][::-1])[::-1], 0.0)
+    return float(inside[min(int(np.argmin(total)), len(inside) - 1)])
+
+
+def _distances(pulse_s, wanted_s, reach_s):
+    """Distance of each time to the nearest pulse, at most `reach_s`."""
+    right = np.clip(np.searchsorted(pulse_s, wanted_s), 1, len(pulse_s) - 1)
+    nearest = np.minimum(np.abs(pulse_s[right] - wanted_s), np.abs(pulse_s[right - 1] - wanted_s))
+    return np.minimum(nearest, reach_s)

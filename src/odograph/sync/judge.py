@@ -4,28 +4,9 @@ from __future__ import annotations
 
 from typing import Any
 
+from odograph.recording.model import finding
 from odograph.settings.sync import SyncSettings
 from odograph.sync.faults import ClockFault
-
-_ORDER = {"note": 0, "warn": 1, "fail": 2}
-
-
-def finding(
-    level: str,
-    found: str,
-    *,
-    place: str = "frame pulses",
-    expected: str | None = None,
-    remedy: str | None = None,
-) -> dict[str, Any]:
-    """One finding as the products carry it."""
-    return {"level": level, "place": place, "found": found, "expected": expected, "remedy": remedy}
-
-
-def verdict_of(findings: list[dict[str, Any]]) -> str:
-    """The worst level among findings, as a verdict; notes pass."""
-    worst = max((_ORDER[item["level"]] for item in findings), default=0)
-    return ("pass", "warn", "fail")[worst]
 
 
 def judge_clock(
@@ -55,16 +36,16 @@ def judge_clock(
     settings : SyncSettings
         Limits.
     """
-    findings = [
-        *_straightness(departure_ms, fault, settings),
-        *_drift(drift_ppm, settings),
-        *_shares(counts, settings),
-    ]
+    findings = [*_straightness(departure_ms, fault, settings), *_drift(drift_ppm, settings)]
+    if not departure_ms > settings.max_bend_ms:
+        # Beyond a fault no frame can be on the line: its counts would only repeat the fault.
+        findings += _shares(counts, settings)
     if ambiguity_s > 0:
         findings.append(
             finding(
                 "fail" if ambiguity_s > settings.max_ambiguity_s else "warn",
                 f"frames fit the pulses equally well over a range of {1e3 * ambiguity_s:.1f} ms",
+                place="frame pulses",
                 expected=f"one pairing, or a range of at most {1e3 * settings.max_ambiguity_s:.1f} ms",
                 remedy="record the same start for camera and pulses, or widen sync.max_ambiguity_s "
                 "if that much uncertainty is harmless",
@@ -76,6 +57,7 @@ def judge_clock(
                 "warn",
                 "frame intervals are too regular to show which pulse belongs to which frame; "
                 "the pairing rests on the first and the last pulse alone",
+                place="frame pulses",
                 expected="time stamps fine enough to show the jitter of the frame interval",
             )
         )
@@ -126,6 +108,7 @@ def _shares(counts, settings):
                 "fail",
                 f"only {counts['n_matched']} of {counts['n_frames']} frames "
                 f"({100 * matched:.1f} %) have a pulse on the line",
+                place="frame pulses",
                 expected=f"at least {100 * settings.min_matched_share:g} % (sync.min_matched_share)",
                 remedy="check that the pulses are complete and belong to this camera",
             )
@@ -136,6 +119,7 @@ def _shares(counts, settings):
             finding(
                 "warn",
                 f"{counts['dropped_frames']} pulses ({100 * dropped:.1f} %) have no frame: dropped frames",
+                place="frame pulses",
                 expected=f"at most {100 * settings.warn_dropped_share:g} % (sync.warn_dropped_share)",
                 remedy="gaps up to behaviour.max_gap_s are interpolated, longer ones are left out",
             )
@@ -146,6 +130,7 @@ def _shares(counts, settings):
                 "note",
                 f"{counts['dropped_frames']} dropped frames, {counts['missing_pulses']} frames without "
                 f"a pulse, {counts['spurious_pulses']} pulses between frames",
+                place="frame pulses",
             )
         )
     return findings
