@@ -79,5 +79,14 @@ class PageContext:
     results_folder: str = "results"
 
     def value(self, path: str) -> Any:
-        """The value of a setting by its dotted path; None when there is no such setting."""
-        return next((row["value"] for row in self.settings if row["path"] == path), None)
+        """The value of a setting by its dotted path.
+
+        Raises
+        ------
+        KeyError
+            When there is no such setting.
+        """
+        for row in self.settings:
+            if row["path"] == path:
+                return row["value"]
+        raise KeyError(f"there is no setting {path!r}")

@@ -127,12 +127,13 @@ def _encoding(value: Callable[[str], Any], cite: Callable[..., str]) -> list[str
         f"{cite('one_se')}. Units with fewer than {_plain(value('encoding.minimum_spikes'))} spikes in valid "
         f"time were not fitted. Bands are pointwise 95 % {cite('bands')}."
     )
-    shifts = int(value("encoding.test_shifts") or 0)
     test = (
-        f"Each term was tested against the other terms by {shifts:,} circular shifts of its covariate, none "
-        f"shorter than {_plain(value('encoding.test_minimum_shift_s'))} s; p is the rank of the true "
-        f"alignment {cite('rank')}. "
-        if shifts
+        "Each term was tested against the model of the others by circular shifts of its covariate over valid "
+        f"time, in steps of {_plain(value('encoding.test_step_s'))} s and none shorter than "
+        f"{_plain(value('encoding.test_minimum_shift_s'))} s: all of them, or "
+        f"{_plain(value('encoding.test_draws'))} drawn (seed {value('encoding.seed')}) where a term has too "
+        f"many columns; p is the rank of the true alignment {cite('rank')}. "
+        if value("encoding.tests")
         else "Terms were not tested beyond the selection. "
     )
     second = (
@@ -148,7 +149,8 @@ def _population(value: Callable[[str], Any], cite: Callable[..., str]) -> str:
     level = f"{100 * float(value('population.confidence')):g} %"
     return (
         "A unit counts as encoding a variable when its selected model holds it and, where the variable was "
-        f"tested, its p passes a false discovery rate of {_plain(value('population.false_discovery_rate'))} over all "
+        "tested, its p passes a false discovery rate of "
+        f"{_plain(value('population.false_discovery_rate'))} over all "
         f"fitted units {cite('fdr')}. Shares have {level} intervals: within an animal Wilson's "
         f"{cite('wilson')}, over animals a bootstrap that resamples animals and then their units "
         f"{cite('rank')} ({_plain(value('population.bootstrap_draws'))} draws, seed "

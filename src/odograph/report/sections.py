@@ -161,11 +161,12 @@ def figures_section(context: PageContext) -> str:
 
 def settings_section(context: PageContext) -> str:
     """Settings that differ from their defaults, settings of single sessions, then all settings."""
-    changed = [row_ for row_ in context.settings if row_.get("changed")]
-    columns = ("setting", "value", "default", "unit", "what it does")
+    changed = [facts for facts in context.settings if facts.get("changed")]
     body = "<p>Every setting has its default.</p>"
     if changed:
-        body = table(columns, map(_setting_row, changed), caption="Settings that differ from their defaults")
+        columns = ("setting", "value", "default", "unit", "what it does")
+        rows = [_setting_row(facts, ("value", "default")) for facts in changed]
+        body = table(columns, rows, caption="Settings that differ from their defaults")
     single = [
         row(text(session), [cell(f"<code>{text(path)}</code>"), cell(f"<code>{setting_value(value)}</code>")])
         for session, settings in sorted(context.session_settings.items())
@@ -173,16 +174,16 @@ def settings_section(context: PageContext) -> str:
     ]
     if single:
         body += table(("session", "setting", "value"), single, caption="Settings of single sessions")
-    body += table(columns, map(_setting_row, context.settings), caption="All settings", kind="quiet")
-    return section("settings", "Settings", body)
+    rows = [_setting_row(facts, ("value",)) for facts in context.settings]
+    columns = ("setting", "value", "unit", "what it does")
+    return section("settings", "Settings", body + table(columns, rows, caption="All settings", kind="quiet"))
 
 
-def _setting_row(facts: Mapping[str, Any]) -> str:
+def _setting_row(facts: Mapping[str, Any], shown: tuple[str, ...]) -> str:
     return row(
         f"<code>{text(facts['path'])}</code>",
         [
-            cell(f"<code>{setting_value(facts['value'])}</code>"),
-            cell(f"<code>{setting_value(facts['default'])}</code>"),
+            *(cell(f"<code>{setting_value(facts[name])}</code>") for name in shown),
             cell(text(facts.get("unit"))),
             cell(text(facts.get("description"))),
         ],

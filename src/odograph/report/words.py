@@ -26,10 +26,17 @@ def number(value: Any, digits: int = 2) -> str:
 
 
 def setting_value(value: Any) -> str:
-    """A setting's value as it is written in the configuration, on one line."""
-    if isinstance(value, str):
-        return html.escape(value)
-    return html.escape(json.dumps(value, ensure_ascii=False, separators=(", ", ": ")))
+    """A setting's value as HTML; the entries of a list of mappings on a line each, without what is null."""
+    if isinstance(value, list) and value and all(isinstance(item, dict) for item in value):
+        return "<br>".join(
+            html.escape(", ".join(f"{key}: {_plain(part)}" for key, part in item.items() if part is not None))
+            for item in value
+        )
+    return html.escape(_plain(value))
+
+
+def _plain(value: Any) -> str:
+    return value if isinstance(value, str) else json.dumps(value, ensure_ascii=False, separators=(", ", ": "))
 
 
 def cell(content: str, *, kind: str = "", sort: Any = None) -> str:
