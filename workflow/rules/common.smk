@@ -11,9 +11,13 @@ from odograph.figures.captions import POPULATION_FIGURES
 from odograph.provenance.plan import make_plan, use_this_python
 
 try:
-    PLAN = make_plan(config, main_process=workflow.is_main_process)
+    PLAN = make_plan(
+        config,
+        main_process=workflow.is_main_process,
+        config_file=str(workflow.configfiles[-1]) if workflow.configfiles else None,
+    )
 except OdographError as error:
-    raise WorkflowError(str(error))
+    raise WorkflowError(str(error)) from None
 
 # Jobs call `python`; it has to be the one that runs this.
 use_this_python()

@@ -21,14 +21,12 @@ def work(step: Step) -> None:
     from odograph.steps.source import read_signals
 
     recording = read_signals(step)
-    slope, intercept_s = clock["slope"], clock["intercept_s"]
-    frames = recording.tracks[0].time_s
     behaviour = derive_behaviour(
         recording.tracks,
         recording.direction,
         recording.covariates,
-        (slope, intercept_s),
-        (slope * frames[0] + intercept_s, slope * frames[-1] + intercept_s),
+        (clock["slope"], clock["intercept_s"]),
+        None,
         recording.invalid,
         recording.arena,
         step.stage_settings(BehaviourSettings),
