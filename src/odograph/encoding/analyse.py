@@ -8,7 +8,7 @@ Results depend on nothing but these arguments: not on which units are analysed b
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import astuple, dataclass
 from itertools import pairwise
 
 import numpy as np
@@ -23,9 +23,21 @@ from odograph.encoding.select import best_score, select_model
 from odograph.encoding.shapes import curve_shape
 from odograph.encoding.shifts import ShiftPlan, plan_shifts, residuals, shift_test, transform_covariate
 from odograph.encoding.slow_fast import NOT_AVAILABLE, compare_halves, running_halves
+from odograph.encoding.speed_gain import describe_gains, fit_gains, gain_test, modulation
 from odograph.encoding.spikes import UnitSpikes, bin_spikes
 from odograph.encoding.terms import Term
 from odograph.settings.encoding import EncodingSettings
+
+# Columns of the speed-gain model for each plane and circle, in the order of the fields of `Gain`.
+GAIN_COLUMNS = (
+    "speed_gain",
+    "speed_gain_se",
+    "speed_gain_p",
+    "fitted_slow_bits_per_spike",
+    "fitted_fast_bits_per_spike",
+    "fitted_slow_bits_per_s",
+    "fitted_fast_bits_per_s",
+)
 
 prepare_session = design_module.prepare_session
 
@@ -95,6 +107,7 @@ def analyse_unit(
     curves |= tuning_curves(design, unit, space.layout, full.fit)
     row |= _information(design, unit, curves)
     row |= _shape(design, space, full, row)
+    row |= _gains(design, unit, space, full, row)
     return UnitResult(row | {"status": "fitted", "status_reason": ""}, rows, curves)
 
 
@@ -151,6 +164,7 @@ def _empty_row(design: SessionDesign, unit: UnitSpikes) -> dict:
         if term.kind in ("plane", "circle"):
             row[f"{term.name}_information_slow_bits_per_spike"] = np.nan
             row[f"{term.name}_information_fast_bits_per_spike"] = np.nan
+            row |= {f"{term.name}_{column}": np.nan for column in GAIN_COLUMNS}
     return row
 
 
@@ -254,12 +268,38 @@ def _information(design: SessionDesign, unit: UnitSpikes, curves: dict[str, np.n
     return out
 
 
+def _speed_term(design: SessionDesign) -> Term | None:
+    """The term that is a curve over running speed, if the configuration has one."""
+    return next((t for t in design.terms if t.kind == "line" and t.columns[0] == "speed_cm_s"), None)
+
+
+def _gains(design: SessionDesign, unit: UnitSpikes, space: Workspace, full: Score, row: dict) -> dict:
+    """Speed gains of the planes and circles that the unit's selected model has."""
+    speed = _speed_term(design)
+    tuned = [t.name for t in design.terms if t.kind in ("plane", "circle") and row[f"encodes_{t.name}"]]
+    if speed is None or not tuned:
+        return {}
+    z = modulation(design.speed_cm_s)
+    fitted = fit_gains(space, design, unit, full.fit, speed.name, z)
+    if not fitted.converged:
+        return {}
+    p = {}
+    if design.settings.tests:
+        p = {name: gain_test(space, design, unit, full.fit, z, _shift_plan(design), name) for name in tuned}
+    above = design.settings.running_above_cm_s
+    described = describe_gains(space, design, fitted, speed.name, z, above, p)
+    return {
+        f"{name}_{column}": value
+        for name in tuned
+        for column, value in zip(GAIN_COLUMNS, astuple(described[name]), strict=True)
+    }
+
+
 def _shape(design: SessionDesign, space: Workspace, full: Score, row: dict) -> dict:
     """Shape of the speed curve, for units whose selected model has speed."""
-    speed = [term for term in design.terms if term.kind == "line" and term.columns[0] == "speed_cm_s"]
-    if not speed:
+    term = _speed_term(design)
+    if term is None:
         return {}
-    term = speed[0]
     if not row[f"encodes_{term.name}"]:
         return {"speed_shape": "not_tuned"}
     block = space.layout.slices[space.layout.index_of(term.name)]

@@ -124,6 +124,42 @@ def information(
 
 
 @njit(cache=True, nogil=True)
+def scaled_information(
+    cells, mu, scale, cell_start, cell_end, columns, weights, supports, offsets, sizes, hessian
+):
+    """X'WX when rows scale each term's basis; scale (n_terms, n_rows), `hessian` is overwritten."""
+    hessian[:, :] = 0.0
+    hessian[0, 0] = mu.sum()
+    n_terms, n_rows = cells.shape
+    for t in range(n_terms):
+        a, z, s = cell_start[t], cell_end[t], supports[t]
+        once, twice = np.zeros(z - a), np.zeros(z - a)
+        for r in range(n_rows):
+            once[cells[t, r]] += mu[r] * scale[t, r]
+            twice[cells[t, r]] += mu[r] * scale[t, r] ** 2
+        _diagonal_block(twice, columns[a:z, :s], weights[a:z, :s], offsets[t], hessian)
+        for c in range(z - a):
+            for j in range(s):
+                hessian[offsets[t] + columns[a + c, j], 0] += (once[c] - twice[c]) * weights[a + c, j]
+        for u in range(t + 1, n_terms):
+            b, y, q = cell_start[u], cell_end[u], supports[u]
+            _cross_block(
+                cells[t],
+                cells[u],
+                mu * scale[t] * scale[u],
+                columns[a:z, :s],
+                weights[a:z, :s],
+                columns[b:y, :q],
+                weights[b:y, :q],
+                sizes[u],
+                offsets[t],
+                offsets[u],
+                hessian,
+            )
+    fill_symmetric(hessian)
+
+
+@njit(cache=True, nogil=True)
 def plane_information(
     cells,
     mu,

@@ -160,7 +160,7 @@ class Workspace:
         self._sums = np.empty(n_cells)
         self._splines = np.zeros(n)
         self._information = np.empty((n, n))
-        self._flat = (
+        self.flat = (
             layout.cell_start,
             layout.cell_end,
             layout.columns,
@@ -194,7 +194,7 @@ class Workspace:
             self._splines[first : first + lay.spline_count[t]] = from_coordinates(
                 term.coordinates, coefficients[lay.slices[t]]
             )
-        kernels.cell_values(self._splines, *self._flat, self.eta)
+        kernels.cell_values(self._splines, *self.flat, self.eta)
         factor = np.exp(self.eta)
         factor[: lay.cell_end[0]] *= np.exp(coefficients[0])
         return kernels.expected_counts(
@@ -203,7 +203,7 @@ class Workspace:
 
     def derivatives(self, total: float) -> tuple[np.ndarray, np.ndarray]:
         """X'mu, (n_coordinates,), and X'WX, (n_coordinates, n_coordinates), at the last `expected` call."""
-        lay, n = self.layout, self.layout.n_coordinates
+        lay = self.layout
         if not self.terms:
             return np.array([total]), np.array([[total]])
         if self.terms[0].kind == "plane":
@@ -215,16 +215,20 @@ class Workspace:
                 self.mu,
                 total,
                 self._sums,
-                *self._flat,
+                *self.flat,
                 lay.spline_count,
                 self._information,
             )
         gradient = self.project(self._sums, total)
-        half = np.empty((n, lay.n_splines))
-        self._reduce(self._information, half)
-        whole = np.empty((n, n))
+        return gradient, self.reduce(self._information)
+
+    def reduce(self, information: np.ndarray) -> np.ndarray:
+        """X'WX in coordinates, (n_coordinates, n_coordinates), from splines, (n_splines, n_splines)."""
+        half = np.empty((self.layout.n_coordinates, self.layout.n_splines))
+        self._reduce(information, half)
+        whole = np.empty((self.layout.n_coordinates, self.layout.n_coordinates))
         self._reduce(np.ascontiguousarray(half.T), whole)
-        return gradient, whole
+        return whole
 
     def _plane_information(self) -> None:
         lay = self.layout
@@ -251,7 +255,7 @@ class Workspace:
             lay.table.cells, self.mu, lay.cell_end - lay.cell_start, self._joint_start, self._joint
         )
         kernels.small_blocks(
-            self._joint, self._joint_start, self._sums, *self._flat, lay.spline_count, self._information
+            self._joint, self._joint_start, self._sums, *self.flat, lay.spline_count, self._information
         )
 
     def _reduce(self, array: np.ndarray, out: np.ndarray) -> None:
@@ -267,7 +271,7 @@ class Workspace:
         out[0] = total
         if self.terms:
             splines = np.empty(lay.n_splines)
-            kernels.column_sums(cell_totals, *self._flat, splines)
+            kernels.column_sums(cell_totals, *self.flat, splines)
             for t, term in enumerate(self.terms):
                 first = lay.spline_start[t]
                 out[lay.slices[t]] = to_coordinates(

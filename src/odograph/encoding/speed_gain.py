@@ -1,0 +1,353 @@
+"""Does tuning deepen as the animal runs faster? The speed-gain model.
+
+    log rate = constant + f_speed(v) + sum over planes and circles of (1 + g_t z(v)) f_t + other terms
+
+with z(v) = log(1 + v / 5 cm/s), standardised over valid time. A positive gain g_t says that the term's part
+of the log rate is multiplied up at speed: deeper and sharper tuning, with no shape assumed for either. All
+coefficients and gains are fitted jointly by Newton's method on the penalised likelihood; the smoothing
+strengths start from the additive model's and are chosen again at the fitted gains, where the model is linear.
+Standard errors come from the full (observed) Hessian.
+
+The test of g_t = 0 uses the efficient score at the additive fit: with e = y - mu, the statistic
+
+    U / sqrt(V),   U = sum e z f_t,   V = sum mu (z f_t)^2 - q' (X'WX + S_lam)^-1 q,   q = X'W z f_t,
+
+and its rank among circular shifts of z against everything else, U and V computed anew for every shift (Cox &
+Hinkley 1974, Theoretical Statistics, section 9.3, for the efficient score).
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from scipy import fft
+
+from odograph.descriptors.information import information_bits_per_spike
+from odograph.encoding import kernels
+from odograph.encoding.design import SessionDesign
+from odograph.encoding.fit import Fit
+from odograph.encoding.layout import Workspace
+from odograph.encoding.shifts import ShiftPlan, residuals
+from odograph.encoding.smoothing import Quadratic, factorise, tune
+from odograph.encoding.spikes import UnitSpikes
+from odograph.encoding.terms import Term
+
+SPEED_SCALE_CM_S = 5.0
+LARGEST_GAIN = 3.0
+STRENGTH_ROUNDS = 2
+
+
+@dataclass(frozen=True)
+class Gain:
+    """The speed gain of one term.
+
+    Attributes
+    ----------
+    gain, standard_error : float
+        Per standard deviation of z.
+    p : float
+        Two-sided, by circular shifts; NaN when there is none.
+    slow_bits_per_spike, fast_bits_per_spike : float
+        Information of the fitted tuning at the 20th and the 80th percentile of running speed.
+    slow_bits_per_s, fast_bits_per_s : float
+        The same times the fitted mean rate at that speed.
+    """
+
+    gain: float
+    standard_error: float
+    p: float
+    slow_bits_per_spike: float
+    fast_bits_per_spike: float
+    slow_bits_per_s: float
+    fast_bits_per_s: float
+
+
+@dataclass(frozen=True)
+class GainFit:
+    """The joint fit: coefficients (n_coordinates,), gains and their covariance, by scaled term."""
+
+    terms: tuple[str, ...]
+    coefficients: np.ndarray
+    gains: np.ndarray
+    covariance: np.ndarray
+    converged: bool
+    log_likelihood: float
+
+
+def modulation(speed_cm_s: np.ndarray) -> np.ndarray:
+    """z: a monotone function of speed with mean 0 and standard deviation 1 over the given time, (n_bins,)."""
+    z = np.log1p(np.maximum(speed_cm_s, 0) / SPEED_SCALE_CM_S)
+    return (z - z.mean()) / z.std()
+
+
+def scaled_terms(space: Workspace) -> list[int]:
+    """Places in the table of the terms whose tuning may be scaled by speed: planes and circles."""
+    return [t for t, term in enumerate(space.terms) if term.kind in ("plane", "circle")]
+
+
+class _Joint:
+    """The speed-gain model of one session's full model on its collapsed rows."""
+
+    def __init__(self, space: Workspace, speed_term: int, z_cell: np.ndarray, fit: Fit) -> None:
+        self.space, self.lay = space, space.layout
+        self.cells = self.lay.table.cells
+        self.z = z_cell[self.cells[speed_term]]
+        self.scaled = scaled_terms(space)
+        self.log_strengths = fit.log_strengths
+
+    @property
+    def ridge(self) -> np.ndarray:
+        """Diagonal of S_lam, (n_coordinates,)."""
+        return np.exp(self.log_strengths) @ self.lay.spectra
+
+    def spikes(self, spike_cells: np.ndarray, z_spike: np.ndarray):
+        """Spike sums that do not depend on the parameters: per cell, plain and weighted by z."""
+        plain, weighted = [], []
+        for t, term in enumerate(self.space.terms):
+            plain.append(np.bincount(spike_cells[t], minlength=term.n_cells).astype(float))
+            weighted.append(np.bincount(spike_cells[t], weights=z_spike, minlength=term.n_cells))
+        return plain, weighted
+
+    def effects(self, beta: np.ndarray) -> list[np.ndarray]:
+        """Each term's contribution at its cells, by term."""
+        self.space.expected(beta, np.ones(1 + int(self.lay.table.group.max())))
+        return [
+            self.space.eta[a:z].copy() for a, z in zip(self.lay.cell_start, self.lay.cell_end, strict=True)
+        ]
+
+    def rows(self, beta: np.ndarray, gains: np.ndarray):
+        """Expected counts (n_rows,), each term's scale 1 + g z (n_terms, n_rows) and effects at rows."""
+        scale = np.ones(self.cells.shape)
+        for g, t in zip(gains, self.scaled, strict=True):
+            scale[t] += g * self.z
+        effect = np.array([f[c] for f, c in zip(self.effects(beta), self.cells, strict=True)])
+        eta = beta[0] + np.sum(scale * effect, axis=0)
+        return self.lay.table.seconds * np.exp(np.minimum(eta, 50)), scale, effect
+
+    def value(self, beta, gains, spikes, mu) -> float:
+        plain, weighted = spikes
+        effects = self.effects(beta)
+        total = beta[0] * plain[0].sum() + sum(f @ k for f, k in zip(effects, plain, strict=True))
+        total += sum(g * (effects[t] @ weighted[t]) for g, t in zip(gains, self.scaled, strict=True))
+        return float(total - mu.sum() - (self.ridge @ beta**2) / 2)
+
+    def project(self, per_cell: list[np.ndarray], total: float) -> np.ndarray:
+        return self.space.project(np.concatenate(per_cell), total)
+
+    def step(self, beta, gains, spikes, mu, scale, effect):
+        """Score and negative Hessian of the penalised likelihood in (beta, gains)."""
+        plain, weighted = spikes
+        n, m = len(beta), len(gains)
+        cell = [
+            np.bincount(c, weights=mu * s, minlength=term.n_cells)
+            for c, s, term in zip(self.cells, scale, self.space.terms, strict=True)
+        ]
+        seen = [k.copy() for k in plain]
+        for g, t in zip(gains, self.scaled, strict=True):
+            seen[t] += g * weighted[t]
+        score = np.empty(n + m)
+        score[:n] = self.project(seen, plain[0].sum()) - self.project(cell, mu.sum()) - self.ridge * beta
+        hessian = np.zeros((n + m, n + m))
+        hessian[:n, :n] = self._information(mu, scale)
+        hessian[np.arange(n), np.arange(n)] += self.ridge
+        effects = self.effects(beta)
+        for i, t in enumerate(self.scaled):
+            slope = self.z * effect[t]
+            score[n + i] = effects[t] @ weighted[t] - mu @ slope
+            crossed = [
+                np.bincount(c, weights=mu * s * slope, minlength=term.n_cells)
+                for c, s, term in zip(self.cells, scale, self.space.terms, strict=True)
+            ]
+            # The predictor is bilinear in f_t and g_t, so the residual enters the observed Hessian as well.
+            crossed[t] -= weighted[t] - np.bincount(
+                self.cells[t], weights=mu * self.z, minlength=self.space.terms[t].n_cells
+            )
+            hessian[:n, n + i] = hessian[n + i, :n] = self.project(crossed, float(mu @ slope))
+            for j, u in enumerate(self.scaled):
+                hessian[n + i, n + j] = np.sum(mu * slope * self.z * effect[u])
+        return score, hessian
+
+    def _information(self, mu, scale) -> np.ndarray:
+        splines = self.lay.n_splines
+        raw = np.zeros((splines, splines))
+        kernels.scaled_information(
+            self.cells, mu, scale, *self.space.flat, self.lay.spline_count, raw
+        )  # fmt: skip
+        return self.space.reduce(raw)
+
+
+def fit_gains(
+    space: Workspace, design: SessionDesign, unit: UnitSpikes, fit: Fit, speed_name: str, z: np.ndarray
+) -> GainFit:
+    """Fit the speed-gain model jointly, from the additive fit of the full model.
+
+    Parameters
+    ----------
+    space : Workspace
+        Of the full model.
+    fit : Fit
+        The additive fit: the start, and the smoothing strengths that are kept.
+    speed_name : str
+        The term whose cells carry z.
+    z : ndarray, (n_bins,)
+        From `modulation`.
+    """
+    speed_term = space.layout.index_of(speed_name)
+    term = space.terms[speed_term]
+    seconds = np.bincount(term.cell, minlength=term.n_cells)
+    z_cell = np.bincount(term.cell, weights=z, minlength=term.n_cells) / np.maximum(seconds, 1)
+    joint = _Joint(space, speed_term, z_cell, fit)
+    spike_cells = np.array([t.cell[unit.bins] for t in space.terms])
+    spikes = joint.spikes(spike_cells, z_cell[spike_cells[speed_term]])
+    beta, gains = fit.coefficients.copy(), np.zeros(len(joint.scaled))
+    for _ in range(STRENGTH_ROUNDS):
+        beta, gains, inverse, value, converged = _climb(joint, beta, gains, spikes)
+        _choose_strengths(joint, beta, gains, spikes)
+    beta, gains, inverse, value, converged = _climb(joint, beta, gains, spikes)
+    n = len(beta)
+    names = tuple(space.terms[t].name for t in joint.scaled)
+    roughness = float(joint.ridge @ beta**2) / 2
+    return GainFit(names, beta, gains, inverse[n:, n:], converged, value + roughness)
+
+
+def _climb(joint: _Joint, beta: np.ndarray, gains: np.ndarray, spikes):
+    """Newton's method in (beta, gains) at the present strengths."""
+    mu, scale, effect = joint.rows(beta, gains)
+    value, inverse = joint.value(beta, gains, spikes, mu), None
+    for _ in range(40):
+        score, hessian = joint.step(beta, gains, spikes, mu, scale, effect)
+        inverse = _inverse(hessian)
+        move = inverse @ score
+        if abs(score @ move) < 1e-6:
+            return beta, gains, inverse, value, True
+        length = min(1.0, 1.0 / max(np.abs(move[len(beta) :]).max(), 1.0), 5.0 / max(np.abs(move).max(), 5.0))
+        for _ in range(30):
+            there = beta + length * move[: len(beta)]
+            moved = np.clip(gains + length * move[len(beta) :], -LARGEST_GAIN, LARGEST_GAIN)
+            mu, scale, effect = joint.rows(there, moved)
+            new = joint.value(there, moved, spikes, mu)
+            if new >= value - 1e-9 * (1 + abs(value)):
+                break
+            length /= 2
+        beta, gains, value = there, moved, new
+    return beta, gains, inverse, value, False
+
+
+def _choose_strengths(joint: _Joint, beta: np.ndarray, gains: np.ndarray, spikes) -> None:
+    """Smoothing strengths at these gains, for which the model is an ordinary additive one on scaled bases."""
+    n = len(beta)
+    mu, scale, effect = joint.rows(beta, gains)
+    score, hessian = joint.step(beta, gains, spikes, mu, scale, effect)
+    information = hessian[:n, :n] - np.diag(joint.ridge)
+    target = score[:n] + joint.ridge * beta + information @ beta
+    problem = Quadratic(information, target, joint.lay.spectra)
+    joint.log_strengths = tune(problem, joint.log_strengths, choose=True, tolerance=1e-3).log_strengths
+
+
+def _inverse(hessian: np.ndarray) -> np.ndarray:
+    """Inverse of the negative Hessian; where it is not positive definite, its positive part's."""
+    try:
+        return factorise(hessian)[1]
+    except FloatingPointError:
+        values, vectors = np.linalg.eigh(hessian)
+        return (vectors / np.maximum(np.abs(values), 1e-6 * values.max())) @ vectors.T
+
+
+def gain_test(
+    space: Workspace,
+    design: SessionDesign,
+    unit: UnitSpikes,
+    fit: Fit,
+    z: np.ndarray,
+    plan: ShiftPlan,
+    name: str,
+) -> float:
+    """Two-sided p of a term's gain: the standardised efficient score among circular shifts of z.
+
+    Parameters as for `fit_gains`; `name` is the scaled term. The draw of shifts in `plan` is used.
+    """
+    if not len(plan.drawn):
+        return float("nan")
+    residual, expected = residuals(space, fit, design, unit)
+    t = space.layout.index_of(name)
+    term, block = space.terms[t], space.layout.slices[t]
+    effect = ((term.basis.dense() @ term.coordinates.matrix()) @ fit.coefficients[block])[plan.cells(term)]
+    e, w = plan.per_step(residual), plan.per_step(expected)
+    zs = plan.per_step(z) / plan.bins_per_step
+    shifts = np.append(0, plan.drawn)
+    turned = np.conj(fft.rfft(zs)), np.conj(fft.rfft(zs**2))
+
+    def against(signal: np.ndarray, which: int) -> np.ndarray:
+        """sum_i signal_i z_(i + s)^k for the shifts, (..., n_shifts)."""
+        product = np.conj(fft.rfft(signal, axis=-1)) * np.conj(turned[which])
+        return fft.irfft(product, n=plan.n_steps, axis=-1)[..., shifts]
+
+    score = against(e * effect, 0)
+    variance = against(w * effect**2, 1)
+    crossed = against(_step_design(space, plan) * (w * effect), 0)
+    variance = variance - np.sum(crossed * (fit.covariance @ crossed), axis=0)
+    statistic = np.abs(score) / np.sqrt(np.maximum(variance, 1e-12 * np.abs(variance).max() + 1e-300))
+    return float((1 + np.sum(statistic[1:] >= statistic[0] * (1 - 1e-9))) / len(shifts))
+
+
+def _step_design(space: Workspace, plan: ShiftPlan) -> np.ndarray:
+    """The full model's design matrix over steps, (n_coordinates, n_steps)."""
+    rows = [np.ones((1, plan.n_steps))]
+    for term in space.terms:
+        rows.append((term.basis.dense() @ term.coordinates.matrix())[plan.cells(term)].T)
+    return np.concatenate(rows)
+
+
+def describe_gains(
+    space: Workspace,
+    design: SessionDesign,
+    fitted: GainFit,
+    speed_name: str,
+    z: np.ndarray,
+    running_above_cm_s: float,
+    p_values: dict[str, float],
+) -> dict[str, Gain]:
+    """Gains in plain units: information at the 20th and 80th percentile of running speed."""
+    running = design.speed_cm_s > running_above_cm_s
+    speeds = np.quantile(design.speed_cm_s[running] if running.any() else design.speed_cm_s, [0.2, 0.8])
+    order = np.argsort(design.speed_cm_s, kind="stable")
+    z_at = np.interp(speeds, design.speed_cm_s[order], z[order])
+    speed_rate = _speed_rate(space, fitted, speed_name, speeds)
+    out = {}
+    for name, gain, variance in zip(fitted.terms, fitted.gains, np.diag(fitted.covariance), strict=True):
+        t = space.layout.index_of(name)
+        term = space.terms[t]
+        effect = (term.basis.dense() @ term.coordinates.matrix()) @ fitted.coefficients[
+            space.layout.slices[t]
+        ]
+        seconds = np.bincount(term.cell, minlength=term.n_cells) * design.bin_s
+        rates = [np.exp((1 + gain * at) * effect) for at in z_at]
+        bits = [information_bits_per_spike(seconds, rate) for rate in rates]
+        level = [float(seconds @ r / seconds.sum()) * s for r, s in zip(rates, speed_rate, strict=True)]
+        out[name] = Gain(
+            float(gain),
+            float(np.sqrt(max(variance, 0.0))),
+            p_values.get(name, float("nan")),
+            bits[0],
+            bits[1],
+            bits[0] * level[0],
+            bits[1] * level[1],
+        )
+    return out
+
+
+def _speed_rate(space: Workspace, fitted: GainFit, speed_name: str, speeds: np.ndarray) -> np.ndarray:
+    """Rate at each speed with every other term at its occupancy mean, hertz."""
+    t = space.layout.index_of(speed_name)
+    term: Term = space.terms[t]
+    effect = (term.basis.dense() @ term.coordinates.matrix()) @ fitted.coefficients[space.layout.slices[t]]
+    others = 0.0
+    for u, other in enumerate(space.terms):
+        if other.kind in ("plane", "circle") or u == t:
+            continue
+        values = (other.basis.dense() @ other.coordinates.matrix()) @ fitted.coefficients[
+            space.layout.slices[u]
+        ]
+        others += float(np.mean(values[other.cell]))
+    return np.exp(fitted.coefficients[0] + others + np.interp(speeds, term.axes[0], effect))
