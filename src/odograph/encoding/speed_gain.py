@@ -205,6 +205,7 @@ def fit_gains(
         beta, gains, inverse, value, converged = _climb(joint, beta, gains, spikes)
         _choose_strengths(joint, beta, gains, spikes)
     beta, gains, inverse, value, converged = _climb(joint, beta, gains, spikes)
+    beta, gains = _free_amplitudes(joint, beta, gains, spikes)
     n = len(beta)
     names = tuple(space.terms[t].name for t in joint.scaled)
     roughness = float(joint.ridge @ beta**2) / 2
@@ -232,6 +233,40 @@ def _climb(joint: _Joint, beta: np.ndarray, gains: np.ndarray, spikes):
             length /= 2
         beta, gains, value = there, moved, new
     return beta, gains, inverse, value, False
+
+
+def _free_amplitudes(joint: _Joint, beta: np.ndarray, gains: np.ndarray, spikes):
+    """Let each scaled term's amplitude go unpenalised, its shape kept, and settle the gains with it.
+
+    The penalty flattens f_t, and a flattened f_t needs a larger gain to say the same of g_t f_t; without its
+    pull on the amplitude the gain is free of that bias.
+    """
+    n, m = len(beta), len(gains)
+    held = np.zeros((n + m, n + m))
+    slices = [joint.lay.slices[t] for t in joint.scaled]
+    free = np.ones(n, dtype=bool)
+    for block in slices:
+        free[block] = False
+    others = np.flatnonzero(free)
+    for _ in range(20):
+        mu, scale, effect = joint.rows(beta, gains)
+        score, hessian = joint.step(beta, gains, spikes, mu, scale, effect)
+        directions = np.zeros((n + m, len(others) + 2 * m))
+        directions[others, np.arange(len(others))] = 1.0
+        for i, block in enumerate(slices):
+            directions[block, len(others) + i] = beta[block]
+            directions[n + i, len(others) + m + i] = 1.0
+            score[block] += joint.ridge[block] * beta[block]
+            held[block, block] = np.diag(joint.ridge[block])
+        move = directions @ np.linalg.solve(
+            directions.T @ (hessian - held) @ directions + 1e-9 * np.eye(directions.shape[1]),
+            directions.T @ score,
+        )
+        move *= min(1.0, 0.5 / max(np.abs(move[n:]).max(), 0.5))
+        beta, gains = beta + move[:n], np.clip(gains + move[n:], -LARGEST_GAIN, LARGEST_GAIN)
+        if np.abs(move).max() < 1e-5:
+            break
+    return beta, gains
 
 
 def _choose_strengths(joint: _Joint, beta: np.ndarray, gains: np.ndarray, spikes) -> None:
