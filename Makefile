@@ -62,7 +62,7 @@ $(RECORDINGS_STAMP): $(DEMO_SOURCES) | $(ENVIRONMENT_STAMP)
 	@touch $@
 
 demo: $(ENVIRONMENT_STAMP) $(RECORDINGS_STAMP)
-	@$(RUN) snakemake --profile workflow/profiles/local
+	@$(RUN) snakemake --profile workflow/profiles/local --quiet reason host
 	@echo
 	@echo "The report: $(CURDIR)/results/report.html"
 	@echo
