@@ -36,7 +36,7 @@ def position_gain(shape: str, side_m: float, rng: np.random.Generator) -> Positi
 def _single_field(side_m: float, rng: np.random.Generator) -> PositionGain:
     centre_x, centre_y = rng.uniform(0.15 * side_m, 0.85 * side_m, 2)
     width_m = rng.uniform(0.11, 0.16)
-    floor = rng.uniform(0.03, 0.08)
+    floor = rng.uniform(0.03, 0.20)
 
     def gain(x: np.ndarray, y: np.ndarray) -> np.ndarray:
         return floor + (1 - floor) * np.exp(-((x - centre_x) ** 2 + (y - centre_y) ** 2) / (2 * width_m**2))
@@ -49,7 +49,7 @@ def _periodic(side_m: float, rng: np.random.Generator) -> PositionGain:
     spacing_m = rng.uniform(0.34, 0.48)
     turn = rng.uniform(0, math.pi / 3)
     shift_x, shift_y = rng.uniform(0, side_m, 2)
-    contrast = rng.uniform(2.2, 2.9)
+    contrast = rng.uniform(1.6, 2.8)
     wave = 4 * math.pi / (math.sqrt(3) * spacing_m)
 
     def gain(x: np.ndarray, y: np.ndarray) -> np.ndarray:
@@ -67,7 +67,7 @@ def _wall(side_m: float, rng: np.random.Generator) -> PositionGain:
     first = int(rng.integers(4))
     walls = [first] if rng.random() < 0.6 else [first, (first + 1) % 4]
     reach_m = rng.uniform(0.09, 0.14)
-    floor = rng.uniform(0.04, 0.10)
+    floor = rng.uniform(0.04, 0.25)
 
     def gain(x: np.ndarray, y: np.ndarray) -> np.ndarray:
         distance = (x, y, side_m - x, side_m - y)
@@ -79,7 +79,7 @@ def _wall(side_m: float, rng: np.random.Generator) -> PositionGain:
 
 def _irregular(side_m: float, rng: np.random.Generator) -> PositionGain:
     """A smooth random surface: many plane waves of random direction, the wave numbers Gaussian."""
-    count, scale_m, contrast = 40, rng.uniform(0.15, 0.20), rng.uniform(0.9, 1.2)
+    count, scale_m, contrast = 40, rng.uniform(0.15, 0.20), rng.uniform(0.6, 1.1)
     wave_x, wave_y = rng.standard_normal((2, count)) / scale_m
     phase = rng.uniform(0, 2 * math.pi, count)
     height = math.sqrt(2 / count)
@@ -98,14 +98,14 @@ def _irregular(side_m: float, rng: np.random.Generator) -> PositionGain:
 def head_direction_gain(rng: np.random.Generator) -> CircleGain:
     """One preferred direction, a von Mises bump over a floor; values in (0, 1]."""
     preferred = rng.uniform(0, 2 * math.pi)
-    concentration = rng.uniform(1.6, 4.5)
-    floor = rng.uniform(0.04, 0.15)
+    concentration = rng.uniform(1.2, 4.5)
+    floor = rng.uniform(0.04, 0.35)
     return lambda angle: floor + (1 - floor) * np.exp(concentration * (np.cos(angle - preferred) - 1))
 
 
 def speed_gain(shape: str, rng: np.random.Generator) -> CircleGain:
     """One speed tuning over 0 to 60 cm/s: rising, falling or non_monotonic; values in (0, 1]."""
-    floor = rng.uniform(0.18, 0.30)
+    floor = rng.uniform(0.20, 0.42)
     if shape == "non_monotonic":
         best, width = rng.uniform(13, 18), rng.uniform(5.5, 7.5)
         return lambda speed: floor + (1 - floor) * np.exp(-0.5 * ((speed - best) / width) ** 2)
