@@ -6,7 +6,7 @@ import warnings
 from collections.abc import Callable, Sequence
 from datetime import UTC, datetime
 from pathlib import Path
-from typing import Any
+from typing import Any, ClassVar
 
 import h5py
 import numpy as np
@@ -49,12 +49,28 @@ class Parts:
     frame_times = staticmethod(frame_times)
     walk = staticmethod(walk)
     spikes = staticmethod(spikes)
+    _made: ClassVar[dict[str | None, bytes]] = {}
 
     def __init__(self, folder: Path) -> None:
         self.folder = folder
 
-    def write(self, *parts: Part, name: str = "recording.nwb", **facts: Any) -> Path:
-        """Write a file that holds these parts."""
+    def write(
+        self,
+        *parts: Part,
+        name: str = "recording.nwb",
+        specification: bool = False,
+        once: str | None = None,
+        **facts: Any,
+    ) -> Path:
+        """Write a file that holds these parts.
+
+        It is written faster without the specification in it. A file that several tests start from is named
+        by `once`, made by the first of them and copied by the others.
+        """
+        path = self.folder / name
+        if once in self._made:
+            path.write_bytes(self._made[once])
+            return path
         facts = {
             "session_description": "a walk on the moor",
             "identifier": "moor-1",
@@ -66,14 +82,15 @@ class Parts:
             nwbfile = NWBFile(**facts)
             for part in parts:
                 part(nwbfile)
-            path = self.folder / name
             with NWBHDF5IO(path, "w") as io:
-                io.write(nwbfile)
+                io.write(nwbfile, cache_spec=specification)
+        if once is not None:
+            self._made[once] = path.read_bytes()
         return path
 
     def usual(self, **tracking: Any) -> Path:
         """A file with one tracked point and two units."""
-        return self.write(self.tracking(**tracking), self.units())
+        return self.write(self.tracking(**tracking), self.units(), once=None if tracking else "usual")
 
     @staticmethod
     def settings(**values: Any) -> IntakeSettings:

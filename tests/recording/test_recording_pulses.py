@@ -28,12 +28,14 @@ def pulses(path, settings):
 
 
 def test_without_a_place_there_are_none(nwb):
-    assert pulses(nwb.write(nwb.events(TIMES)), nwb.settings())[0] is None
+    assert pulses(nwb.write(nwb.events(TIMES), once="pulses"), nwb.settings())[0] is None
 
 
 @pytest.mark.parametrize("place", ["events/camera", "camera", "/events/camera/timestamp"])
 def test_a_table_of_events(nwb, place):
-    found, findings = pulses(nwb.write(nwb.events(TIMES)), nwb.settings(frame_pulses_place=place))
+    found, findings = pulses(
+        nwb.write(nwb.events(TIMES), once="pulses"), nwb.settings(frame_pulses_place=place)
+    )
     np.testing.assert_array_equal(found.time_s, TIMES)
     assert found.place == "events/camera" and not findings
 
@@ -63,7 +65,7 @@ def test_one_kind_of_events_among_several(nwb, column):
 
 
 def test_a_label_where_there_are_none(nwb):
-    path = nwb.write(nwb.events(TIMES))
+    path = nwb.write(nwb.events(TIMES), once="pulses")
     with pytest.raises(InputError, match="no column of labels"):
         pulses(path, nwb.settings(frame_pulses_place="events/camera", frame_pulses_label="frame"))
 
@@ -230,13 +232,13 @@ def test_events_of_an_extension(nwb, event_types):
     ],
 )
 def test_places_that_hold_no_pulses(nwb, place, message):
-    path = nwb.write(nwb.tracking(), nwb.events(TIMES))
+    path = nwb.write(nwb.tracking(), nwb.events(TIMES), once="tracking and pulses")
     with pytest.raises(InputError, match=message):
         pulses(path, nwb.settings(frame_pulses_place=place))
 
 
 def test_pulse_times_that_are_not_finite(nwb, replace_data):
-    path = nwb.write(nwb.events(TIMES))
+    path = nwb.write(nwb.events(TIMES), once="pulses")
     bad = TIMES.copy()
     bad[3] = np.nan
     replace_data(path, "events/camera/timestamp", bad)
@@ -245,7 +247,7 @@ def test_pulse_times_that_are_not_finite(nwb, replace_data):
 
 
 def test_no_pulse_at_all(nwb, replace_data):
-    path = nwb.write(nwb.events(TIMES))
+    path = nwb.write(nwb.events(TIMES), once="pulses")
     replace_data(path, "events/camera/timestamp", np.empty(0))
     replace_data(path, "events/camera/id", np.empty(0, dtype=int))
     with pytest.raises(InputError, match="no pulse"):

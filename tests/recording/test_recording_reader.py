@@ -266,11 +266,11 @@ def test_an_implausible_extent_warns_of_the_unit(nwb):
     assert found["level"] == "warn" and "length_unit" in found["remedy"]
 
 
-def test_files_of_an_older_schema_without_the_cached_specification(nwb):
-    path = nwb.usual()
+@pytest.mark.parametrize("specification", [True, False])
+def test_files_of_an_older_schema_with_and_without_the_cached_specification(nwb, specification):
+    path = nwb.write(nwb.tracking(), nwb.units(), specification=specification)
     with h5py.File(path, "r+") as file:
-        del file["specifications"]
-        del file.attrs[".specloc"]
+        assert ("specifications" in file) == specification
         file.attrs["nwb_version"] = "2.2.5"
     recording = read_recording(path, nwb.settings())
     assert recording.file.nwb_version == "2.2.5" and len(recording.units) == 2

@@ -17,9 +17,9 @@ def read(path, settings, **what):
     return recording.units, recording.findings
 
 
-def refusal(nwb, *parts, **settings) -> InputError:
+def refusal(nwb, *parts, once=None, **settings) -> InputError:
     with pytest.raises(InputError) as caught:
-        read_recording(nwb.write(nwb.tracking(), *parts), nwb.settings(**settings))
+        read_recording(nwb.write(nwb.tracking(), *parts, once=once), nwb.settings(**settings))
     assert caught.value.place and caught.value.expected and caught.value.remedy
     return caught.value
 
@@ -202,7 +202,8 @@ COLUMNS = {
     ],
 )
 def test_conditions_on_columns(nwb, conditions, kept):
-    path = nwb.write(nwb.tracking(), nwb.units([nwb.spikes(seed=k) for k in range(3)], columns=COLUMNS))
+    units = nwb.units([nwb.spikes(seed=k) for k in range(3)], columns=COLUMNS)
+    path = nwb.write(nwb.tracking(), units, once="graded units")
     recording = read_recording(path, nwb.settings(unit_filter=conditions))
     assert [unit.unit_id for unit in recording.units if unit.kept] == kept
     assert all(unit.reason for unit in recording.units if not unit.kept)
@@ -228,7 +229,7 @@ def test_a_value_that_is_no_number_passes_no_limit(nwb):
 )
 def test_conditions_that_do_not_fit_the_file(nwb, settings, found, expected):
     units = nwb.units([nwb.spikes(seed=k) for k in range(3)], columns=COLUMNS)
-    error = refusal(nwb, units, **settings)
+    error = refusal(nwb, units, once="graded units", **settings)
     assert found in error.found and expected in error.expected
 
 

@@ -80,25 +80,10 @@ def _walk(
 def _resolve(group: h5py.Group, name: str) -> h5py.HLObject | None:
     try:
         return group[name]
-    except (KeyError, OSError):
+    except (KeyError, OSError, RuntimeError):
         return None
 
 
 def _address(thing: h5py.HLObject) -> tuple[int, int]:
     info = h5py.h5o.get_info(thing.id)
     return info.fileno, info.addr
-
-
-def resolve_place(path: Path, place: str) -> str:
-    """Follow the soft links in a place, so that a linked name leads to the object's own place."""
-    with h5py.File(path, "r") as file:
-        resolved = ""
-        for part in place.strip("/").split("/"):
-            resolved = f"{resolved}/{part}".strip("/")
-            for _ in range(16):
-                link = file.get(resolved, getlink=True)
-                if not isinstance(link, h5py.SoftLink):
-                    break
-                base = "" if link.path.startswith("/") else resolved.rpartition("/")[0]
-                resolved = f"{base}/{link.path}".strip("/")
-        return resolved

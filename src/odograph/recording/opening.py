@@ -14,7 +14,7 @@ import h5py
 import numpy as np
 
 from odograph.errors import InputError, OdographError
-from odograph.recording.links import Links, follow_links, resolve_place
+from odograph.recording.links import Links, follow_links
 from odograph.recording.model import FileFacts, Finding, finding
 from odograph.settings.intake import IntakeSettings
 
@@ -26,13 +26,15 @@ class OpenRecording:
     """An NWB file held open for reading.
 
     `places` maps the place of every object in the file (`processing/behavior/Position/led`) to the object
-    that pynwb made of it. `findings` gathers what is worth a warning.
+    that pynwb made of it, `aliases` each link to the place it stands for. `findings` gathers what is worth a
+    warning.
     """
 
     path: Path
     nwbfile: Any
     facts: FileFacts
     places: dict[str, Any]
+    aliases: dict[str, str]
     lost_places: tuple[str, ...] = ()
     findings: list[Finding] = field(default_factory=list)
 
@@ -63,9 +65,10 @@ class OpenRecording:
         wanted = place.strip("/")
         if wanted in self.places:
             return wanted
-        linked = resolve_place(self.path, wanted)
-        if linked in self.places:
-            return linked
+        for link in sorted(self.aliases, key=len, reverse=True):
+            linked = self.aliases[link] + wanted.removeprefix(link)
+            if (wanted == link or wanted.startswith(f"{link}/")) and linked in self.places:
+                return linked
         ends = [known for known in self.places if known.endswith(f"/{wanted}")]
         return ends[0] if len(ends) == 1 else None
 
@@ -100,9 +103,8 @@ def open_recording(path: str | Path, settings: IntakeSettings) -> Iterator[OpenR
         warnings.simplefilter("ignore")
         io, nwbfile = _read(pynwb, path, links)
         try:
-            opened = OpenRecording(
-                path, nwbfile, facts, _places(io, nwbfile), tuple(link.place for link in links.missing)
-            )
+            lost = tuple(link.place for link in links.missing)
+            opened = OpenRecording(path, nwbfile, facts, *_places(io, nwbfile), lost)
             for link in links.missing:
                 opened.note(
                     "warn",
@@ -264,18 +266,35 @@ def _reason(error: BaseException) -> str:
     return f"{type(error).__name__}: {text[:240]}"
 
 
-def _places(io: Any, nwbfile: Any) -> dict[str, Any]:
-    places: dict[str, Any] = {}
+def _places(io: Any, nwbfile: Any) -> tuple[dict[str, Any], dict[str, str]]:
+    """Place of every object of the file, and what each link among its groups stands for."""
+    names: dict[int, str] = {}
+    links: list[tuple[str, Any]] = []
+    aliases: dict[str, str] = {}
+    _name_builders(io.manager.get_builder(nwbfile), "", names, links)
+    # What lies in another file has no place in this one but that of the link. Such a link may hold links
+    # in turn, so the list grows while it is walked.
+    for place, target in links:
+        if id(target) in names:
+            aliases[place] = names[id(target)]
+        else:
+            _name_builders(target, place, names, links)
+    places = {}
     for thing in nwbfile.objects.values():
-        place = _place_of(io, nwbfile, thing)
+        place = names.get(id(io.manager.get_builder(thing)))
         if place:
             places.setdefault(place, thing)
-    return dict(sorted(places.items()))
+    return dict(sorted(places.items())), aliases
 
 
-def _place_of(io: Any, nwbfile: Any, thing: Any) -> str:
-    builder = io.manager.get_builder(thing)
-    return builder.path.removeprefix("root").strip("/") if builder is not None else ""
+def _name_builders(builder: Any, place: str, names: dict[int, str], links: list[tuple[str, Any]]) -> None:
+    names[id(builder)] = place
+    above = f"{place}/" if place else ""
+    for name, group in getattr(builder, "groups", {}).items():
+        _name_builders(group, f"{above}{name}", names, links)
+    for name, dataset in getattr(builder, "datasets", {}).items():
+        names[id(dataset)] = f"{above}{name}"
+    links.extend((f"{above}{name}", link.builder) for name, link in getattr(builder, "links", {}).items())
 
 
 def _check_times_of_file(opened: OpenRecording) -> None:
