@@ -23,7 +23,7 @@ from odograph.figures.panels import column, number, place_extent, unit_status, v
 from odograph.figures.style import axes_at, figure_style, new_figure, text_at
 from odograph.settings.figures import FiguresSettings
 
-WIDTH_IN, HEIGHT_IN = 7.2, 5.35
+WIDTH_IN, HEIGHT_IN = 7.2, 5.5
 _MAP_IN, _MAP_BOTTOM_IN = 1.78, 2.76
 _CURVE_IN, _CURVE_BOTTOM_IN = 1.2, 0.77
 
@@ -57,7 +57,7 @@ def draw_card(
     Returns
     -------
     Figure
-        7.2 by 5.35 inches, taller where more variables than the usual three were fitted. A unit that was not
+        7.2 by 5.5 inches, taller where more variables than the usual three were fitted. A unit that was not
         fitted gets a card too, which says why.
     """
     with figure_style(settings):
@@ -97,7 +97,7 @@ def _bare_card(
     settings: FiguresSettings,
 ) -> Figure:
     """The card of a unit that has no curves: its path and spikes, and why there is no more."""
-    figure = new_figure(WIDTH_IN, 1.35 + map_in, settings)
+    figure = new_figure(WIDTH_IN, 1.5 + map_in, settings)
     _head(figure, row, behaviour)
     draw_spikes(
         axes_at(figure, 0.46, 0.55, _MAP_IN, map_in), row, curves, behaviour, corners, extent, settings

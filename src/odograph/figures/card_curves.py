@@ -18,25 +18,12 @@ from odograph.figures.colours import (
     term_colour,
     term_label,
 )
-from odograph.figures.panels import absent, column, number, say, unit_status, valid_bins, wrapped
+from odograph.figures.panels import absent, column, number, say, term_title, valid_bins, wrapped
 from odograph.figures.style import direction_colours
 from odograph.settings.figures import FiguresSettings
 
 STANDARD_TERMS = ("position", "head_direction", "speed")
 MOST_MODELS = 12
-
-
-def _term_title(axes: Any, row: Mapping[str, Any], term: str) -> None:
-    encoded = bool(row.get(f"encodes_{term}") or False)
-    p = row.get(f"{term}_p")
-    notes = ["encoded" if encoded else "not encoded"] if unit_status(row) == "fitted" else []
-    if number(p) != "–":
-        notes.append("p < 0.001" if float(p) < 0.001 else f"p = {float(p):.3f}")
-    axes.set_title(term_label(term), color=term_colour(term), pad=14 if notes else None)
-    axes.annotate(
-        ", ".join(notes), (0, 1), (0, 4), xycoords="axes fraction", textcoords="offset points",
-        color=SOFT_INK,
-    )  # fmt: skip
 
 
 def _draw_curve(
@@ -65,7 +52,7 @@ def draw_direction(
     axes: Any, row: Mapping[str, Any], curves: Mapping[str, np.ndarray], settings: FiguresSettings
 ) -> None:
     """The curve of head direction over a strip of the colours that the spikes are drawn in."""
-    _term_title(axes, row, "head_direction")
+    term_title(axes, row, "head_direction")
     if "head_direction_rate_hz" not in curves:
         say(axes, absent(row, "head_direction"))
         return
@@ -84,7 +71,7 @@ def draw_speed(
     axes: Any, row: Mapping[str, Any], curves: Mapping[str, np.ndarray], behaviour: pd.DataFrame
 ) -> None:
     """The curve of running speed over a histogram of the time spent at each speed."""
-    _term_title(axes, row, "speed")
+    term_title(axes, row, "speed")
     if "speed_rate_hz" not in curves:
         say(axes, absent(row, "speed"), 24)
         return
@@ -123,7 +110,7 @@ def _axis_of(curves: Mapping[str, np.ndarray], term: str) -> tuple[np.ndarray, s
 
 def draw_extra(axes: Any, row: Mapping[str, Any], curves: Mapping[str, np.ndarray], term: str) -> None:
     """The curve of a variable that the laboratory added."""
-    _term_title(axes, row, term)
+    term_title(axes, row, term)
     x, label = _axis_of(curves, term)
     top = _draw_curve(axes, x, curves, term, row)
     axes.set_xlim(float(np.min(x)), float(np.max(x)))

@@ -10,16 +10,19 @@ import pandas as pd
 from matplotlib.cm import ScalarMappable
 from matplotlib.colors import Normalize
 
-from odograph.figures.colours import INK
+from odograph.figures.colours import INK, term_colour
 from odograph.figures.panels import (
     absent,
     column,
     draw_arena,
     draw_path,
     edges_of,
+    number,
     say,
     square_map_axes,
+    term_note,
     thinned,
+    two_line_title,
     valid_bins,
 )
 from odograph.figures.style import direction_colours, rate_colours
@@ -37,7 +40,7 @@ def draw_spikes(
 ) -> None:
     """The path with a dot at every spike, coloured by head direction where that is known."""
     x, y, valid = column(behaviour, "x_m"), column(behaviour, "y_m"), valid_bins(behaviour)
-    axes.set_title("path and spikes")
+    two_line_title(axes, "path and spikes", "")
     if not len(x) or not np.isfinite(x).any():
         say(axes, "There is no valid position in this session.")
         return
@@ -57,8 +60,8 @@ def draw_spikes(
         colours = direction_colours(settings)(np.nan_to_num(direction) / (2 * np.pi) % 1.0)
         colours[~known] = (0.4, 0.4, 0.4, 1.0)
     axes.scatter(x[shown], y[shown], s=3.2, c=colours, lw=0, alpha=0.85, zorder=3, rasterized=True)
-    if len(shown) < len(bins):
-        axes.set_title(f"path, {len(shown):,} of {len(bins):,} spikes")
+    share = f"{len(shown):,} of {len(bins):,} spikes" if len(shown) < len(bins) else f"{len(bins):,} spikes"
+    two_line_title(axes, "path and spikes", share)
 
 
 def draw_maps(
@@ -73,8 +76,8 @@ def draw_maps(
 ) -> None:
     """The observed and the fitted rate on one colour scale, the unvisited in grey."""
     observed, fitted = curves.get("position_observed_hz"), curves.get("position_rate_hz")
-    observed_axes.set_title("observed rate")
-    fitted_axes.set_title("fitted by position")
+    two_line_title(observed_axes, "observed rate", "")
+    two_line_title(fitted_axes, "fitted by position", "", term_colour("position"))
     if observed is not None and fitted is not None and np.shape(observed) == np.shape(fitted):
         fitted = np.where(np.isfinite(observed), fitted, np.nan)
     shown = [np.asarray(values, float) for values in (observed, fitted) if values is not None]
@@ -100,6 +103,10 @@ def draw_maps(
         )
         draw_arena(axes, corners)
         square_map_axes(axes, extent, first=False)
+    if observed is not None:
+        two_line_title(observed_axes, "observed rate", f"smoothed, peak {number(np.nanmax(observed), 1)} Hz")
+    if fitted is not None:
+        two_line_title(fitted_axes, "fitted by position", term_note(row, "position"), term_colour("position"))
     bar = scale_axes.figure.colorbar(ScalarMappable(norm, colours), cax=scale_axes)
     bar.outline.set_visible(False)
     bar.ax.tick_params(length=2)

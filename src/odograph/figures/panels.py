@@ -10,7 +10,7 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
-from odograph.figures.colours import PATH, SOFT_INK, term_label
+from odograph.figures.colours import INK, PATH, SOFT_INK, term_colour, term_label
 
 Extent = tuple[float, float, float, float]
 
@@ -127,3 +127,29 @@ def absent(row: Mapping[str, Any], what: str) -> str:
     if status == "fitted":
         return f"There is no fit of {term_label(what)} for this unit."
     return "Not fitted: too few spikes." if status == "too_few_spikes" else "Not fitted: the fit failed."
+
+
+def two_line_title(axes: Any, title: str, note: str, colour: str = INK) -> None:
+    """A bold title and a quiet note below it; a second call takes the place of the first."""
+    axes.set_title(title, color=colour, pad=14)
+    for old in [text for text in axes.texts if text.get_gid() == "note"]:
+        old.remove()
+    axes.annotate(
+        note, (0, 1), (0, 4), xycoords="axes fraction", textcoords="offset points",
+        color=SOFT_INK, gid="note",
+    )  # fmt: skip
+
+
+def term_note(row: Mapping[str, Any], term: str) -> str:
+    """Whether the unit encodes a variable, and the p of its test where there is one."""
+    p = row.get(f"{term}_p")
+    encoded = bool(row.get(f"encodes_{term}") or False)
+    notes = ["encoded" if encoded else "not encoded"] if unit_status(row) == "fitted" else []
+    if number(p) != "–":
+        notes.append("p < 0.001" if float(p) < 0.001 else f"p = {float(p):.3f}")
+    return ", ".join(notes)
+
+
+def term_title(axes: Any, row: Mapping[str, Any], term: str) -> None:
+    """A variable's name in its colour, and what was found about it."""
+    two_line_title(axes, term_label(term), term_note(row, term), term_colour(term))

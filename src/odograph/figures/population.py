@@ -7,6 +7,7 @@ from typing import Any
 import numpy as np
 import pandas as pd
 from matplotlib.figure import Figure
+from matplotlib.ticker import NullFormatter
 
 from odograph.figures.captions import POPULATION_FIGURES
 from odograph.figures.colours import INK, RULE, SOFT_INK, model_label, model_terms, term_colour, term_label
@@ -93,7 +94,7 @@ def draw_slow_against_fast(units: pd.DataFrame, speed: pd.DataFrame, settings: F
         headline(figure, title, n_text(len(fitted), len(_animals(fitted))))
         marks = animal_marks(_animals(fitted))
         for place, variable in enumerate(("position", "head_direction")):
-            axes = axes_at(figure, 0.6 + 3.55 * place, 1.15, 2.6, 2.6)
+            axes = axes_at(figure, 0.7 + 3.5 * place, 1.15, 2.6, 2.6)
             _draw_pairs(axes, fitted, speed, variable, marks)
         animal_legend(figure, marks, 0.1, 0.06)
     return figure
@@ -132,10 +133,12 @@ def _draw_pairs(
     positive = positive[positive > 0]
     low = max(float(np.quantile(positive, 0.01)) * 0.7, 1e-3) if positive.size else 1e-3
     high = max(float(positive.max()) * 1.3, low * 10) if positive.size else 1.0
+    steps = (1, 2, 5) if high / low < 30 else (1,)
+    ticks = [step * 10.0**k for k in range(-3, 3) for step in steps if low <= step * 10.0**k <= high]
     for axis, scale in ((axes.xaxis, axes.set_xscale), (axes.yaxis, axes.set_yscale)):
         scale("log")
-        ticks = [tick for tick in (0.001, 0.01, 0.1, 1, 10) if low <= tick <= high]
         axis.set_ticks(ticks, [f"{tick:g}" for tick in ticks])
+        axis.set_minor_formatter(NullFormatter())
     axes.plot([low, high], [low, high], color=SOFT_INK, lw=0.7, ls=(0, (4, 3)), zorder=1)
     axes.set_xlim(low, high)
     axes.set_ylim(low, high)
@@ -156,12 +159,12 @@ def _change_text(speed: pd.DataFrame, variable: str, others: int) -> str:
     rows = speed[(speed["measure"] == wanted) & (speed["level"] == "all")] if len(speed) else speed
     if len(rows) and int(rows["n"].iloc[0]):
         row = rows.iloc[0]
-        change = f"median change {number(row['value'], 3)}"
-        if np.isfinite(row["low"]):
-            change += f" ({number(row['low'], 3)} to {number(row['high'], 3)})"
+        interval = (
+            f" ({number(row['low'], 3)} to {number(row['high'], 3)})" if np.isfinite(row["low"]) else ""
+        )
         lines = [
-            f"filled: {number(row['n'], 0)} units that encode it, {number(row['k'], 0)} gain,",
-            f"{change} bits per spike",
+            f"filled: {number(row['n'], 0)} units encode it, {number(row['k'], 0)} gain,",
+            f"median change {number(row['value'], 3)}{interval}",
         ]
     return "\n".join([*lines, f"open: the other {number(others, 0)} units" if others else ""])
 
@@ -189,7 +192,7 @@ def draw_held_out_scores(units: pd.DataFrame, scores: pd.DataFrame, settings: Fi
         models = sorted(set(table["model"]) - {"constant"}, key=_model_rank)
         height = 0.32 * len(models)
         figure = new_figure(WIDTH_IN, 1.12 + height, settings)
-        axes, counts = axes_at(figure, 2.2, 0.6, 3.1, height), axes_at(figure, 5.6, 0.6, 1.15, height)
+        axes, counts = axes_at(figure, 2.45, 0.6, 2.95, height), axes_at(figure, 5.7, 0.6, 1.1, height)
         axes.set_title("each unit, quartiles and median")
         counts.set_title("times selected")
         jitter = np.random.default_rng(0)
@@ -197,7 +200,8 @@ def draw_held_out_scores(units: pd.DataFrame, scores: pd.DataFrame, settings: Fi
             y = len(models) - 1 - place
             terms = model_terms(model)
             colour = term_colour(terms[0]) if len(terms) == 1 else INK
-            value = table.loc[table["model"] == model, "bits_per_spike"].dropna().to_numpy(float)
+            of_model = table[table["model"] == model].sort_values(["session", "unit"])
+            value = of_model["bits_per_spike"].dropna().to_numpy(float)
             _draw_spread(axes, value, y, colour, jitter)
             chosen = int((fitted["selected_model"] == model).sum())
             counts.barh(y, chosen, height=0.6, color=colour, alpha=0.75, lw=0)
@@ -221,7 +225,7 @@ def _finish_scores(axes: Any, counts: Any, models: list[str], values: np.ndarray
     axes.axvline(0, color=RULE, lw=0.8, zorder=0)
     for each in (axes, counts):
         each.set_ylim(-0.6, len(models) - 0.4)
-        each.locator_params(axis="x", nbins=5)
+        each.locator_params(axis="x", nbins=4)
     axes.set_yticks(range(len(models))[::-1], [model_label(model) for model in models])
     counts.set_yticks([])
     axes.tick_params(axis="y", length=0)

@@ -345,7 +345,7 @@ def _draw_rates(axes: Any, inventory: Mapping[str, Any]) -> None:
     if not kept.all():
         groups, colours = [*groups, rate[~kept]], [*colours, RULE]
     axes.hist(groups, bins=edges, stacked=True, color=colours, edgecolor=PAPER, lw=0.3)
-    axes.set_title(f"kept {int(kept.sum())} of {len(kept)} units")
+    axes.set_title(f"{int(kept.sum())} of {len(kept)} units")
     axes.set_xscale("log")
     ticks = [tick for tick in (0.01, 0.03, 0.1, 0.3, 1, 3, 10, 30, 100) if edges[0] <= tick <= edges[-1]]
     axes.set_xticks(ticks, [f"{tick:g}" for tick in ticks])

@@ -94,14 +94,14 @@ def draw_composition(composition: pd.DataFrame, settings: FiguresSettings) -> Fi
         figure = new_figure(WIDTH_IN, 2.1 + upper + lower, settings)
         headline(figure, title, n_text(int(whole["n"].iloc[0]), int(whole["animals"].iloc[0])))
         marks = animal_marks(composition.loc[composition["level"] == "animal", "name"].astype(str).tolist())
-        axes = axes_at(figure, 2.35, 1.36 + lower, 3.9, upper)
-        axes.set_title("each variable, whatever else the unit encodes", x=-0.575)
+        axes = axes_at(figure, 2.5, 1.36 + lower, 3.75, upper)
+        axes.set_title("each variable, whatever else the unit encodes", x=-0.64)
         rows = _rows(composition[composition["kind"] == "includes"], included, marks)
         draw_shares(
             axes, rows, [_included_colour(name) for name in included], [_included_label(n) for n in included]
         )
-        axes = axes_at(figure, 2.35, 0.64, 3.9, lower)
-        axes.set_title("exact combinations", x=-0.575)
+        axes = axes_at(figure, 2.5, 0.64, 3.75, lower)
+        axes.set_title("exact combinations", x=-0.64)
         labels = ["none" if name == "constant" else model_label(name) for name in exact]
         rows = _rows(composition[composition["kind"] == "exact"], exact, marks)
         draw_shares(axes, rows, [_exact_colour(name) for name in exact], labels)
@@ -135,7 +135,7 @@ def draw_speed_shapes(speed: pd.DataFrame, settings: FiguresSettings) -> Figure:
             n_text(int(whole["n"].iloc[0]), int(whole["animals"].iloc[0]), "units that encode speed"),
         )
         marks = animal_marks(shapes.loc[shapes["level"] == "animal", "name"].astype(str).tolist())
-        axes = axes_at(figure, 2.35, 0.64, 3.9, ROW_IN * len(names))
+        axes = axes_at(figure, 2.5, 0.64, 3.75, ROW_IN * len(names))
         rows = _rows(shapes.assign(share=shapes["value"]), names, marks)
         colours = [SOFT_INK if name == "undecided" else term_colour("speed") for name in names]
         draw_shares(axes, rows, colours, [shape_label(name) for name in names])

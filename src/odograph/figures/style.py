@@ -74,6 +74,8 @@ def new_figure(width_in: float, height_in: float, settings: FiguresSettings) -> 
     """An empty figure of a print size in inches, drawn by Agg and by nothing else."""
     figure = Figure(figsize=(width_in, height_in), dpi=settings.dpi)
     FigureCanvasAgg(figure)
+    # Ticks are made as late as the file is: saving has to happen in the style of the drawing.
+    figure.drawn_with = settings
     return figure
 
 
@@ -115,7 +117,7 @@ def figure_bytes(
     Parameters
     ----------
     figure : Figure
-        Gets a small stamp with the first 12 digits of the identifier in its lower right margin.
+        One of `new_figure`. Gets a small stamp with the identifier's first 12 digits at its lower right.
     file_format : "png" | "svg" | "pdf"
         PNG carries the identifier in a text chunk `odograph-record`, SVG as Dublin Core identifier, PDF as
         keywords.
@@ -135,15 +137,14 @@ def figure_bytes(
     if file_format not in metadata:
         raise ValueError(f"figure format {file_format!r}; expected one of {', '.join(sorted(metadata))}")
     width, height = figure.get_size_inches()
-    stamp = figure.text(
-        1 - 0.06 / width, 0.05 / height, f"record {value.removeprefix('record:')[:12]}",
-        ha="right", va="bottom", fontsize=STAMP_PT, color=SOFT_INK,
-    )  # fmt: skip
     buffer = io.BytesIO()
-    # These two are read while saving, not while drawing.
-    with matplotlib.rc_context({"svg.hashsalt": "odograph", "svg.fonttype": "none", "pdf.fonttype": 42}):
+    with figure_style(figure.drawn_with):
+        stamp = figure.text(
+            1 - 0.06 / width, 0.05 / height, f"record {value.removeprefix('record:')[:12]}",
+            ha="right", va="bottom", fontsize=STAMP_PT, color=SOFT_INK,
+        )  # fmt: skip
         figure.savefig(buffer, format=file_format, dpi=dpi or figure.dpi, metadata=metadata[file_format])
-    stamp.remove()
+        stamp.remove()
     return buffer.getvalue()
 
 

@@ -1,0 +1,121 @@
+"""The population's figures show the shares and intervals of the tables."""
+
+from __future__ import annotations
+
+import numpy as np
+import pytest
+from matplotlib.text import Text
+
+from odograph.figures.captions import CAPTIONS, POPULATION_FIGURES
+from odograph.figures.population import draw_population_figure
+from odograph.figures.style import figure_bytes
+from odograph.settings.figures import FiguresSettings
+
+STUDIES = {
+    "one": ["heron"],
+    "three": ["heron", "ibis", "stork"],
+    "many": [f"animal{k:02d}" for k in range(13)],
+}
+
+
+def words(figure) -> str:
+    return "\n".join(text.get_text() for text in figure.findobj(Text))
+
+
+@pytest.mark.parametrize("size", [7, 8.5])
+@pytest.mark.parametrize("study", STUDIES)
+@pytest.mark.parametrize("name", POPULATION_FIGURES)
+def test_nothing_is_cut_off_or_covered(name, study, size, population, misplaced):
+    settings = FiguresSettings(dpi=72, font_size_pt=size)
+    figure = draw_population_figure(name, *population(STUDIES[study]), settings)
+    assert misplaced(figure) == []
+    assert "n = " in words(figure)
+
+
+@pytest.mark.parametrize("name", POPULATION_FIGURES)
+def test_study_without_fits_says_so(name, population, settings, misplaced):
+    units, scores, composition, speed = population(["heron"])
+    empty = [units.iloc[:0], scores.iloc[:0], composition.iloc[:0], speed.iloc[:0]]
+    figure = draw_population_figure(name, *empty, settings)
+    assert words(figure).count("No unit") == 1
+    assert misplaced(figure) == []
+
+
+def test_unknown_figure_is_named(population, settings):
+    with pytest.raises(KeyError, match="composition"):
+        draw_population_figure("pie", *population(["heron"]), settings)
+
+
+def test_composition_shows_shares_and_intervals(population, settings):
+    tables = population(STUDIES["three"])
+    figure = draw_population_figure("composition", *tables, settings)
+    table = tables[2]
+    whole = table[(table["level"] == "all") & (table["kind"] == "exact")]
+    axes = next(a for a in figure.axes if a.get_title(loc="left") == "exact combinations")
+    bars = [bar.get_width() for bar in axes.patches]
+    np.testing.assert_allclose(bars, 100 * whole["share"])
+    thick = [
+        line.get_xdata() for line in axes.lines if line.get_linewidth() > 2 and len(line.get_xdata()) == 2
+    ]
+    np.testing.assert_allclose(thick, 100 * whole[["low", "high"]].to_numpy())
+    labels = [label.get_text() for label in axes.get_yticklabels()]
+    assert labels[0] == "none"
+    assert labels[-1] == "position + head direction + speed"
+    assert f"{whole['k'].iloc[0]} of {whole['n'].iloc[0]}" in words(figure)
+
+
+def test_one_animal_takes_its_own_interval(population, settings):
+    tables = population(STUDIES["one"])
+    table = tables[2]
+    own = table[(table["level"] == "animal") & (table["kind"] == "exact")]
+    figure = draw_population_figure("composition", *tables, settings)
+    axes = next(a for a in figure.axes if a.get_title(loc="left") == "exact combinations")
+    thick = [
+        line.get_xdata() for line in axes.lines if line.get_linewidth() > 2 and len(line.get_xdata()) == 2
+    ]
+    np.testing.assert_allclose(thick, 100 * own[["low", "high"]].to_numpy())
+
+
+def test_pairs_of_slow_and_fast(population, settings):
+    units, scores, composition, speed = population(STUDIES["three"])
+    figure = draw_population_figure("slow_against_fast", units, scores, composition, speed, settings)
+    axes = next(a for a in figure.axes if a.get_title(loc="left") == "about position")
+    drawn = np.concatenate([line.get_xydata() for line in axes.lines if line.get_linestyle() == "None"])
+    names = [f"position_information_{pace}_bits_per_spike" for pace in ("slow", "fast")]
+    wanted = units.loc[units["status"] == "fitted", names].to_numpy()
+    np.testing.assert_allclose(np.sort(drawn, axis=0), np.sort(wanted, axis=0))
+    change = speed[(speed["measure"] == "position_information_change") & (speed["level"] == "all")].iloc[0]
+    assert f"median change {change['value']:.3f}" in words(figure)
+
+
+def test_pairs_with_missing_and_zero_information(population, settings, misplaced):
+    units, scores, composition, speed = population(STUDIES["three"])
+    units.loc[0, "position_information_slow_bits_per_spike"] = 0.0
+    units["head_direction_information_fast_bits_per_spike"] = np.nan
+    figure = draw_population_figure("slow_against_fast", units, scores, composition, speed, settings)
+    assert "No unit has enough" in words(figure)
+    assert misplaced(figure) == []
+
+
+def test_scores_leave_out_units_without_a_fit(population, settings):
+    units, scores, composition, speed = population(STUDIES["one"])
+    figure = draw_population_figure("held_out_scores", units, scores, composition, speed, settings)
+    axes = next(a for a in figure.axes if a.get_title(loc="left").startswith("each unit"))
+    dots = [line for line in axes.lines if line.get_marker() == "."]
+    fitted = int((units["status"] == "fitted").sum())
+    assert [len(line.get_xdata()) for line in dots] == [fitted] * 7
+
+
+@pytest.mark.parametrize("name", POPULATION_FIGURES)
+def test_order_of_rows_does_not_matter(name, population, settings, record_id):
+    tables = population(STUDIES["three"])
+    mixed = [tables[0].iloc[::-1], tables[1].iloc[::-1], tables[2], tables[3]]
+    pictures = [
+        figure_bytes(draw_population_figure(name, *given, settings), "png", record_id, "t")
+        for given in (tables, mixed)
+    ]
+    assert pictures[0] == pictures[1]
+
+
+def test_captions_name_tables():
+    assert all(caption.table.startswith("population/") and caption.text for caption in CAPTIONS.values())
