@@ -33,7 +33,6 @@ _SMALLEST_COUNT = 50
 # Pairs farther apart than this share of the frame interval are no pairs.
 _REACH_SHARE = 0.25
 _FOLLOW_STEP_S = 10.0
-_FRAME_GAP = 1.5
 
 
 @dataclass(frozen=True, eq=False)
@@ -332,15 +331,18 @@ def _counts(frames, pulses, line, pulse_of, interval_s):
     alone = np.ones(len(pulses), bool)
     alone[pulse_of[found]] = False
     alone &= (pulses > wanted[0] - reach) & (pulses < wanted[-1] + reach)
+    # A gap of the frames has room for so many frames; pulses beyond that are stray.
     after = np.clip(np.searchsorted(wanted, pulses[alone]), 1, len(frames) - 1)
-    in_gap = frames[after] - frames[after - 1] > _FRAME_GAP * interval_s
+    in_gap = np.bincount(after, minlength=len(frames))[1:]
+    room = np.maximum(np.round(np.diff(frames) / interval_s).astype(int) - 1, 0)
+    dropped = int(np.minimum(in_gap, room).sum())
     return {
         "n_frames": len(frames),
         "n_pulses": len(pulses),
         "n_matched": int(found.sum()),
-        "dropped_frames": int(in_gap.sum()),
+        "dropped_frames": dropped,
         "missing_pulses": int((running & ~found).sum()),
-        "spurious_pulses": int((~in_gap).sum()),
+        "spurious_pulses": int(alone.sum()) - dropped,
     }
 
 

@@ -22,9 +22,10 @@ class ClockFault:
     kind : str
         "jump" or "bend".
     camera_s, recording_s : float
-        Where it is, on both clocks (the recording clock as it was just before a jump).
+        Where it is on both clocks; for a jump, the first frame after it.
     size_s : float
-        Jump: the step of recording minus camera clock. Bend: the largest departure from the line.
+        Jump: by how much the camera clock jumps ahead of the recording. Bend: the largest departure from
+        the line.
     drift_before_ppm, drift_after_ppm : float
         Drift on both sides.
     """
@@ -75,7 +76,7 @@ def describe_fault(
     if abs(steps[k]) >= _JUMP_SHARE * (y.max() - y.min()):
         at = _moment_of_jump(frame_s, pulse_s, line, (x[k], x[k + 1]), (y[k], y[k + 1]), reach_s)
         before, after = _side_drift(line, x[: k + 1], y[: k + 1]), _side_drift(line, x[k + 1 :], y[k + 1 :])
-        return ClockFault("jump", at, float(line.at(at) + y[k]), float(steps[k]), before, after)
+        return ClockFault("jump", at, float(line.at(at) + y[k + 1]), -float(steps[k]), before, after)
     hinge = _hinge(x, y)
     before, after = (
         _side_drift(line, x[x <= hinge], y[x <= hinge]),

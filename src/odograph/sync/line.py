@@ -9,6 +9,8 @@ import numpy as np
 # Huber's constant: 95 % efficiency on normal residuals (Huber, Robust Statistics, 1981).
 _HUBER = 1.345
 _MAD_TO_SD = 1.4826
+_TRIM = 5.0
+_SMALLEST = 1e-9
 
 
 @dataclass(frozen=True)
@@ -59,30 +61,46 @@ def least_squares_line(x: np.ndarray, y: np.ndarray, weights: np.ndarray | None 
     )
 
 
-def robust_line(x: np.ndarray, y: np.ndarray, rounds: int = 20) -> Line:
-    """Straight line by Huber's M-estimator, iteratively reweighted (Huber, Robust Statistics, 1981).
+def robust_line(x: np.ndarray, y: np.ndarray, rounds: int = 30) -> Line:
+    """Straight line that pairs far off do not pull.
+
+    Huber's M-estimator by reweighting (Huber, Robust Statistics, 1981), then least squares over the pairs
+    within `_TRIM` robust standard deviations of it, repeated until the choice of pairs is settled. Where all
+    residuals are normal, hardly any pair is left out and the standard errors are those of least squares.
 
     Parameters
     ----------
     x, y : ndarray (n,)
         At least three pairs, at least two different x.
     rounds : int
-        Most reweightings.
+        Most repetitions of each part.
     """
     line = least_squares_line(x, y)
     for _ in range(rounds):
-        residual = (y - y.mean()) - line.slope * (x - x.mean())
-        residual -= np.median(residual)
-        scale = _MAD_TO_SD * float(np.median(np.abs(residual)))
+        residual, scale = _residuals(x, y, line)
         if scale == 0:
-            return line
-        weights = np.minimum(1.0, _HUBER * scale / np.maximum(np.abs(residual), 1e-300))
-        new = least_squares_line(x, y, weights)
+            break
+        new = least_squares_line(x, y, np.minimum(1.0, _HUBER * scale / np.maximum(np.abs(residual), 1e-300)))
         settled = abs(new.slope - line.slope) <= 1e-3 * new.slope_se
         line = new
         if settled:
             break
+    kept = np.zeros(len(x), bool)
+    for _ in range(rounds):
+        residual, scale = _residuals(x, y, line)
+        near = np.abs(residual) <= max(_TRIM * scale, _SMALLEST)
+        if near.sum() < 3 or (near == kept).all():
+            break
+        kept = near
+        line = least_squares_line(x[kept], y[kept])
     return line
+
+
+def _residuals(x, y, line):
+    """Residuals about their median, and their robust standard deviation."""
+    residual = (y - y.mean()) - line.slope * (x - x.mean())
+    residual -= np.median(residual)
+    return residual, _MAD_TO_SD * float(np.median(np.abs(residual)))
 
 
 def agreeing_line(

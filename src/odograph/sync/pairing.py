@@ -124,7 +124,7 @@ def refined_shift(window_s: np.ndarray, pulse_s: np.ndarray, shift_s: float, rea
 
 def find_window(
     window_s: np.ndarray, pulse_s: np.ndarray, candidates_s: np.ndarray, reach_s: float, tries: int = 3
-) -> tuple[float, float]:
+) -> tuple[float, float, float]:
     """The shift under which a window of frames fits the pulses best.
 
     Parameters
@@ -142,19 +142,23 @@ def find_window(
 
     Returns
     -------
-    shift_s, spread_s : float
-        Recording minus camera clock, and the spread there (nan, inf if nothing fits).
+    shift_s, spread_s, usual_s : float
+        Recording minus camera clock, the spread there, and the median spread of all candidates that fit at
+        all (nan, inf, inf if none does). A spread far below the usual one marks a place that is no accident.
     """
     middle = len(window_s) // 2
-    best = (np.nan, np.inf)
+    best = (np.nan, np.inf, np.inf)
     for frame in (middle, max(middle - 5, 0), min(middle + 7, len(window_s) - 1))[:tries]:
         shifts = candidates_s - window_s[frame]
         spreads = alignment_spreads(window_s, pulse_s, shifts, reach_s)
         k = int(np.argmin(spreads))
+        if not np.isfinite(spreads[k]):
+            continue
+        usual = float(np.median(spreads[np.isfinite(spreads)]))
         if spreads[k] < best[1]:
-            best = (float(shifts[k]), float(spreads[k]))
-        if spreads[k] < _CLEARLY_BETTER * np.median(spreads):
+            best = (float(shifts[k]), float(spreads[k]), usual)
+        if spreads[k] < _CLEARLY_BETTER * usual:
             break
     if not np.isfinite(best[1]):
         return best
-    return refined_shift(window_s, pulse_s, best[0], reach_s), best[1]
+    return refined_shift(window_s, pulse_s, best[0], reach_s), best[1], best[2]
