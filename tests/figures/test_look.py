@@ -46,7 +46,7 @@ def contrast(one, other) -> float:
 
 
 def to_lab(rgb: np.ndarray) -> np.ndarray:
-    """sRGB to CIE L*a*b* with white D65, by the definition (CIE 15), the other way round than the code goes."""
+    """sRGB to CIE L*a*b* with white D65, by the definition (CIE 15): the way back of what is tested."""
     matrix = np.array(
         [
             [0.4124564, 0.3575761, 0.1804375],
