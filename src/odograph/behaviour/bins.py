@@ -12,6 +12,8 @@ from odograph.behaviour.motion import MotionModel
 
 _SPEED_PRIOR_M_S = 1.0
 _POSITION_PRIOR_M = 10.0
+# A gap counts as longer than allowed beyond this factor, so that drift and rounding decide nothing.
+_GAP_SLACK = 1.001
 # The filter begins anew after longer gaps: nothing is known of the motion by then.
 LONGEST_BRIDGED_S = 1.0
 
@@ -108,7 +110,7 @@ def long_gaps(
     """
     seen = time_s[believed]
     edges = np.concatenate([[-np.inf], seen, [np.inf]])
-    long = np.diff(edges) > longest_gap_s
+    long = np.diff(edges) > _GAP_SLACK * longest_gap_s
     return edges[:-1][long], edges[1:][long]
 
 

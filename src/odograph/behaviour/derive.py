@@ -32,6 +32,9 @@ from odograph.errors import InputError
 from odograph.recording.model import Arena, Covariate, Direction, Intervals, Track, verdict_of
 from odograph.settings.behaviour import BehaviourSettings
 
+# Intervals that only touch a bin do not overlap it; rounding must not decide that.
+_TOUCHING_S = 1e-6
+
 
 @dataclass(frozen=True, eq=False)
 class Behaviour:
@@ -161,7 +164,7 @@ def derive_behaviour(
         "direction_sd_rad": angle_sd,
     }
     columns = {name: np.where(unknown, np.nan, column) for name, column in columns.items()}
-    findings = judge_behaviour(cleaned, columns, reason, direction, series, arena, settings)
+    findings = judge_behaviour(tracks, cleaned, columns, reason, direction, series, arena, settings)
     return Behaviour(
         time_s=centre_s,
         **columns,
@@ -256,7 +259,7 @@ def _cause(time_s, why, start_s, stop_s):
 def _mask(reason, centre_s, speed, invalid, settings):
     """Mask invalid times and immobility in bins that are known; `reason` is changed in place."""
     if invalid is not None:
-        half = 0.5 * settings.bin_s
+        half = 0.5 * settings.bin_s - _TOUCHING_S
         for start, stop in zip(invalid.start_s, invalid.stop_s, strict=True):
             inside = (centre_s + half > start) & (centre_s - half < stop)
             reason[inside & (reason == "")] = "invalid_time"

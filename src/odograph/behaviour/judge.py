@@ -8,7 +8,7 @@ import numpy as np
 
 from odograph.behaviour.cleaning import CleanedPoints
 from odograph.behaviour.swaps import facing_cosine
-from odograph.recording.model import Arena, Direction, finding
+from odograph.recording.model import Arena, Direction, Track, finding
 from odograph.settings.behaviour import BehaviourSettings
 
 _OUTSIDE_SHARE = 0.05
@@ -17,6 +17,7 @@ _DIRECTION_DIFFERENCE_RAD = np.deg2rad(20.0)
 
 
 def judge_behaviour(
+    tracks: tuple[Track, ...],
     cleaned: CleanedPoints,
     columns: dict[str, np.ndarray],
     reason: np.ndarray,
@@ -29,6 +30,8 @@ def judge_behaviour(
 
     Parameters
     ----------
+    tracks : tuple of Track
+        The tracked points as they were read.
     cleaned : CleanedPoints
         Samples and reasons.
     columns : dict of str to ndarray (n_bins,)
@@ -44,7 +47,7 @@ def judge_behaviour(
     """
     return [
         *_enough(reason, settings),
-        *_extent(columns, cleaned, arena),
+        *_extent(tracks, cleaned, arena),
         *_direction(cleaned, columns, direction, series),
         *_exchanges(cleaned),
     ]
@@ -70,7 +73,7 @@ def _enough(reason, settings):
     ]
 
 
-def _extent(columns, cleaned, arena):
+def _extent(tracks, cleaned, arena):
     findings = []
     if arena is not None:
         outside = max(float((why == "outside_arena").mean()) for why in cleaned.reasons)
@@ -84,16 +87,16 @@ def _extent(columns, cleaned, arena):
                     remedy="check the arena's corners, the unit of length and the origin of the tracking",
                 )
             )
-    x, y = columns["x_m"], columns["y_m"]
-    known = np.isfinite(x) & np.isfinite(y)
-    if not known.any():
+    # As it was read: with a wrong unit everything would have been dropped as impossible by now.
+    seen = tracks[0].xy_m[np.isfinite(tracks[0].xy_m).all(axis=1)]
+    if not len(seen):
         return findings
-    extent = max(float(np.ptp(np.percentile(axis[known], [1, 99]))) for axis in (x, y))
+    extent = float(np.ptp(np.percentile(seen, [1, 99], axis=0), axis=0).max())
     if not _EXTENT_M[0] <= extent <= _EXTENT_M[1]:
         findings.append(
             finding(
                 "warn",
-                f"the animal moved over {extent:.4g} m",
+                f"the tracked point covers {extent:.4g} m",
                 place="tracking",
                 expected=f"between {_EXTENT_M[0]:g} and {_EXTENT_M[1]:g} m for an animal that forages",
                 remedy="check the unit of length (intake.length_unit, intake.metres_per_pixel)",
