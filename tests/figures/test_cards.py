@@ -82,9 +82,9 @@ def test_selected_model_is_marked_and_n_is_there(unit_row, unit_scores, curves, 
     told = words(figure)
     for part in (
         "n = 572 spikes",
-        "encoded, p < 0.001",
-        "encoded, p = 0.012",
-        "not encoded, p = 0.440",
+        "selected, p < 0.001",
+        "selected, p = 0.012",
+        "not selected, p = 0.440",
         "MEC",
         "heron",
     ):
@@ -169,6 +169,16 @@ def test_nothing_is_cut_off_or_covered(
     unit_row |= {"session": "2031-05-04_heron_the-long-name-of-a-session", "selected_model": selected}
     settings = FiguresSettings(dpi=72, font_size_pt=size)
     assert misplaced(draw_card(unit_row, unit_scores, curves, behaviour, corners, settings)) == []
+
+
+@pytest.mark.parametrize("scale", [0.01, 1e-4, 30])
+def test_scores_of_any_size_have_readable_ticks(
+    scale, unit_row, unit_scores, curves, behaviour, corners, settings, misplaced
+):
+    unit_scores[["bits_per_spike", "bits_per_spike_se"]] *= scale
+    figure = draw_card(unit_row, unit_scores, curves, behaviour, corners, settings)
+    assert misplaced(figure) == []
+    assert np.ptp(axes_titled(figure, "held-out score of every model").get_xlim()) >= 0.02
 
 
 @pytest.mark.parametrize("shape", [(2.0, 0.5), (0.4, 1.5)])

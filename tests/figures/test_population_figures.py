@@ -94,6 +94,12 @@ def test_pairs_with_missing_and_zero_information(population, settings, misplaced
     units["head_direction_information_fast_bits_per_spike"] = np.nan
     figure = draw_population_figure("slow_against_fast", units, scores, composition, speed, settings)
     assert "No unit has enough" in words(figure)
+    axes = next(a for a in figure.axes if a.get_title(loc="left") == "about position")
+    drawn = np.concatenate([line.get_xydata() for line in axes.lines if line.get_linestyle() == "None"])
+    assert len(drawn) == (units["status"] == "fitted").sum(), (
+        "a unit without information is drawn on the edge"
+    )
+    assert drawn[:, 0].min() == axes.get_xlim()[0]
     assert misplaced(figure) == []
 
 

@@ -43,7 +43,8 @@ CAPTIONS = {
         "Information at slow and at fast running",
         "Bits per spike about position and about head direction in the slow and in the fast half of running, "
         "each unit a mark, the halves matched in occupancy and in spikes. Filled: units that encode the "
-        "variable. Above the broken line the code is sharper at fast running.",
+        "variable. Above the broken line the code is sharper at fast running; "
+        "marks on the left or lower edge lie at or beyond it.",
         "population/units.tsv",
     ),
     "held_out_scores": Caption(

@@ -24,6 +24,7 @@ from odograph.settings.figures import FiguresSettings
 
 STANDARD_TERMS = ("position", "head_direction", "speed")
 MOST_MODELS = 12
+LEAST_SCORE_AXIS = 0.024
 
 
 def _draw_curve(
@@ -172,5 +173,8 @@ def draw_scores(axes: Any, row: Mapping[str, Any], scores: pd.DataFrame, title_l
         label.set_weight("bold" if model == selected else "normal")
     axes.tick_params(axis="y", length=0)
     axes.spines["left"].set_visible(False)
-    axes.locator_params(axis="x", nbins=4)
+    # Scores that are all next to nothing are not blown up to the width of the panel.
+    left, right = axes.get_xlim()
+    axes.set_xlim(min(left, -0.002), max(right, LEAST_SCORE_AXIS))
+    axes.locator_params(axis="x", nbins=3)
     axes.set_xlabel("bits per spike")

@@ -25,7 +25,8 @@ def number(value: Any, digits: int = 2, missing: str = "–") -> str:
         return str(value)
     if not math.isfinite(value):
         return missing
-    return f"{value:,.{digits}f}".replace("-", "−")
+    # Adding zero turns a negative zero into a plain one.
+    return f"{round(value, digits) + 0.0:,.{digits}f}".replace("-", "−")
 
 
 def wrapped(text: str, columns: int, lines: int) -> str:
@@ -141,10 +142,10 @@ def two_line_title(axes: Any, title: str, note: str, colour: str = INK) -> None:
 
 
 def term_note(row: Mapping[str, Any], term: str) -> str:
-    """Whether the unit encodes a variable, and the p of its test where there is one."""
+    """Whether the selected model holds a variable, and the p of its test where there is one."""
     p = row.get(f"{term}_p")
-    encoded = bool(row.get(f"encodes_{term}") or False)
-    notes = ["encoded" if encoded else "not encoded"] if unit_status(row) == "fitted" else []
+    selected = term in str(row.get("selected_model") or "").split("+")
+    notes = ["selected" if selected else "not selected"] if unit_status(row) == "fitted" else []
     if number(p) != "–":
         notes.append("p < 0.001" if float(p) < 0.001 else f"p = {float(p):.3f}")
     return ", ".join(notes)

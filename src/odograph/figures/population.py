@@ -113,6 +113,12 @@ def _draw_pairs(
     slow, fast = (pairs[name].to_numpy(float) for name in names)
     encodes = pairs[f"encodes_{variable}"].to_numpy(bool)
     animal = pairs["animal"].astype(str).to_numpy()
+    positive = np.concatenate([slow, fast])
+    positive = positive[positive > 0]
+    low = max(float(np.quantile(positive, 0.01)) * 0.7, 1e-3) if positive.size else 1e-3
+    high = max(float(positive.max()) * 1.3, low * 10) if positive.size else 1.0
+    # On logarithmic axes what is at or below zero has no place but the edge.
+    slow, fast = np.clip(slow, low, None), np.clip(fast, low, None)
     for name, mark in marks.items():
         for chosen, face, edge in ((~encodes, "white", _OTHERS), (encodes, colour, "white")):
             part = (animal == name) & chosen
@@ -126,13 +132,10 @@ def _draw_pairs(
                 mec=edge,
                 mew=0.6,
                 alpha=0.9,
+                clip_on=False,
                 zorder=order,
                 ls="none",
             )
-    positive = np.concatenate([slow, fast])
-    positive = positive[positive > 0]
-    low = max(float(np.quantile(positive, 0.01)) * 0.7, 1e-3) if positive.size else 1e-3
-    high = max(float(positive.max()) * 1.3, low * 10) if positive.size else 1.0
     steps = (1, 2, 5) if high / low < 30 else (1,)
     ticks = [step * 10.0**k for k in range(-3, 3) for step in steps if low <= step * 10.0**k <= high]
     for axis, scale in ((axes.xaxis, axes.set_xscale), (axes.yaxis, axes.set_yscale)):

@@ -152,10 +152,8 @@ def _draw_residuals(axes: Any, clock: Mapping[str, Any], residuals: pd.DataFrame
     if matched is not None:
         facts.append(f"{number(matched, 0)} of {number(clock.get('n_frames'), 0)} frames matched")
     if clock.get("dropped_frames") is not None:
-        facts.append(
-            f"{number(clock['dropped_frames'], 0)} frames dropped, {number(clock.get('missing_pulses'), 0)} "
-            f"pulses missing"
-        )
+        dropped, missing = (number(clock.get(name), 0) for name in ("dropped_frames", "missing_pulses"))
+        facts.append(f"dropped frames {dropped}, frames without pulse {missing}")
     rows = ["  ·  ".join(facts[:2]), "  ·  ".join(facts[2:3]), "  ·  ".join(facts[3:])]
     axes.annotate(
         "\n".join(row for row in rows if row), (0, 1), (0, 5), xycoords="axes fraction",

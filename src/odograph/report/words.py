@@ -22,7 +22,10 @@ def number(value: Any, digits: int = 2) -> str:
         value = float(value)
     except (TypeError, ValueError):
         return "–"
-    return f"{value:,.{digits}f}".replace("-", "−") if math.isfinite(value) else "–"
+    if not math.isfinite(value):
+        return "–"
+    # Adding zero turns a negative zero into a plain one.
+    return f"{round(value, digits) + 0.0:,.{digits}f}".replace("-", "−")
 
 
 def setting_value(value: Any) -> str:
