@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from odograph.behaviour.bins import in_gaps
-from odograph.behaviour.cleaning import SAMPLE_REASONS, CleanedPoints
+from odograph.behaviour.cleaning import REASON_TYPE, SAMPLE_REASONS, CleanedPoints
 
 if TYPE_CHECKING:
     from odograph.behaviour.derive import Behaviour
@@ -51,11 +51,11 @@ def audit_rows(
     left_out = np.zeros(len(reason), bool)
     for gap in gaps:
         left_out |= in_gaps(cleaned.time_s, gap) >= 0
-    key = np.where(reason == "", "", np.where(left_out, "left_out", "interpolated"))
     half = 0.5 * interval_s
-    for first, last in _runs(np.char.add(reason, key)):
+    for first, last in _runs(reason, left_out):
         if reason[first]:
-            rows.append(_row(cleaned.time_s, first, last, half, str(reason[first]), str(key[first])))
+            action = "left_out" if left_out[first] else "interpolated"
+            rows.append(_row(cleaned.time_s, first, last, half, str(reason[first]), action))
     for first, last in _runs(cleaned.exchanged):
         if cleaned.exchanged[first]:
             rows.append(_row(cleaned.time_s, first, last, half, "swap", "exchanged_back"))
@@ -126,19 +126,23 @@ def _sums(rows, span_s):
 
 
 def _frame_reason(cleaned):
-    reason = np.full(len(cleaned.time_s), "", "U16")
+    reason = np.full(len(cleaned.time_s), "", REASON_TYPE)
     for name in SAMPLE_REASONS:
         for why in cleaned.reasons:
             reason[(why == name) & (reason == "")] = name
     return reason
 
 
-def _runs(values):
-    """First and last row of every run of equal values."""
-    if not len(values):
+def _runs(*columns):
+    """First and last row of every run in which no column changes."""
+    n = len(columns[0])
+    if not n:
         return []
-    cut = np.flatnonzero(values[1:] != values[:-1])
-    return list(zip(np.append(0, cut + 1).tolist(), np.append(cut, len(values) - 1).tolist(), strict=True))
+    changes = np.zeros(n - 1, bool)
+    for values in columns:
+        changes |= values[1:] != values[:-1]
+    cut = np.flatnonzero(changes)
+    return list(zip(np.append(0, cut + 1).tolist(), np.append(cut, n - 1).tolist(), strict=True))
 
 
 def _row(time_s, first, last, half, reason, action):

@@ -18,6 +18,7 @@ _TOO_FAR_APART = 1.25
 
 # Reasons of a sample, in the order in which the first that applies is given.
 SAMPLE_REASONS = ("lost", "low_confidence", "outside_arena", "jump")
+REASON_TYPE = "U14"
 
 
 @dataclass(frozen=True, eq=False)
@@ -77,7 +78,7 @@ def clean_points(
         confidence = tracks[1].confidence
         confidences.append(None if confidence is None else _taken(np.asarray(confidence, float), rows))
     time_s = clock[0] * camera_s + clock[1]
-    reasons = [np.full(len(time_s), "", "U16") for _ in points]
+    reasons = [np.full(len(time_s), "", REASON_TYPE) for _ in points]
     for point, confidence, reason in zip(points, confidences, reasons, strict=True):
         _take_out(point, reason, ~np.isfinite(point).all(axis=1), "lost")
         if confidence is not None:

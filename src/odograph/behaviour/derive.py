@@ -19,13 +19,12 @@ from odograph.behaviour.bins import (
     angles_on_bins,
     bin_centres,
     direction_sd,
-    in_gaps,
     long_gaps,
     point_on_bins,
     values_on_bins,
     wrapped,
 )
-from odograph.behaviour.cleaning import SAMPLE_REASONS, CleanedPoints, clean_points
+from odograph.behaviour.cleaning import REASON_TYPE, SAMPLE_REASONS, CleanedPoints, clean_points
 from odograph.behaviour.judge import judge_behaviour
 from odograph.behaviour.motion import MotionModel, estimate_motion
 from odograph.errors import InputError
@@ -234,15 +233,15 @@ def _head_direction(points, direction, clock, centre_s, settings):
 
 def _track_reasons(cleaned, centre_s, settings):
     """Reason of every bin that is too far from believed samples, and the gaps of each point."""
-    reason = np.full(len(centre_s), "", "U16")
+    reason = np.full(len(centre_s), "", REASON_TYPE)
     gaps = []
     for why in cleaned.reasons:
         found = long_gaps(cleaned.time_s, why == "", settings.max_gap_s)
         gaps.append(found)
-        at = in_gaps(centre_s, found)
-        for k in np.unique(at[at >= 0]):
-            here = (at == k) & (reason == "")
-            reason[here] = _cause(cleaned.time_s, why, found[0][k], found[1][k])
+        first, last = np.searchsorted(centre_s, found[0], side="right"), np.searchsorted(centre_s, found[1])
+        for k in np.flatnonzero(last > first):
+            here = reason[first[k] : last[k]]
+            here[here == ""] = _cause(cleaned.time_s, why, found[0][k], found[1][k])
     return reason, gaps
 
 
