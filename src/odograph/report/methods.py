@@ -117,13 +117,13 @@ def _encoding(value: Callable[[str], Any], cite: Callable[..., str]) -> list[str
         else ""
     )
     first = (
-        "Spike counts were modelled as Poisson with the log rate a sum of smooth terms under second-derivative "
-        f"penalties {cite('splines')}: {bases}. Smoothing strengths were chosen from the training data by "
+        "Spike counts were modelled as Poisson with the log rate a sum of smooth terms under "
+        f"second-derivative penalties {cite('splines')}: {bases}. Smoothing strengths were chosen from the training data by "
         f"restricted marginal likelihood {cite('strengths')}.{drift} Models of every subset of the terms "
         f"({models} in all) and the constant model were compared by held-out log-likelihood in "
         f"{_plain(value('encoding.folds'))} folds of {_plain(value('encoding.blocks_per_fold'))} interleaved "
-        f"contiguous blocks each, {_plain(value('encoding.guard_s'))} s beside each held-out block being left "
-        f"out of training. The simplest model within one standard error of the best was selected "
+        f"contiguous blocks each, {_plain(value('encoding.guard_s'))} s beside each held-out block being "
+        f"left out of training. The simplest model within one standard error of the best was selected "
         f"{cite('one_se')}. Units with fewer than {_plain(value('encoding.minimum_spikes'))} spikes in valid "
         f"time were not fitted. Bands are pointwise 95 % {cite('bands')}."
     )
