@@ -50,7 +50,8 @@ CAPTIONS = {
     "held_out_scores": Caption(
         "Held-out score of every model",
         "Log-likelihood of held-out spikes over that of a constant rate, in bits per spike: each unit a dot, "
-        "with quartiles and median; at the right, how often the model was selected.",
+        "with quartiles and median, dots on an edge at or beyond it; at the right, how often the model was "
+        "selected.",
         "population/scores.parquet",
     ),
 }

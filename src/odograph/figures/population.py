@@ -198,6 +198,7 @@ def draw_held_out_scores(units: pd.DataFrame, scores: pd.DataFrame, settings: Fi
         axes, counts = axes_at(figure, 2.45, 0.6, 2.95, height), axes_at(figure, 5.7, 0.6, 1.1, height)
         axes.set_title("each unit, quartiles and median")
         counts.set_title("times selected")
+        limits = _score_limits(table["bits_per_spike"].dropna().to_numpy(float))
         jitter = np.random.default_rng(0)
         for place, model in enumerate(models):
             y = len(models) - 1 - place
@@ -205,26 +206,42 @@ def draw_held_out_scores(units: pd.DataFrame, scores: pd.DataFrame, settings: Fi
             colour = term_colour(terms[0]) if len(terms) == 1 else INK
             of_model = table[table["model"] == model].sort_values(["session", "unit"])
             value = of_model["bits_per_spike"].dropna().to_numpy(float)
-            _draw_spread(axes, value, y, colour, jitter)
+            _draw_spread(axes, value, y, colour, jitter, limits)
             chosen = int((fitted["selected_model"] == model).sum())
             counts.barh(y, chosen, height=0.6, color=colour, alpha=0.75, lw=0)
             counts.text(chosen, y, f" {chosen}", va="center", color=SOFT_INK)
-        _finish_scores(axes, counts, models, table["bits_per_spike"].dropna().to_numpy(float))
+        _finish_scores(axes, counts, models, limits)
         counts.set_xlabel(f"units (none: {int((fitted['selected_model'] == 'constant').sum())})")
         headline(figure, title, n_text(len(fitted), len(_animals(fitted))))
     return figure
 
 
-def _draw_spread(axes: Any, value: np.ndarray, y: float, colour: str, jitter: np.random.Generator) -> None:
+def _score_limits(values: np.ndarray) -> tuple[float, float]:
+    """Limits that the most extreme half percent of scores do not widen."""
+    if not values.size:
+        return -0.01, 0.01
+    low, high = np.quantile(values, [0.005, 0.995])
+    return min(float(low) * 1.1, -0.03 * float(high)), max(float(high) * 1.06, 0.01)
+
+
+def _draw_spread(
+    axes: Any,
+    value: np.ndarray,
+    y: float,
+    colour: str,
+    jitter: np.random.Generator,
+    limits: tuple[float, float],
+) -> None:
     at = y + jitter.uniform(-0.26, 0.26, value.size)
-    axes.plot(value, at, ".", ms=2.6, mew=0, color=colour, alpha=0.4, rasterized=True)
+    shown = np.clip(value, *limits)
+    axes.plot(shown, at, ".", ms=2.6, mew=0, color=colour, alpha=0.4, rasterized=True, clip_on=False)
     if value.size:
         quarter, middle, three = np.quantile(value, [0.25, 0.5, 0.75])
         axes.plot([quarter, three], [y, y], color=INK, lw=1.1, zorder=3)
         axes.plot(middle, y, "|", ms=9, mew=2, color=INK, zorder=4)
 
 
-def _finish_scores(axes: Any, counts: Any, models: list[str], values: np.ndarray) -> None:
+def _finish_scores(axes: Any, counts: Any, models: list[str], limits: tuple[float, float]) -> None:
     axes.axvline(0, color=RULE, lw=0.8, zorder=0)
     for each in (axes, counts):
         each.set_ylim(-0.6, len(models) - 0.4)
@@ -232,9 +249,7 @@ def _finish_scores(axes: Any, counts: Any, models: list[str], values: np.ndarray
     axes.set_yticks(range(len(models))[::-1], [model_label(model) for model in models])
     counts.set_yticks([])
     axes.tick_params(axis="y", length=0)
-    if values.size:
-        low, high = np.quantile(values, [0.005, 0.995])
-        axes.set_xlim(min(float(low) * 1.1, -0.03 * float(high)), max(float(high) * 1.06, 0.01))
+    axes.set_xlim(*limits)
     axes.set_xlabel("bits per spike over constant rate")
     counts.margins(x=0.2)
 

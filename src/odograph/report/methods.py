@@ -118,8 +118,8 @@ def _encoding(value: Callable[[str], Any], cite: Callable[..., str]) -> list[str
     )
     first = (
         "Spike counts were modelled as Poisson with the log rate a sum of smooth terms under "
-        f"second-derivative penalties {cite('splines')}: {bases}. Smoothing strengths were chosen from the training data by "
-        f"restricted marginal likelihood {cite('strengths')}.{drift} Models of every subset of the terms "
+        f"second-derivative penalties {cite('splines')}: {bases}. Smoothing strengths were chosen from the "
+        f"training data by restricted marginal likelihood {cite('strengths')}.{drift} Models of every subset of the terms "
         f"({models} in all) and the constant model were compared by held-out log-likelihood in "
         f"{_plain(value('encoding.folds'))} folds of {_plain(value('encoding.blocks_per_fold'))} interleaved "
         f"contiguous blocks each, {_plain(value('encoding.guard_s'))} s beside each held-out block being "
