@@ -33,7 +33,7 @@ def nile(first_year=0, prior=0.0, prior_variance=1e7):
         prior_variances=(prior_variance, 1.0),
         noise_variance=NOISE,
     )
-    return filtered, rts_smoother(filtered, np.zeros(n), starts)
+    return filtered, rts_smoother(filtered, np.zeros(n))
 
 
 def test_nile_filter_gives_the_values_of_two_other_programs():
@@ -132,7 +132,7 @@ def test_smoother_equals_the_conditional_normal_distribution():
         prior_variances=(0.3, 0.7),
         noise_variance=noise,
     )
-    state, cov = rts_smoother(filtered, step, starts)
+    state, cov = rts_smoother(filtered, step)
 
     size = 2 * n
     joint = np.zeros((size, size))
@@ -189,6 +189,22 @@ def test_a_start_forgets_what_was_before():
     both = kalman_filter(measured, step, noise, starts, **whole)
     second = kalman_filter(measured[25:], step[25:], noise[25:], starts[25:], **whole)
     np.testing.assert_array_equal(both.updated[25:], second.updated)
-    state, _ = rts_smoother(both, step, starts)
+    state, _ = rts_smoother(both, step)
     np.testing.assert_allclose(state[:25, 0], 0.0, atol=1e-4)
     np.testing.assert_allclose(state[25:, 0], 5.0, atol=1e-4)
+
+
+def test_a_prediction_that_ran_astray_does_not_refuse_for_ever():
+    # Lost for 0.44 s while it stopped from 1 m/s: the prediction runs on and would outrun its own gate.
+    n = 300
+    step = np.full(n, 0.02)
+    x = np.minimum(np.arange(n) * 0.02, 2.0)
+    measured = np.column_stack([x, np.zeros(n)])
+    measured[100:122] = np.nan
+    given = {"prior_xy": (0.0, 0.0), "prior_variances": (1.0, 1.0), "noise_variance": 1e-6, "gate_sd": 6.0}
+    noise = white_acceleration(step, 0.001)
+    stubborn = kalman_filter(measured, step, noise, np.arange(n) == 0, **given)
+    patient = kalman_filter(measured, step, noise, np.arange(n) == 0, patience_s=0.3, **given)
+    assert stubborn.refused[122:].sum() > 20
+    assert not patient.refused[122:].any()
+    assert np.flatnonzero(patient.starts).tolist() == [0, 122]

@@ -14,8 +14,8 @@ _SPEED_PRIOR_M_S = 1.0
 _POSITION_PRIOR_M = 10.0
 # A gap counts as longer than allowed beyond this factor, so that drift and rounding decide nothing.
 _GAP_SLACK = 1.001
-# The filter begins anew after longer gaps: nothing is known of the motion by then.
-LONGEST_BRIDGED_S = 1.0
+# The filter begins anew after gaps that are not interpolated; shorter ones than this are always bridged.
+_ALWAYS_BRIDGED_S = 0.1
 
 
 @dataclass(frozen=True, eq=False)
@@ -65,7 +65,7 @@ def point_on_bins(
     motion : MotionModel
         Noise and acceleration.
     longest_gap_s : float
-        Gaps up to this are bridged, at least `LONGEST_BRIDGED_S`.
+        Gaps up to this are bridged; the filter begins anew after longer ones.
     gate_sd : float
         Gate of the filter.
     """
@@ -78,11 +78,9 @@ def point_on_bins(
     order = np.argsort(times, kind="stable")
     measured = np.concatenate([xy_m[seen], np.full((len(centre_s), 2), np.nan)])[order]
     step = np.diff(times[order], prepend=times[order[0]])
-    begins = np.zeros(len(times), bool)
-    gap = np.diff(time_s[seen], prepend=-np.inf)
-    begins[: len(seen)] = gap > max(longest_gap_s, LONGEST_BRIDGED_S)
-    starts = begins[order]
-    starts[0] = True
+    starts = np.zeros(len(times), bool)
+    # At the first entry, and at the first sample, which may come later than the first bin.
+    starts[[0, int(np.argmax(order == 0))]] = True
     filtered = kalman_filter(
         measured,
         step,
@@ -92,8 +90,9 @@ def point_on_bins(
         prior_variances=(_POSITION_PRIOR_M**2, _SPEED_PRIOR_M_S**2),
         noise_variance=motion.position_noise_m**2,
         gate_sd=gate_sd,
+        patience_s=max(_GAP_SLACK * longest_gap_s, _ALWAYS_BRIDGED_S),
     )
-    state, cov = rts_smoother(filtered, step, starts)
+    state, cov = rts_smoother(filtered, step)
     back = np.empty(len(order), int)
     back[order] = np.arange(len(order))
     refused[seen] = filtered.refused[back[: len(seen)]]

@@ -35,6 +35,8 @@ class Filtered:
         Measurements that were used.
     refused : ndarray (n,) of bool
         Measurements outside the gate.
+    starts : ndarray (n,) of bool
+        Entries at which the filter began anew.
     log_likelihood : float
         Of the measurements; one outside the gate counts as if it were on the gate.
     """
@@ -45,6 +47,7 @@ class Filtered:
     updated_cov: np.ndarray
     accepted: np.ndarray
     refused: np.ndarray
+    starts: np.ndarray
     log_likelihood: float
 
 
@@ -54,16 +57,23 @@ def white_acceleration(step_s: np.ndarray, intensity: float) -> np.ndarray:
 
 
 @numba.njit(cache=True)
-def _filter(measured, step, process, starts, prior_xy, prior_cov, noise, gate):
+def _filter(measured, step, process, starts, prior_xy, prior_cov, noise, gate, patience):
     n = len(step)
     predicted, updated = np.empty((n, 4)), np.empty((n, 4))
     predicted_cov, updated_cov = np.empty((n, 3)), np.empty((n, 3))
     accepted, refused = np.zeros(n, np.bool_), np.zeros(n, np.bool_)
+    began = starts.copy()
     log_likelihood = 0.0
+    since = 0.0
     x, y, u, v = prior_xy[0], prior_xy[1], 0.0, 0.0
     p, c, w = prior_cov[0], 0.0, prior_cov[1]
     for i in range(n):
-        if starts[i]:
+        since += step[i]
+        seen = not (np.isnan(measured[i, 0]) or np.isnan(measured[i, 1]))
+        if seen and since > patience:
+            began[i] = True
+        if began[i]:
+            since = 0.0
             x, y, u, v = prior_xy[0], prior_xy[1], 0.0, 0.0
             p, c, w = prior_cov[0], 0.0, prior_cov[1]
         else:
@@ -75,7 +85,7 @@ def _filter(measured, step, process, starts, prior_xy, prior_cov, noise, gate):
             w += process[i, 2]
         predicted[i] = x, y, u, v
         predicted_cov[i] = p, c, w
-        if not (np.isnan(measured[i, 0]) or np.isnan(measured[i, 1])):
+        if seen:
             total = p + noise
             dx, dy = measured[i, 0] - x, measured[i, 1] - y
             distance = (dx * dx + dy * dy) / total
@@ -90,11 +100,12 @@ def _filter(measured, step, process, starts, prior_xy, prior_cov, noise, gate):
                 c = c * noise / total
                 p = p * noise / total
                 accepted[i] = True
+                since = 0.0
             else:
                 refused[i] = True
         updated[i] = x, y, u, v
         updated_cov[i] = p, c, w
-    return predicted, updated, predicted_cov, updated_cov, accepted, refused, log_likelihood
+    return predicted, updated, predicted_cov, updated_cov, accepted, refused, began, log_likelihood
 
 
 def kalman_filter(
@@ -107,6 +118,7 @@ def kalman_filter(
     prior_variances: tuple[float, float],
     noise_variance: float,
     gate_sd: float = np.inf,
+    patience_s: float = np.inf,
 ) -> Filtered:
     """Filter the measurements of one point.
 
@@ -128,6 +140,9 @@ def kalman_filter(
         Variance of the measurement, per axis.
     gate_sd : float
         Measurements whose innovation is longer than this many standard deviations (per axis) are refused.
+    patience_s : float
+        At the first measurement later than this after the last one used, the filter begins anew: by then a
+        prediction says little, and one that has run astray would refuse what is true.
     """
     return Filtered(
         *_filter(
@@ -139,6 +154,7 @@ def kalman_filter(
             np.array(prior_variances, float),
             float(noise_variance),
             float(gate_sd) ** 2,
+            float(patience_s),
         )
     )
 
@@ -172,8 +188,8 @@ def _smooth(predicted, updated, predicted_cov, updated_cov, step, starts):
     return state, cov
 
 
-def rts_smoother(filtered: Filtered, step_s: np.ndarray, starts: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-    """Smooth what `kalman_filter` gave, with the same steps and starts.
+def rts_smoother(filtered: Filtered, step_s: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Smooth what `kalman_filter` gave, with the same steps.
 
     Returns
     -------
@@ -188,5 +204,5 @@ def rts_smoother(filtered: Filtered, step_s: np.ndarray, starts: np.ndarray) -> 
         filtered.predicted_cov,
         filtered.updated_cov,
         np.ascontiguousarray(step_s, float),
-        np.ascontiguousarray(starts, bool),
+        filtered.starts,
     )

@@ -66,14 +66,16 @@ def estimate_motion(
         Estimates rounded to three digits, so that they do not hang on the last bit of a processor.
     """
     fixed = (position_noise_m, acceleration_m_s2)
-    parts = _stretches(time_s, points_m, longest_gap_s)
+    parts = _stretches(time_s, points_m)
     if None not in fixed or not parts:
         values = [given if given is not None else start for given, start in zip(fixed, _START, strict=True)]
         return MotionModel(values[0], values[1], step_s)
 
     def cost(free):
         values = _filled(fixed, free)
-        return -sum(_log_likelihood(part, MotionModel(values[0], values[1], step_s)) for part in parts)
+        return -sum(
+            _log_likelihood(part, MotionModel(values[0], values[1], step_s), longest_gap_s) for part in parts
+        )
 
     # Heavy, and of use only when something is to be estimated.
     from scipy.optimize import minimize
@@ -104,7 +106,7 @@ def _filled(fixed, free):
     return [given if given is not None else 10.0 ** next(rest) for given in fixed]
 
 
-def _stretches(time_s, points_m, longest_gap_s):
+def _stretches(time_s, points_m):
     """(measured, steps, starts) of stretches of each point, without the samples that were lost."""
     parts = []
     for point in points_m:
@@ -115,13 +117,11 @@ def _stretches(time_s, points_m, longest_gap_s):
         rows = np.unique((first[:, None] + np.arange(_STRETCH_SAMPLES)).ravel())
         rows = seen[rows[rows < len(seen)]]
         steps = np.diff(time_s[rows], prepend=time_s[rows[0]])
-        starts = steps > longest_gap_s
-        starts[0] = True
-        parts.append((point[rows], steps, starts))
+        parts.append((point[rows], steps, np.arange(len(rows)) == 0))
     return parts
 
 
-def _log_likelihood(part, model):
+def _log_likelihood(part, model, longest_gap_s):
     measured, steps, starts = part
     return kalman_filter(
         measured,
@@ -132,4 +132,5 @@ def _log_likelihood(part, model):
         prior_variances=(_POSITION_PRIOR_M**2, _SPEED_PRIOR_M_S**2),
         noise_variance=model.position_noise_m**2,
         gate_sd=_GATE_SD,
+        patience_s=longest_gap_s,
     ).log_likelihood
