@@ -161,7 +161,7 @@ def test_session_without_valid_position(unit_row, unit_scores, curves, behaviour
     assert "no valid position" in words(draw_card(unit_row, unit_scores, curves, behaviour, None, settings))
 
 
-@pytest.mark.parametrize("size", [7, 8.5])
+@pytest.mark.parametrize("size", [7, 9])
 @pytest.mark.parametrize("selected", ["constant", "position+head_direction+speed"])
 def test_nothing_is_cut_off_or_covered(
     size, selected, unit_row, unit_scores, curves, behaviour, corners, misplaced

@@ -22,7 +22,7 @@ def words(figure) -> str:
     return "\n".join(text.get_text() for text in figure.findobj(Text))
 
 
-@pytest.mark.parametrize("size", [7, 8.5])
+@pytest.mark.parametrize("size", [7, 9])
 @pytest.mark.parametrize("study", STUDIES)
 @pytest.mark.parametrize("name", POPULATION_FIGURES)
 def test_nothing_is_cut_off_or_covered(name, study, size, population, misplaced):

@@ -14,7 +14,7 @@ def words(figure) -> str:
     return "\n".join(text.get_text() for text in figure.findobj(Text)).replace("\n", " ")
 
 
-@pytest.mark.parametrize("size", [7, 8.5])
+@pytest.mark.parametrize("size", [7, 9])
 def test_whole_session(size, inventory, clock, residuals, behaviour, audit, misplaced):
     settings = FiguresSettings(dpi=72, font_size_pt=size)
     figure = draw_session_quality(inventory, clock, residuals, behaviour, audit, settings)

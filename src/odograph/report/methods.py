@@ -116,16 +116,18 @@ def _encoding(value: Callable[[str], Any], cite: Callable[..., str]) -> list[str
         if value("encoding.drift")
         else ""
     )
+    folds, blocks, guard_s, fewest = (
+        _plain(value(f"encoding.{key}")) for key in ("folds", "blocks_per_fold", "guard_s", "minimum_spikes")
+    )
     first = (
         "Spike counts were modelled as Poisson with the log rate a sum of smooth terms under "
         f"second-derivative penalties {cite('splines')}: {bases}. Smoothing strengths were chosen from the "
-        f"training data by restricted marginal likelihood {cite('strengths')}.{drift} Models of every subset of the terms "
-        f"({models} in all) and the constant model were compared by held-out log-likelihood in "
-        f"{_plain(value('encoding.folds'))} folds of {_plain(value('encoding.blocks_per_fold'))} interleaved "
-        f"contiguous blocks each, {_plain(value('encoding.guard_s'))} s beside each held-out block being "
-        f"left out of training. The simplest model within one standard error of the best was selected "
-        f"{cite('one_se')}. Units with fewer than {_plain(value('encoding.minimum_spikes'))} spikes in valid "
-        f"time were not fitted. Bands are pointwise 95 % {cite('bands')}."
+        f"training data by restricted marginal likelihood {cite('strengths')}.{drift} Models of every subset "
+        f"of the terms ({models} in all) and the constant model were compared by held-out log-likelihood in "
+        f"{folds} folds of {blocks} interleaved contiguous blocks each, {guard_s} s beside each held-out block "
+        "being left out of training. The simplest model within one standard error of the best was selected "
+        f"{cite('one_se')}. Units with fewer than {fewest} spikes in valid time were not fitted. Bands are "
+        f"pointwise 95 % {cite('bands')}."
     )
     test = (
         "Each term was tested against the model of the others by circular shifts of its covariate over valid "

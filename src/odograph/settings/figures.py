@@ -22,7 +22,7 @@ class FiguresSettings(StageSettings):
         ge=72,
         le=600,
     )
-    font_size_pt: float = setting(7.5, "Size of the text at print size.", unit="pt", ge=7, le=8.5)
+    font_size_pt: float = setting(7.5, "Size of the text at print size.", unit="pt", ge=7, le=9)
     rate_colour_map: Literal["viridis", "cividis", "magma", "inferno", "plasma"] = setting(
         "viridis", "Colour scale of rate maps; only scales that are even to the eye are offered."
     )
