@@ -91,8 +91,7 @@ def _behaviour(value: Callable[[str], Any], cite: Callable[..., str]) -> str:
         f"up to {_plain(value('behaviour.max_gap_s'))} s were interpolated, and position, head direction and "
         f"running speed were taken from it in bins of {1000 * float(value('behaviour.bin_s')):g} ms.{mask} "
         f"Sessions with less than {100 * float(value('behaviour.min_valid_share')):g} % or "
-        f"{_plain(value('behaviour.min_valid_s'))} s of valid time "
-        "were left out."
+        f"{_plain(value('behaviour.min_valid_s'))} s of valid time were left out."
     )
 
 
@@ -124,8 +123,8 @@ def _encoding(value: Callable[[str], Any], cite: Callable[..., str]) -> list[str
         f"second-derivative penalties {cite('splines')}: {bases}. Smoothing strengths were chosen from the "
         f"training data by restricted marginal likelihood {cite('strengths')}.{drift} Models of every subset "
         f"of the terms ({models} in all) and the constant model were compared by held-out log-likelihood in "
-        f"{folds} folds of {blocks} interleaved contiguous blocks each, {guard_s} s beside each held-out block "
-        "being left out of training. The simplest model within one standard error of the best was selected "
+        f"{folds} folds of {blocks} interleaved contiguous blocks each, {guard_s} s beside each held-out "
+        "block being left out of training. The simplest model within one standard error of the best was selected "
         f"{cite('one_se')}. Units with fewer than {fewest} spikes in valid time were not fitted. Bands are "
         f"pointwise 95 % {cite('bands')}."
     )
