@@ -124,9 +124,9 @@ def _encoding(value: Callable[[str], Any], cite: Callable[..., str]) -> list[str
         f"training data by restricted marginal likelihood {cite('strengths')}.{drift} Models of every subset "
         f"of the terms ({models} in all) and the constant model were compared by held-out log-likelihood in "
         f"{folds} folds of {blocks} interleaved contiguous blocks each, {guard_s} s beside each held-out "
-        "block being left out of training. The simplest model within one standard error of the best was selected "
-        f"{cite('one_se')}. Units with fewer than {fewest} spikes in valid time were not fitted. Bands are "
-        f"pointwise 95 % {cite('bands')}."
+        "block being left out of training. The simplest model within one standard error of the best was "
+        f"selected {cite('one_se')}. Units with fewer than {fewest} spikes in valid time were not fitted. "
+        f"Bands are pointwise 95 % {cite('bands')}."
     )
     test = (
         "Each term was tested against the model of the others by circular shifts of its covariate over valid "
