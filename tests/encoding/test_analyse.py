@@ -3,10 +3,20 @@
 import numpy as np
 import pytest
 
-from odograph.encoding.analyse import analyse_unit, prepare_session
+from odograph.encoding.analyse import _workspace, analyse_unit, prepare_session
+from odograph.encoding.evaluate import fit_whole
 from odograph.encoding.shapes import classify, curve_shape, largest_climb
-from odograph.encoding.shifts import plan_shifts, shift_test, shifted_cell_sums, transform_covariate
+from odograph.encoding.shifts import (
+    bin_cells,
+    null_model,
+    plan_shifts,
+    score_variance,
+    shift_test,
+    shifted_cell_sums,
+    transform_covariate,
+)
 from odograph.encoding.slow_fast import compare_halves, running_halves
+from odograph.encoding.spikes import bin_spikes
 
 
 @pytest.fixture(scope="module")
@@ -123,35 +133,58 @@ def test_shifted_sums_are_sums_over_the_rolled_covariate():
         np.testing.assert_allclose(out, np.bincount(np.roll(cell, -shift), weights=residual, minlength=7))
 
 
+def p_of(design, counts, term, plan, *, by_fft=True):
+    """(p, shifts) of a term for counts per bin, given drift alone."""
+    unit = bin_spikes(design, np.repeat((design.edges_s[:-1] + design.edges_s[1:]) / 2, counts.astype(int)))
+    space = _workspace(design, ())
+    null = null_model(space, fit_whole(space, design, unit), design, unit, plan)
+    spectrum = transform_covariate(term, plan) if by_fft else None
+    return shift_test(term, np.ones(1), null, plan, spectrum, plan.at_steps(bin_cells(space, design)))
+
+
 def test_all_shifts_by_fft_and_one_by_one_agree(design):
     """The same shifts tested by cross-correlation and by rolling the covariate."""
-    rng, term, plan = np.random.default_rng(4), design.terms[1], plan_of(design, draws=10**6)
-    expected = np.full(design.n_bins, 0.06)
+    term, plan = design.terms[1], plan_of(design, draws=10**6)
     for seed in range(3):
-        rng = np.random.default_rng(seed)
-        residual = rng.poisson(expected * (1 + 0.1 * np.cos(term.cell / 60 * 2 * np.pi))) - expected
-        by_fft = shift_test(term, np.ones(1), residual, expected, plan, transform_covariate(term, plan))
-        by_hand = shift_test(term, np.ones(1), residual, expected, plan, None)
-        assert by_fft == pytest.approx(by_hand) and by_fft[1] == len(plan.shifts)
+        rate = 0.06 * (1 + 0.1 * np.cos(term.cell / 60 * 2 * np.pi))
+        counts = np.random.default_rng(seed).poisson(rate)
+        by_fft = p_of(design, counts, term, plan)
+        assert by_fft == pytest.approx(p_of(design, counts, term, plan, by_fft=False))
+        assert by_fft[1] == len(plan.shifts)
 
 
-def test_p_of_exchangeable_residuals_is_uniform(design):
+def test_p_of_exchangeable_counts_is_uniform(design):
     """Davison & Hinkley 1997: the rank of an exchangeable statistic; 200 draws, binomial bounds at 99.9 %."""
-    rng, term, plan = np.random.default_rng(8), design.terms[1], plan_of(design)
-    expected, spectrum = np.full(design.n_bins, 0.06), transform_covariate(design.terms[1], plan)
+    rng, plan = np.random.default_rng(8), plan_of(design)
     p = np.array(
-        [
-            shift_test(term, np.ones(1), rng.poisson(expected) - expected, expected, plan, spectrum)[0]
-            for _ in range(200)
-        ]
+        [p_of(design, rng.poisson(0.06, design.n_bins), design.terms[1], plan)[0] for _ in range(200)]
     )
     assert 2 <= np.sum(p <= 0.05) <= 23
     assert 75 <= np.sum(p <= 0.5) <= 125
 
 
+def test_variance_of_the_score_is_that_of_the_dense_regression(design):
+    """V is the residual sum of squares of B regressed on X with weights W (and a ridge): dense arithmetic."""
+    term, plan = design.terms[2], plan_of(design)
+    unit = bin_spikes(design, design.edges_s[100:30000:12] + 0.003)
+    space = _workspace(design, ("head_direction",))
+    fit = fit_whole(space, design, unit)
+    null = null_model(space, fit, design, unit, plan)
+    cells = plan.at_steps(bin_cells(space, design))
+    X = np.hstack(
+        [np.ones((plan.n_steps, 1))]
+        + [(t.basis.dense() @ t.coordinates.matrix())[c] for t, c in zip(space.terms, cells, strict=True)]
+    )
+    for shift in (0, 517):
+        B = (term.basis.dense() @ term.coordinates.matrix())[np.roll(plan.cells(term), -shift)]
+        W = null.expected[:, None]
+        expected = B.T @ (W * B) - (B.T @ (W * X)) @ null.inverse @ (X.T @ (W * B))
+        found = score_variance(term, null, plan, cells, shift)
+        np.testing.assert_allclose(found, expected, atol=1e-8 * np.abs(expected).max())
+
+
 def test_no_admissible_shift_gives_no_p(design):
-    nothing, plan = np.zeros(design.n_bins), plan_of(design, minimum_s=400.0)
-    p, n = shift_test(design.terms[2], np.ones(1), nothing, nothing + 1, plan, None)
+    p, n = p_of(design, np.ones(design.n_bins), design.terms[2], plan_of(design, minimum_s=400.0))
     assert np.isnan(p) and n == 0
 
 

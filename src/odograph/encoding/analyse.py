@@ -21,7 +21,14 @@ from odograph.encoding.evaluate import Score, evaluate, fold_spikes
 from odograph.encoding.layout import Workspace, cell_basis, make_layout
 from odograph.encoding.select import best_score, select_model
 from odograph.encoding.shapes import curve_shape
-from odograph.encoding.shifts import ShiftPlan, plan_shifts, residuals, shift_test, transform_covariate
+from odograph.encoding.shifts import (
+    ShiftPlan,
+    bin_cells,
+    null_model,
+    plan_shifts,
+    shift_test,
+    transform_covariate,
+)
 from odograph.encoding.slow_fast import NOT_AVAILABLE, compare_halves, running_halves
 from odograph.encoding.speed_gain import describe_gains, fit_gains, gain_test, modulation
 from odograph.encoding.spikes import UnitSpikes, bin_spikes
@@ -203,10 +210,12 @@ def _tests(design: SessionDesign, unit: UnitSpikes, scores: list[Score]) -> dict
     out = {}
     for term in design.terms:
         others = tuple(name for name in names if name != term.name)
-        residual, expected = residuals(_workspace(design, others), by_model[others].fit, design, unit)
+        space = _workspace(design, others)
+        null = null_model(space, by_model[others].fit, design, unit, plan)
         spectrum = design.kept["spectrum", term.name]
+        cells = plan.at_steps(bin_cells(space, design))
         out[f"{term.name}_p"], out[f"{term.name}_shifts"] = shift_test(
-            term, full_strengths[term.name], residual, expected, plan, spectrum
+            term, full_strengths[term.name], null, plan, spectrum, cells
         )
     return out
 

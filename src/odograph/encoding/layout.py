@@ -224,11 +224,7 @@ class Workspace:
 
     def reduce(self, information: np.ndarray) -> np.ndarray:
         """X'WX in coordinates, (n_coordinates, n_coordinates), from splines, (n_splines, n_splines)."""
-        half = np.empty((self.layout.n_coordinates, self.layout.n_splines))
-        self._reduce(information, half)
-        whole = np.empty((self.layout.n_coordinates, self.layout.n_coordinates))
-        self._reduce(np.ascontiguousarray(half.T), whole)
-        return whole
+        return self.reduce_rows(np.ascontiguousarray(self.reduce_rows(information).T))
 
     def _plane_information(self) -> None:
         lay = self.layout
@@ -257,6 +253,12 @@ class Workspace:
         kernels.small_blocks(
             self._joint, self._joint_start, self._sums, *self.flat, lay.spline_count, self._information
         )
+
+    def reduce_rows(self, array: np.ndarray) -> np.ndarray:
+        """Rows of splines, (n_splines, k), as rows of coordinates, (n_coordinates, k)."""
+        out = np.empty((self.layout.n_coordinates, array.shape[1]))
+        self._reduce(array, out)
+        return out
 
     def _reduce(self, array: np.ndarray, out: np.ndarray) -> None:
         out[0] = array[0]

@@ -1,15 +1,23 @@
 """A calibrated test of each term: is its alignment with the spikes better than shifted ones?
 
-The model of all other terms is fitted once. The score statistic for adding the tested term,
+The model of all other terms, with design matrix X, is fitted once. The efficient score for adding the tested
+term with basis B (Cox & Hinkley 1974, Theoretical Statistics, section 9.3) and its variance,
 
-    T = U' (B'WB + S_lam)^-1 U,      U = B'(y - mu),
+    U = B'(e - W X a),   a = A^-1 X'e,   V = B'WB - B'WX A^-1 X'WB,   A = X'WX + c S_lam,   e = y - mu,
 
-is computed with the term's covariate turned circularly against spikes and the other covariates. Shifting
-keeps every signal's own autocorrelation, which is what makes ordinary tests of tuning too liberal for neurons
-that drift or burst; p is the rank of the true alignment, (1 + exceedances) / (1 + shifts) (Davison & Hinkley
-1997, Bootstrap Methods and their Application, section 4.2). The sequence of valid time is what is turned, so
-masked time has no part in it. Shifts go in steps of a few bins, over which residuals are summed; where it is
-affordable all admissible shifts are had at once as a cross-correlation by FFT, else a seeded draw of them.
+are computed with the term's covariate turned circularly against spikes and the other covariates. `a` is a
+step that undoes most of the penalty's pull on the null model (c is small), whose bias would otherwise look
+like tuning to anything correlated with the other terms; V accounts for what they have already explained,
+which at the true alignment is more than at any other. The statistic is a sum of squares of U standardised by
+its own V, weighted towards smooth curves alike for all shifts. Shifting keeps every signal's own
+autocorrelation, which is what makes ordinary tests of tuning too liberal for neurons that drift or burst; p
+is the rank of the true alignment, (1 + exceedances) / (1 + shifts) (Davison & Hinkley 1997, Bootstrap Methods
+and their Application, section 4.2).
+
+The sequence of valid time is what is turned, so masked time has no part in it. Shifts go in steps of a few
+bins, over which residuals are summed; where it is affordable U is had for all admissible shifts at once as a
+cross-correlation by FFT, else for a seeded draw of them. V away from the true alignment is the mean over a
+few drawn shifts.
 """
 
 from __future__ import annotations
@@ -23,10 +31,13 @@ from scipy import fft, linalg
 from odograph.encoding.design import SessionDesign
 from odograph.encoding.fit import Fit
 from odograph.encoding.layout import Workspace
+from odograph.encoding.smoothing import factorise
 from odograph.encoding.spikes import UnitSpikes
 from odograph.encoding.terms import Term
 
 FFT_LIMIT = 4_000_000  # numbers in a term's transformed basis: about 60 MB
+UNDERSMOOTHING = 0.05
+VARIANCE_SHIFTS = 16
 
 
 @dataclass(frozen=True)
@@ -54,9 +65,13 @@ class ShiftPlan:
         whole = self.n_steps * self.bins_per_step
         return values[:whole].reshape(self.n_steps, self.bins_per_step).sum(axis=1)
 
+    def at_steps(self, values: np.ndarray) -> np.ndarray:
+        """Values in the middle of each step, (..., n_bins) -> (..., n_steps)."""
+        return values[..., self.bins_per_step // 2 :: self.bins_per_step][..., : self.n_steps]
+
     def cells(self, term: Term) -> np.ndarray:
         """The cell of a term in the middle of each step, (n_steps,)."""
-        return term.cell[self.bins_per_step // 2 :: self.bins_per_step][: self.n_steps]
+        return self.at_steps(term.cell)
 
 
 def plan_shifts(
@@ -94,17 +109,77 @@ def bin_rates(cells, factors, starts, scale, out):
         out[i] = value
 
 
-def residuals(
-    space: Workspace, fit: Fit, design: SessionDesign, unit: UnitSpikes
-) -> tuple[np.ndarray, np.ndarray]:
-    """Counts minus expected counts, and expected counts, of every valid bin; each (n_bins,)."""
+@njit(cache=True, nogil=True)
+def shifted_products(cells, starts, columns, weights, supports, offsets, value, cell, shift, out):
+    """out[c] = sum of value[i] X[i] over steps whose tested covariate, turned by `shift`, lies in cell c.
+
+    cells (n_terms, n_steps) of the null model's terms, whose sparse bases columns/weights are; X's splines,
+    intercept first, are the columns of `out` (n_cells, n_splines), which is overwritten.
+    """
+    out[:, :] = 0.0
+    n = len(cell)
+    for i in range(n):
+        c = cell[(i + shift) % n]
+        out[c, 0] += value[i]
+        for t in range(len(starts)):
+            k = starts[t] + cells[t, i]
+            for j in range(supports[t]):
+                out[c, offsets[t] + columns[k, j]] += value[i] * weights[k, j]
+
+
+@dataclass(frozen=True)
+class NullModel:
+    """A model without the tested term, over steps.
+
+    Attributes
+    ----------
+    residual : ndarray, (n_steps,)
+        e - W X a, see the module's text.
+    expected : ndarray, (n_steps,)
+        W's diagonal: expected spikes.
+    space : Workspace
+    inverse : ndarray, (n_coordinates, n_coordinates)
+        A^-1.
+    """
+
+    residual: np.ndarray
+    expected: np.ndarray
+    space: Workspace
+    inverse: np.ndarray
+
+
+def null_model(
+    space: Workspace, fit: Fit, design: SessionDesign, unit: UnitSpikes, plan: ShiftPlan
+) -> NullModel:
+    """Prepare the fitted model without the tested term."""
+    ones = np.ones(design.folds.n_groups)
+    total = space.expected(fit.coefficients, ones)
+    factors = np.exp(space.eta)
+    gradient, information = space.derivatives(total)
+    cells = bin_cells(space, design)
     mu = np.empty(design.n_bins)
-    space.expected(fit.coefficients, np.ones(design.folds.n_groups))
-    if "cells" not in (kept := design.kept.setdefault(("bins", tuple(t.name for t in space.terms)), {})):
-        kept["cells"] = np.array([t.cell for t in space.terms], dtype=np.int32).reshape(len(space.terms), -1)
-    scale = np.exp(fit.coefficients[0]) * design.bin_s
-    bin_rates(kept["cells"], np.exp(space.eta), space.layout.cell_start, scale, mu)
-    return unit.counts - mu, mu
+    bin_rates(cells, factors, space.layout.cell_start, np.exp(fit.coefficients[0]) * design.bin_s, mu)
+    ridge = np.exp(fit.log_strengths) @ space.layout.spectra
+    score = space.project(
+        np.concatenate([unit.per_cell(t) for t in space.terms]) if space.terms else np.empty(0), unit.n_spikes
+    )
+    inverse = factorise(information + np.diag(UNDERSMOOTHING * ridge))[1]
+    step = inverse @ (score - gradient)
+    space.expected(step, ones)  # leaves the step's effects at the cells in `eta`
+    shift = np.full(design.n_bins, step[0])
+    for t, start in enumerate(space.layout.cell_start):
+        shift += space.eta[start + cells[t]]
+    residual = plan.per_step(unit.counts - mu * (1 + shift))
+    return NullModel(residual - residual.mean(), plan.per_step(mu), space, inverse)
+
+
+def bin_cells(space: Workspace, design: SessionDesign) -> np.ndarray:
+    """The cell of every bin for each of a model's terms, (n_terms, n_bins) of int32."""
+    key = ("bins", tuple(term.name for term in space.terms))
+    if key not in design.kept:
+        cells = [term.cell for term in space.terms]
+        design.kept[key] = np.array(cells, dtype=np.int32).reshape(len(cells), design.n_bins)
+    return design.kept[key]
 
 
 def transform_covariate(term: Term, plan: ShiftPlan) -> np.ndarray | None:
@@ -118,13 +193,35 @@ def transform_covariate(term: Term, plan: ShiftPlan) -> np.ndarray | None:
     return fft.rfft(np.ascontiguousarray(basis[plan.cells(term)].T), axis=1)
 
 
+def score_variance(term: Term, null: NullModel, plan: ShiftPlan, cells: np.ndarray, shift: int) -> np.ndarray:
+    """V of a term turned by `shift` steps, (n_coordinates, n_coordinates); cells (n_terms, n_steps)."""
+    lay = null.space.layout
+    products = np.empty((term.n_cells, lay.n_splines))
+    shifted_products(
+        cells,
+        lay.cell_start,
+        lay.columns,
+        lay.weights,
+        lay.support,
+        lay.spline_start,
+        null.expected,
+        plan.cells(term),
+        shift,
+        products,
+    )
+    basis = term.basis.dense() @ term.coordinates.matrix()
+    own = (basis * products[:, :1]).T @ basis
+    crossed = null.space.reduce_rows(np.ascontiguousarray(products.T)) @ basis
+    return own - crossed.T @ null.inverse @ crossed
+
+
 def shift_test(
     term: Term,
     strengths: np.ndarray,
-    residual: np.ndarray,
-    expected: np.ndarray,
+    null: NullModel,
     plan: ShiftPlan,
     spectrum: np.ndarray | None,
+    cells: np.ndarray,
 ) -> tuple[float, int]:
     """p of a term given the model of all other terms.
 
@@ -134,11 +231,12 @@ def shift_test(
         The tested term.
     strengths : ndarray, (n_penalties,)
         Its smoothing strengths in the model that has it.
-    residual, expected : ndarray, (n_bins,)
-        Of the model without it, see `residuals`.
+    null : NullModel
     plan : ShiftPlan
     spectrum : ndarray or None
         From `transform_covariate`.
+    cells : ndarray of int32, (n_terms, n_steps)
+        Of the null model's terms, in the middle of each step.
 
     Returns
     -------
@@ -149,37 +247,35 @@ def shift_test(
     """
     if not len(plan.shifts):
         return float("nan"), 0
-    residual, expected = plan.per_step(residual), plan.per_step(expected)
-    whitening, centre = _whitening(term, strengths, expected, plan)
+    at_truth, away = _standardisers(term, strengths, null, plan, cells)
+    shifts = plan.shifts if spectrum is not None else plan.drawn
     if spectrum is not None:
-        turned = fft.irfft(np.conj(fft.rfft(residual)) * spectrum, n=plan.n_steps, axis=1)
-        shifts = plan.shifts
-        sums = turned[:, np.append(0, shifts)]
+        turned = fft.irfft(np.conj(fft.rfft(null.residual)) * spectrum, n=plan.n_steps, axis=1)
+        truth, sums = turned[:, 0], turned[:, shifts]
     else:
-        shifts = plan.drawn
-        basis = term.basis.dense() @ term.coordinates.matrix()
         per_cell = np.empty((len(shifts) + 1, term.n_cells))
-        cell = plan.cells(term)
         for row, shift in enumerate(np.append(0, shifts)):
-            shifted_cell_sums(cell, residual, int(shift), per_cell[row])
-        sums = (per_cell @ basis).T
-    sums -= centre[:, None] * residual.sum()
-    statistic = np.sum((whitening @ sums) ** 2, axis=0)
+            shifted_cell_sums(plan.cells(term), null.residual, int(shift), per_cell[row])
+        sums = (per_cell @ (term.basis.dense() @ term.coordinates.matrix())).T
+        truth, sums = sums[:, 0], sums[:, 1:]
+    statistic = np.sum((away @ sums) ** 2, axis=0)
     # Rounding must not decide ties, which occur where a covariate repeats itself.
-    exceed = int(np.sum(statistic[1:] >= statistic[0] * (1 - 1e-9)))
+    exceed = int(np.sum(statistic >= np.sum((at_truth @ truth) ** 2) * (1 - 1e-9)))
     return (1 + exceed) / (1 + len(shifts)), len(shifts)
 
 
-def _whitening(
-    term: Term, strengths: np.ndarray, expected: np.ndarray, plan: ShiftPlan
+def _standardisers(
+    term: Term, strengths: np.ndarray, null: NullModel, plan: ShiftPlan, cells: np.ndarray
 ) -> tuple[np.ndarray, np.ndarray]:
-    """L^-1 of the statistic's metric LL' = B'WB + S_lam, B centred, and that centre."""
-    basis = term.basis.dense() @ term.coordinates.matrix()
-    weight = np.bincount(plan.cells(term), weights=expected, minlength=term.n_cells)
-    centre = weight @ basis / weight.sum()
-    centred = basis - centre
-    metric = (centred * weight[:, None]).T @ centred
-    metric[np.diag_indices_from(metric)] += strengths @ term.coordinates.spectra
-    metric[np.diag_indices_from(metric)] += 1e-8 * np.trace(metric) / len(metric)
-    lower = linalg.cholesky(metric, lower=True)
-    return linalg.solve_triangular(lower, np.eye(len(lower)), lower=True), centre
+    """Matrices that turn U into the terms of the statistic's sum: at the true alignment, and away from it."""
+    drawn = plan.drawn[np.linspace(0, len(plan.drawn) - 1, min(VARIANCE_SHIFTS, len(plan.drawn))).astype(int)]
+    away = np.mean([score_variance(term, null, plan, cells, int(shift)) for shift in drawn], axis=0)
+    away[np.diag_indices_from(away)] += 1e-8 * np.trace(away) / len(away)
+    # Where the other terms determine the covariate, what is left to standardise by is kept from vanishing.
+    truth = score_variance(term, null, plan, cells, 0) + 1e-3 * away
+    smooth = away.copy()
+    smooth[np.diag_indices_from(smooth)] += strengths @ term.coordinates.spectra
+    weight = linalg.solve_triangular(linalg.cholesky(smooth, lower=True), np.eye(len(smooth)), lower=True)
+    root = linalg.cholesky(away, lower=True)
+    inverse = linalg.solve_triangular(linalg.cholesky(truth, lower=True), np.eye(len(truth)), lower=True)
+    return weight @ root @ inverse, weight

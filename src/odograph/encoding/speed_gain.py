@@ -10,10 +10,10 @@ Standard errors come from the full (observed) Hessian.
 
 The test of g_t = 0 uses the efficient score at the additive fit: with e = y - mu, the statistic
 
-    U / sqrt(V),   U = sum e z f_t,   V = sum mu (z f_t)^2 - q' (X'WX + S_lam)^-1 q,   q = X'W z f_t,
+    U / sqrt(V),   U = sum (e - mu X a) z f_t,   V = sum mu (z f_t)^2 - q' A^-1 q,   q = X'W z f_t,
 
-and its rank among circular shifts of z against everything else, U and V computed anew for every shift (Cox &
-Hinkley 1974, Theoretical Statistics, section 9.3, for the efficient score).
+with a and A as in `odograph.encoding.shifts`, and its rank among circular shifts of z against everything
+else, U and V computed anew for every shift.
 """
 
 from __future__ import annotations
@@ -28,7 +28,7 @@ from odograph.encoding import kernels
 from odograph.encoding.design import SessionDesign
 from odograph.encoding.fit import Fit
 from odograph.encoding.layout import Workspace
-from odograph.encoding.shifts import ShiftPlan, residuals
+from odograph.encoding.shifts import ShiftPlan, null_model
 from odograph.encoding.smoothing import Quadratic, factorise, tune
 from odograph.encoding.spikes import UnitSpikes
 from odograph.encoding.terms import Term
@@ -304,11 +304,11 @@ def gain_test(
     """
     if not len(plan.drawn):
         return float("nan")
-    residual, expected = residuals(space, fit, design, unit)
+    null = null_model(space, fit, design, unit, plan)
     t = space.layout.index_of(name)
     term, block = space.terms[t], space.layout.slices[t]
     effect = ((term.basis.dense() @ term.coordinates.matrix()) @ fit.coefficients[block])[plan.cells(term)]
-    e, w = plan.per_step(residual), plan.per_step(expected)
+    e, w = null.residual, null.expected
     zs = plan.per_step(z) / plan.bins_per_step
     shifts = np.append(0, plan.drawn)
     turned = np.conj(fft.rfft(zs)), np.conj(fft.rfft(zs**2))
@@ -321,7 +321,7 @@ def gain_test(
     score = against(e * effect, 0)
     variance = against(w * effect**2, 1)
     crossed = against(_step_design(space, plan) * (w * effect), 0)
-    variance = variance - np.sum(crossed * (fit.covariance @ crossed), axis=0)
+    variance = variance - np.sum(crossed * (null.inverse @ crossed), axis=0)
     statistic = np.abs(score) / np.sqrt(np.maximum(variance, 1e-12 * np.abs(variance).max() + 1e-300))
     return float((1 + np.sum(statistic[1:] >= statistic[0] * (1 - 1e-9))) / len(shifts))
 
