@@ -3,9 +3,10 @@
 import numpy as np
 import pytest
 
-from odograph.encoding.analyse import _workspace, analyse_unit, prepare_session
+from odograph.encoding.analyse import analyse_unit, prepare_session
 from odograph.encoding.evaluate import fit_whole
 from odograph.encoding.shapes import classify, curve_shape, largest_climb
+from odograph.encoding.shared import workspace
 from odograph.encoding.shifts import (
     bin_cells,
     null_model,
@@ -136,7 +137,7 @@ def test_shifted_sums_are_sums_over_the_rolled_covariate():
 def p_of(design, counts, term, plan, *, by_fft=True):
     """(p, shifts) of a term for counts per bin, given drift alone."""
     unit = bin_spikes(design, np.repeat((design.edges_s[:-1] + design.edges_s[1:]) / 2, counts.astype(int)))
-    space = _workspace(design, ())
+    space = workspace(design, ())
     null = null_model(space, fit_whole(space, design, unit), design, unit, plan)
     spectrum = transform_covariate(term, plan) if by_fft else None
     return shift_test(term, np.ones(1), null, plan, spectrum, plan.at_steps(bin_cells(space, design)))
@@ -167,7 +168,7 @@ def test_variance_of_the_score_is_that_of_the_dense_regression(design):
     """V is the residual sum of squares of B regressed on X with weights W (and a ridge): dense arithmetic."""
     term, plan = design.terms[2], plan_of(design)
     unit = bin_spikes(design, design.edges_s[100:30000:12] + 0.003)
-    space = _workspace(design, ("head_direction",))
+    space = workspace(design, ("head_direction",))
     fit = fit_whole(space, design, unit)
     null = null_model(space, fit, design, unit, plan)
     cells = plan.at_steps(bin_cells(space, design))

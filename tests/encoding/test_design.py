@@ -76,6 +76,12 @@ def test_a_missing_column_is_named_with_those_there_are(table):
         prepare_session(table, settings)
 
 
+def test_a_covariate_without_a_value_is_named(table):
+    nothing = np.full(len(table["x_m"]), np.nan)
+    with pytest.raises(InputError, match=r"(?s)head_direction_rad.*no value in this session"):
+        prepare_session(table | {"head_direction_rad": nothing}, EncodingSettings())
+
+
 def test_a_constant_covariate_is_refused(table):
     with pytest.raises(InputError, match=r"speed.*constant"):
         prepare_session(table | {"speed_cm_s": np.full(len(table["x_m"]), 3.0)}, EncodingSettings())

@@ -7,10 +7,11 @@ import pytest
 from scipy.special import xlogy
 
 from odograph.encoding import evaluate as module
-from odograph.encoding.analyse import _workspace, bin_spikes
 from odograph.encoding.design import prepare_session
 from odograph.encoding.evaluate import Score, evaluate, fold_spikes
 from odograph.encoding.select import best_score, paired_shortfall, select_model
+from odograph.encoding.shared import workspace
+from odograph.encoding.spikes import bin_spikes
 from odograph.settings.encoding import EncodingSettings
 
 
@@ -30,7 +31,7 @@ def test_bits_per_spike_of_a_unit_that_fires_in_part_of_the_arena(table):
     inside = np.flatnonzero(state == 1)
     bins = np.random.default_rng(1).choice(inside, 3000, replace=True)
     unit = bin_spikes(design, table["time_s"][np.sort(bins)])
-    found = evaluate(_workspace(design, ("state",)), ("state",), design, unit, fold_spikes(design, unit))
+    found = evaluate(workspace(design, ("state",)), ("state",), design, unit, fold_spikes(design, unit))
     share = inside.size / design.n_bins
     assert found.bits_per_spike == pytest.approx(np.log2(1 / share), abs=0.02)
 
@@ -38,7 +39,7 @@ def test_bits_per_spike_of_a_unit_that_fires_in_part_of_the_arena(table):
 def test_deviance_explained_is_one_minus_the_deviance_ratio(design, simulate):
     unit = bin_spikes(design, simulate("head_direction"))
     tables = fold_spikes(design, unit)
-    found = evaluate(_workspace(design, ("head_direction",)), ("head_direction",), design, unit, tables)
+    found = evaluate(workspace(design, ("head_direction",)), ("head_direction",), design, unit, tables)
     fold_of_bin = design.folds.group % design.folds.n_folds
     constant = 0.0
     for fold in range(design.folds.n_folds):
@@ -51,7 +52,7 @@ def test_deviance_explained_is_one_minus_the_deviance_ratio(design, simulate):
 def test_scores_are_the_likelihood_of_held_out_bins(design, simulate, monkeypatch):
     """One fold's gain, recomputed bin by bin from that fold's own coefficients."""
     unit, model = bin_spikes(design, simulate("head_direction+speed")), ("head_direction", "speed")
-    space, fits = _workspace(design, model), []
+    space, fits = workspace(design, model), []
     original = module.fit_model
 
     def keep(*args, **kwargs):
@@ -93,7 +94,7 @@ def test_held_out_spikes_do_not_reach_the_fit_that_is_scored_on_them(design, sim
 
     monkeypatch.setattr(module, "fit_model", spy)
     for u in (unit, other):
-        evaluate(_workspace(design, model), model, design, u, fold_spikes(design, u))
+        evaluate(workspace(design, model), model, design, u, fold_spikes(design, u))
     half = len(seen) // 2
     np.testing.assert_allclose(seen[half + 1 + fold], seen[1 + fold], rtol=1e-4)
     assert not np.allclose(seen[half + 2 + fold], seen[2 + fold], rtol=1e-3)
@@ -104,7 +105,7 @@ def test_untuned_units_gain_nothing_held_out(design, simulate):
     for seed in range(6):
         unit = bin_spikes(design, simulate("flat", seed))
         found = evaluate(
-            _workspace(design, ("position",)), ("position",), design, unit, fold_spikes(design, unit)
+            workspace(design, ("position",)), ("position",), design, unit, fold_spikes(design, unit)
         )
         gains.append(found.bits_per_spike)
     assert np.mean(gains) < 0.003

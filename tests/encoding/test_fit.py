@@ -5,11 +5,12 @@ import pytest
 from scipy.optimize import minimize
 from sklearn.linear_model import PoissonRegressor
 
-from odograph.encoding.analyse import _workspace, bin_spikes
 from odograph.encoding.design import prepare_session
 from odograph.encoding.evaluate import fit_whole
 from odograph.encoding.fit import fit_model
 from odograph.encoding.layout import from_coordinates, to_coordinates
+from odograph.encoding.shared import workspace
+from odograph.encoding.spikes import bin_spikes
 from odograph.settings.encoding import EncodingSettings, TermSettings
 
 FULL = ("position", "head_direction", "speed")
@@ -26,7 +27,7 @@ def dense_rows(space):
 
 @pytest.mark.parametrize("model", [("head_direction",), ("position", "speed"), FULL])
 def test_derivatives_are_those_of_the_dense_design_matrix(design, model):
-    space = _workspace(design, model)
+    space = workspace(design, model)
     X, seconds = dense_rows(space)
     rng = np.random.default_rng(1)
     beta = rng.normal(0, 0.05, space.layout.n_coordinates)
@@ -53,7 +54,7 @@ def test_coordinates_go_there_and_back(design):
 
 def test_fixed_penalty_optimum_is_that_of_a_general_optimiser(design, simulate):
     # Source: scipy.optimize.minimize (trust-exact) on the dense penalised likelihood.
-    space = _workspace(design, ("head_direction", "speed"))
+    space = workspace(design, ("head_direction", "speed"))
     unit = bin_spikes(design, simulate("head_direction+speed"))
     rho = np.array([1.0, 3.0, 2.0])
     spikes = space.project(np.concatenate([unit.per_cell(t) for t in space.terms]), unit.n_spikes)
@@ -84,7 +85,7 @@ def test_ridge_on_categories_is_scikit_learns(table, simulate):
         terms=[TermSettings(name="state", kind="category", columns=["state"])], drift=False
     )
     design = prepare_session(table | {"state": state}, settings)
-    space = _workspace(design, ("state",))
+    space = workspace(design, ("state",))
     unit = bin_spikes(design, simulate("position"))
     (term,) = design.terms
     counts, seconds = unit.per_cell(term), np.bincount(term.cell) * design.bin_s
@@ -102,7 +103,7 @@ def test_ridge_on_categories_is_scikit_learns(table, simulate):
 
 def test_chosen_strengths_are_a_maximum_of_the_working_restricted_likelihood(design, simulate):
     """At the fitted strengths the generalized Fellner-Schall update (Wood & Fasiolo 2017) stands still."""
-    space = _workspace(design, FULL)
+    space = workspace(design, FULL)
     unit = bin_spikes(design, simulate("position+head_direction+speed"))
     spikes = space.project(np.concatenate([unit.per_cell(t) for t in space.terms]), unit.n_spikes)
     fit = fit_model(space, spikes, np.ones(design.folds.n_groups), tolerance=1e-9)
@@ -125,7 +126,7 @@ def test_chosen_strengths_are_a_maximum_of_the_working_restricted_likelihood(des
 
 def test_a_fit_does_not_depend_on_where_it_started(table, simulate):
     design = prepare_session(table, EncodingSettings(drift=False))
-    space, use = _workspace(design, ("position", "head_direction")), np.ones(design.folds.n_groups)
+    space, use = workspace(design, ("position", "head_direction")), np.ones(design.folds.n_groups)
     kinds = ("position+head_direction", "head_direction")
     units = [bin_spikes(design, simulate(kind, seed)) for seed, kind in enumerate(kinds)]
     other = fit_whole(space, design, units[1])
@@ -141,13 +142,13 @@ def test_rates_that_are_zero_in_half_the_arena_stay_finite(design, table):
     rate = np.where(table["x_m"] > 0.5, 8.0, 0.0)
     counts = np.random.default_rng(5).poisson(rate * 0.02)
     unit = bin_spikes(design, np.repeat(table["time_s"], counts))
-    fit = fit_whole(_workspace(design, ("position", "speed")), design, unit)
+    fit = fit_whole(workspace(design, ("position", "speed")), design, unit)
     assert fit.converged and np.all(np.isfinite(fit.covariance))
     assert fit.log_likelihood > unit.n_spikes * np.log(unit.n_spikes / (design.n_bins * 0.02)) - unit.n_spikes
 
 
 def test_iterations_that_run_out_are_reported(design, simulate):
-    space = _workspace(design, ("position",))
+    space = workspace(design, ("position",))
     unit = bin_spikes(design, simulate("position"))
     spikes = space.project(np.concatenate([unit.per_cell(t) for t in space.terms]), unit.n_spikes)
     fit = fit_model(space, spikes, np.ones(design.folds.n_groups), largest_iterations=2)

@@ -9,7 +9,6 @@ Results depend on nothing but these arguments: not on which units are analysed b
 from __future__ import annotations
 
 from dataclasses import astuple, dataclass
-from itertools import pairwise
 
 import numpy as np
 
@@ -18,20 +17,14 @@ from odograph.encoding import design as design_module
 from odograph.encoding.curves import seconds_per_cell, tuning_curves
 from odograph.encoding.design import SessionDesign, model_name
 from odograph.encoding.evaluate import Score, evaluate, fold_spikes
-from odograph.encoding.layout import Workspace, cell_basis, make_layout
+from odograph.encoding.layout import Workspace, cell_basis
 from odograph.encoding.select import best_score, select_model
 from odograph.encoding.shapes import curve_shape
-from odograph.encoding.shifts import (
-    ShiftPlan,
-    bin_cells,
-    null_model,
-    plan_shifts,
-    shift_test,
-    transform_covariate,
-)
+from odograph.encoding.shared import shift_plan, workspace
 from odograph.encoding.slow_fast import NOT_AVAILABLE, compare_halves, running_halves
 from odograph.encoding.speed_gain import describe_gains, fit_gains, gain_test, modulation
 from odograph.encoding.spikes import UnitSpikes, bin_spikes
+from odograph.encoding.term_tests import term_tests
 from odograph.encoding.terms import Term
 from odograph.settings.encoding import EncodingSettings
 
@@ -108,9 +101,11 @@ def analyse_unit(
         reason = f"no convergence: {', '.join(stuck)}"
         return UnitResult(row | {"status": "failed", "status_reason": reason}, rows, curves)
     row |= _selection(design, scores)
-    row |= _tests(design, unit, scores)
+    if settings.tests:
+        for name, (p, shifts) in term_tests(design, unit, {x.model: x.fit for x in scores}).items():
+            row |= {f"{name}_p": p, f"{name}_shifts": shifts}
     full = _by_model(scores)[tuple(term.name for term in design.terms)]
-    space = _workspace(design, full.model)
+    space = workspace(design, full.model)
     curves |= tuning_curves(design, unit, space.layout, full.fit)
     row |= _information(design, unit, curves)
     row |= _shape(design, space, full, row)
@@ -133,15 +128,9 @@ def _observed_design(design: SessionDesign, observed_s: np.ndarray | None) -> Se
     return design.kept[key]
 
 
-def _workspace(design: SessionDesign, model: tuple[str, ...]) -> Workspace:
-    if ("space", model) not in design.kept:
-        design.kept["space", model] = Workspace(make_layout(design.table(model)))
-    return design.kept["space", model]
-
-
 def _all_scores(design: SessionDesign, unit: UnitSpikes) -> list[Score]:
     tables = fold_spikes(design, unit)
-    return [evaluate(_workspace(design, model), model, design, unit, tables) for model in design.models()]
+    return [evaluate(workspace(design, model), model, design, unit, tables) for model in design.models()]
 
 
 def _by_model(scores: list[Score]) -> dict[tuple[str, ...], Score]:
@@ -199,51 +188,6 @@ def _selection(design: SessionDesign, scores: list[Score]) -> dict:
     return out | {f"encodes_{term.name}": term.name in selected.model for term in design.terms}
 
 
-def _tests(design: SessionDesign, unit: UnitSpikes, scores: list[Score]) -> dict:
-    """A shift test for each term, given all other terms."""
-    settings, by_model = design.settings, _by_model(scores)
-    if not settings.tests:
-        return {}
-    plan = _shift_plan(design)
-    names = tuple(term.name for term in design.terms)
-    full_strengths = _strengths_by_term(_workspace(design, names), by_model[names])
-    out = {}
-    for term in design.terms:
-        others = tuple(name for name in names if name != term.name)
-        space = _workspace(design, others)
-        null = null_model(space, by_model[others].fit, design, unit, plan)
-        spectrum = design.kept["spectrum", term.name]
-        cells = plan.at_steps(bin_cells(space, design))
-        out[f"{term.name}_p"], out[f"{term.name}_shifts"] = shift_test(
-            term, full_strengths[term.name], null, plan, spectrum, cells
-        )
-    return out
-
-
-def _shift_plan(design: SessionDesign) -> ShiftPlan:
-    """The session's shifts, with every term's transform, worked out once."""
-    if "shifts" not in design.kept:
-        settings = design.settings
-        plan = plan_shifts(
-            design.n_bins,
-            design.bin_s,
-            step_s=settings.test_step_s,
-            minimum_s=settings.test_minimum_shift_s,
-            draws=settings.test_draws,
-            seed=settings.seed,
-        )
-        design.kept["shifts"] = plan
-        for term in design.terms:
-            design.kept["spectrum", term.name] = transform_covariate(term, plan)
-    return design.kept["shifts"]
-
-
-def _strengths_by_term(space: Workspace, score: Score) -> dict[str, np.ndarray]:
-    bounds = np.cumsum([0, *(len(term.coordinates.spectra) for term in space.terms)])
-    strengths = np.exp(score.fit.log_strengths)
-    return {term.name: strengths[a:b] for term, (a, b) in zip(space.terms, pairwise(bounds), strict=True)}
-
-
 def _coarse_cell(design: SessionDesign, term: Term) -> np.ndarray:
     """Cells for information: coarser than the fit's, so that a cell holds enough time."""
     n = design.settings.information_cells
@@ -294,7 +238,7 @@ def _gains(design: SessionDesign, unit: UnitSpikes, space: Workspace, full: Scor
         return {}
     p = {}
     if design.settings.tests:
-        p = {name: gain_test(space, design, unit, full.fit, z, _shift_plan(design), name) for name in tuned}
+        p = {name: gain_test(space, design, unit, full.fit, z, shift_plan(design), name) for name in tuned}
     above = design.settings.running_above_cm_s
     described = describe_gains(space, design, fitted, speed.name, z, above, p)
     return {

@@ -123,7 +123,7 @@ def prepare_session(behaviour: dict[str, np.ndarray], settings: EncodingSettings
     Raises
     ------
     InputError
-        A term names a column that the table does not have, or a covariate is constant.
+        A term names a column that the table does not have, or a covariate is constant or has no value.
     """
     time_s = np.asarray(behaviour["time_s"], dtype=float)
     valid = np.asarray(behaviour["valid"], dtype=bool).copy()
@@ -136,7 +136,15 @@ def prepare_session(behaviour: dict[str, np.ndarray], settings: EncodingSettings
                     expected=f"one of {', '.join(sorted(set(behaviour) - {'valid', 'reason', 'time_s'}))}",
                     remedy="correct the term's columns, or name the covariate under intake.covariates",
                 )
-            valid &= np.isfinite(np.asarray(behaviour[column], dtype=float))
+            known = np.isfinite(np.asarray(behaviour[column], dtype=float))
+            if not known.any():
+                raise InputError(
+                    f"the term '{term.name}' uses '{column}', which has no value in this session",
+                    place="encoding.terms",
+                    expected="a covariate that was measured (head direction needs two points or a series)",
+                    remedy="leave the term out of encoding.terms, or study such sessions on their own",
+                )
+            valid &= known
     bin_s = round(float(np.median(np.diff(time_s))), 9)
     return _discretise(behaviour, time_s, valid, bin_s, settings)
 
