@@ -18,14 +18,16 @@ from packaging.version import Version
 ROOT = Path(__file__).parents[2]
 PROJECT = tomllib.loads((ROOT / "pyproject.toml").read_text(encoding="utf-8"))
 BUILD_TOOLS = {"setuptools"}
+# The extras that make and conda install. The benchmarks do without their extra where it is missing.
+INSTALLED_EXTRAS = ("test", "lint")
 
 
 def declared() -> dict[str, str]:
     """Version bounds by package of everything pyproject.toml asks for."""
     project = PROJECT["project"]
     texts = [*project["dependencies"], *PROJECT["build-system"]["requires"]]
-    for extra in project["optional-dependencies"].values():
-        texts += extra
+    for extra in INSTALLED_EXTRAS:
+        texts += project["optional-dependencies"][extra]
     requirements = [Requirement(text) for text in texts]
     return {canonicalize_name(one.name): str(one.specifier) for one in requirements}
 
@@ -52,6 +54,12 @@ def test_conda_and_pip_install_the_same():
     conda.pop("pip")
     assert conda == declared()
     assert environment["name"] == PROJECT["project"]["name"]
+
+
+def test_make_installs_every_extra_but_the_benchmarks():
+    makefile = (ROOT / "Makefile").read_text(encoding="utf-8")
+    assert f'".[{",".join(INSTALLED_EXTRAS)}]"' in makefile
+    assert PROJECT["project"]["optional-dependencies"].keys() == {*INSTALLED_EXTRAS, "benchmark"}
 
 
 def test_the_pinned_versions_satisfy_what_is_declared():
@@ -94,5 +102,5 @@ def _asked_for() -> list[str]:
     project = PROJECT["project"]
     return [
         *project["dependencies"],
-        *(one for extra in project["optional-dependencies"].values() for one in extra),
+        *(one for extra in INSTALLED_EXTRAS for one in project["optional-dependencies"][extra]),
     ]
