@@ -55,7 +55,7 @@ class Size:
 
 
 FULL = Size(minutes=30, units=5, folds=3, repeats=3, sample=20, lengths=(30, 60, 120, 240))
-QUICK = Size(minutes=10, units=1, folds=1, repeats=1, sample=2, lengths=(10, 20))
+QUICK = Size(minutes=8, units=1, folds=1, repeats=1, sample=2, lengths=(8, 12))
 
 
 @dataclass(frozen=True)
