@@ -55,7 +55,7 @@ class Size:
 
 
 FULL = Size(minutes=30, units=5, folds=3, repeats=3, sample=20, lengths=(30, 60, 120, 240))
-QUICK = Size(minutes=8, units=1, folds=1, repeats=1, sample=2, lengths=(8, 12))
+QUICK = Size(minutes=6, units=1, folds=1, repeats=1, sample=2, lengths=(6, 9))
 
 
 @dataclass(frozen=True)
@@ -297,7 +297,7 @@ def _run(workers: list, answers) -> list:
 
 def measure_growth(table: Table, session: Session, size: Size) -> None:
     """Line 5: time against the session's length and the number of units; a shard's memory."""
-    chosen, per_bin = (0, len(session.spikes) - 1), {"selection": [], "all of the analysis": []}
+    chosen, per_bin = sorted({0, len(session.spikes) - 1}), {"selection": [], "all of the analysis": []}
     for minutes in size.lengths:
         long = make_session(minutes, size.units)
         works = {
