@@ -55,7 +55,7 @@ class Size:
 
 
 FULL = Size(minutes=30, units=5, folds=3, repeats=3, sample=20, lengths=(30, 60, 120, 240))
-QUICK = Size(minutes=6, units=1, folds=1, repeats=1, sample=2, lengths=(6, 9))
+QUICK = Size(minutes=8, units=1, folds=1, repeats=1, sample=2, lengths=(8, 12))
 
 
 @dataclass(frozen=True)
@@ -335,7 +335,8 @@ def measure_growth(table: Table, session: Session, size: Size) -> None:
 
 
 def _shard_peak(answers, size: Size) -> None:
-    import odograph.steps.source  # noqa: F401  what a job reads its units with is in memory too
+    import pandas  # noqa: F401  what a job reads its inputs with is in its memory too
+    import pynwb  # noqa: F401
 
     long = make_session(size.lengths[-1], size.units)
     for spikes in long.spikes:
