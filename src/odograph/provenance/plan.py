@@ -222,7 +222,7 @@ def _refresh(
         "study": _write_study(rows, entries, shards),
     }
     write_if_changed(PLAN / "cache.json", json.dumps(fresh, sort_keys=True))
-    _tell_unreadable(entries)
+    _tell_unreadable(entries, study.on_bad_session)
     return fresh
 
 
@@ -322,10 +322,20 @@ def _write_study(
     return {"population": digest_text(text)}
 
 
-def _tell_unreadable(entries: Mapping[str, Mapping[str, Any]]) -> None:
+def _tell_unreadable(entries: Mapping[str, Mapping[str, Any]], on_bad_session: str) -> None:
+    """Name the recordings that cannot be used; when the study says `stop`, that ends the planning."""
     bad = {session: entry["error"] for session, entry in entries.items() if entry["error"] is not None}
+    told = []
     for session, finding in sorted(bad.items())[:5]:
         where = f"{finding['file']}: " if finding.get("file") else ""
-        print(f"odograph: session {session} cannot be used: {where}{finding['found']}", file=sys.stderr)
+        told.append(f"session {session} cannot be used: {where}{finding['found']}")
     if len(bad) > 5:
-        print(f"odograph: ... and {len(bad) - 5} more of {len(entries)} sessions", file=sys.stderr)
+        told.append(f"and {len(bad) - 5} more of {len(entries)} sessions")
+    if bad and on_bad_session == "stop":
+        raise InputError(
+            "; ".join(told),
+            expected="recordings that can be used, since study.on_bad_session is stop",
+            remedy="mend them, take them out of the sessions table, or set study.on_bad_session to leave_out",
+        )
+    for line in told:
+        print(f"odograph: {line}", file=sys.stderr)
