@@ -79,6 +79,8 @@ def _refit(
     """Fit units; each goes into the store as soon as it is done, so a job that dies loses one fit at most."""
     if not sources:
         return {}
+    from numpy.linalg import LinAlgError
+
     from odograph.encoding.analyse import analyse_unit, prepare_session
     from odograph.settings.encoding import EncodingSettings
     from odograph.steps.source import read_units
@@ -96,7 +98,13 @@ def _refit(
         return {unit: _failed_fit(str(error), settings) for unit in sources}
     fits = {}
     for done, unit in enumerate(recording.units, start=1):
-        result = analyse_unit(design, unit.spike_times_s, unit.observed_s, settings)
+        try:
+            result = analyse_unit(design, unit.spike_times_s, unit.observed_s, settings)
+        except (ArithmeticError, LinAlgError) as error:
+            # One unit that defeats the arithmetic is shown as failed; it must not take the study down.
+            logger.warning("%s: unit %s cannot be fitted", step.name, unit.unit_id, exc_info=True)
+            fits[unit.unit_id] = _failed_fit(f"{type(error).__name__}: {error}", settings)
+            continue
         fit = StoredFit(result.row, result.scores, result.curves)
         fits[unit.unit_id] = store.save(sources[unit.unit_id].key, fit)
         status = result.row["status"]
@@ -107,18 +115,26 @@ def _refit(
 
 
 def _failed_fit(reason: str, settings: EncodingSettings) -> StoredFit:
-    """A unit whose session has behaviour that no model can be built on: shown as failed, with the reason."""
-    terms = {f"encodes_{term.name}": False for term in settings.terms}
-    row = {
+    """A unit that could not be analysed at all: shown as failed, with the reason."""
+    row: dict[str, Any] = {
         "n_spikes": 0,
         "mean_rate_hz": math.nan,
         "status": "failed",
         "status_reason": " ".join(reason.split()),
         "selected_model": "",
         "best_model": "",
+        "selected_bits_per_spike": math.nan,
+        "selected_deviance_explained": math.nan,
         "speed_shape": "",
+        "speed_shape_probability": math.nan,
     }
-    return StoredFit(row | terms, [], {})
+    for term in settings.terms:
+        row[f"encodes_{term.name}"] = False
+        missing = ["p", "information_bits_per_spike"]
+        if term.kind in ("plane", "circle"):
+            missing += ["information_slow_bits_per_spike", "information_fast_bits_per_spike"]
+        row |= {f"{term.name}_{name}": math.nan for name in missing}
+    return StoredFit(row, [], {})
 
 
 def _account(missing: list[int], why: dict[int, str], total: int) -> str:
