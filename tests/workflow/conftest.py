@@ -2,7 +2,6 @@
 
 import json
 import os
-import re
 import shutil
 import subprocess
 import sys
@@ -157,8 +156,3 @@ def study(finished, tmp_path) -> Study:
     """A copy of the finished study, to change and run again."""
     shutil.copytree(finished.folder, tmp_path / "copy")
     return Study(tmp_path / "copy")
-
-
-def summary_of(text: str) -> str:
-    """What snakemake printed, on one line."""
-    return re.sub(r"\s+", " ", text)

@@ -4,7 +4,6 @@ import os
 import shutil
 
 import pyarrow.parquet as pq
-import pytest
 
 SHARDS = (0, 1)
 READABLE = ("alpha", "beta", "jump")
@@ -59,55 +58,45 @@ def test_nothing_runs_when_files_were_touched_moved_or_commented(study):
 
 
 def test_a_second_sorting_refits_only_the_units_that_changed(study):
-    first = {path: path.read_bytes() for path in study.results.glob("sessions/*/sync/*")}
-    units_before = {
-        row["unit"]: row["fit_key"]
-        for row in pq.read_table(study.results / "population/units.parquet").to_pylist()
-        if row["session"] == "alpha"
-    }
-    shutil.copyfile(
-        study.folder / "recordings" / "bracken_1_resorted.nwb", study.folder / "recordings" / "bracken_1.nwb"
-    )
+    recordings, cards = study.folder / "recordings", study.results / "sessions/alpha/cards"
+    synchronised = {path: path.read_bytes() for path in study.results.glob("sessions/*/sync/*")}
+    before = fit_keys(study)
+    shutil.copyfile(recordings / "bracken_1_resorted.nwb", recordings / "bracken_1.nwb")
     outcome = study.run()
-    units_now = {
-        row["unit"]: row["fit_key"]
-        for row in pq.read_table(study.results / "population/units.parquet").to_pylist()
-        if row["session"] == "alpha"
-    }
+    now = fit_keys(study)
     # Two units became one and one became two, under new numbers; one kept its number and lost some spikes.
-    gone, new = set(units_before) - set(units_now), set(units_now) - set(units_before)
-    changed = {unit for unit in set(units_before) & set(units_now) if units_before[unit] != units_now[unit]}
+    gone, new = set(before) - set(now), set(now) - set(before)
+    changed = {unit for unit in set(before) & set(now) if before[unit] != now[unit]}
     assert (len(gone), len(new), len(changed)) == (3, 3, 1)
 
-    refitted = study.refitted()["alpha"]
-    touched = {job for job in outcome.jobs if job.startswith("encoding")}
-    shards = {unit: shard_of_unit(study, unit) for unit in units_now}
-    assert {unit: why for unit, why in refitted.items() if f"encoding alpha {shards[unit]}" in touched} == (
-        dict.fromkeys(new, "new unit") | dict.fromkeys(changed, "spikes changed")
-    )
-    assert outcome.jobs - fits_and_cards("alpha") == ENDS | {"intake alpha", "session_quality alpha"}
-    assert {job.replace("cards", "encoding") for job in outcome.jobs if job.startswith("cards")} == touched
-    assert {path: path.read_bytes() for path in first} == first
-    assert "spikes changed" in outcome.text
-    for unit in gone:
-        assert not (study.results / f"sessions/alpha/cards/unit-{unit}.png").exists()
-    for unit in new:
-        assert (study.results / f"sessions/alpha/cards/unit-{unit}.png").exists()
-    # The sorting undone: the old fits are still in the store.
-    shutil.copyfile(
-        study.folder / "recordings" / "bracken_1_first.nwb", study.folder / "recordings" / "bracken_1.nwb"
-    )
-    study.run()
-    assert not any(
-        study.refitted().get("alpha", {}).get(unit) in ("new unit", "spikes changed")
-        for unit in changed | gone
-    )
-    units_after = {
-        row["unit"]: row["fit_key"]
-        for row in pq.read_table(study.results / "population/units.parquet").to_pylist()
-        if row["session"] == "alpha"
+    ran = {job for job in outcome.jobs if job.startswith("encoding")}
+    refitted = {
+        unit: why
+        for unit, why in study.refitted()["alpha"].items()
+        if f"encoding alpha {shard_of_unit(study, unit)}" in ran
     }
-    assert units_after == units_before
+    assert refitted == dict.fromkeys(new, "new unit") | dict.fromkeys(changed, "spikes changed")
+    assert "spikes changed" in outcome.text
+    assert outcome.jobs - fits_and_cards("alpha") == ENDS | {"intake alpha", "session_quality alpha"}
+    assert {job.replace("cards", "encoding") for job in outcome.jobs if job.startswith("cards")} == ran
+    assert {path: path.read_bytes() for path in synchronised} == synchronised
+    assert {path.name for path in cards.glob("unit-*")} == {f"unit-{unit}.png" for unit in now}
+
+    # The first sorting again: its fits are still in the store.
+    shutil.copyfile(recordings / "bracken_1_first.nwb", recordings / "bracken_1.nwb")
+    outcome = study.run("results/population/units.parquet")
+    assert fit_keys(study) == before
+    again = {job for job in outcome.jobs if job.startswith("encoding")}
+    assert again == ran
+    assert not any(
+        f"encoding alpha {shard_of_unit(study, unit)}" in again for unit in study.refitted().get("alpha", {})
+    )
+
+
+def fit_keys(study):
+    """The key of the fit of each unit of alpha."""
+    rows = pq.read_table(study.results / "population/units.parquet").to_pylist()
+    return {row["unit"]: row["fit_key"] for row in rows if row["session"] == "alpha"}
 
 
 def shard_of_unit(study, unit):
@@ -154,13 +143,12 @@ def test_a_session_s_own_setting_makes_that_session_and_the_population(study):
     assert study.record("sessions/alpha/behaviour/record.json")["settings"]["behaviour"]["max_gap_s"] == 0.1
 
 
-@pytest.mark.parametrize("name", ["gamma"])
-def test_a_session_added_makes_it_and_the_population_and_one_removed_the_population(study, name):
-    study.sessions[name] = {"nwb": "recordings/teasel_1.nwb", "animal": "renamed"}
-    assert study.run().jobs == whole_session(name) | ENDS
+def test_a_session_added_makes_it_and_the_population_and_one_removed_the_population(study):
+    study.sessions["gamma"] = {"nwb": "recordings/teasel_1.nwb", "animal": "renamed"}
+    assert study.run().jobs == whole_session("gamma") | ENDS
     sessions = pq.read_table(study.results / "population/sessions.parquet").to_pylist()
-    assert {row["session"]: row["animal"] for row in sessions}[name] == "renamed"
-    del study.sessions[name]
+    assert {row["session"]: row["animal"] for row in sessions}["gamma"] == "renamed"
+    del study.sessions["gamma"]
     assert study.run().jobs == ENDS
 
 

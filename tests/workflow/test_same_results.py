@@ -9,6 +9,8 @@ import time
 
 import pytest
 
+UP_TO = "results/population/units.parquet"
+
 
 @pytest.fixture(scope="module")
 def killed(finished, tmp_path_factory):
@@ -19,7 +21,7 @@ def killed(finished, tmp_path_factory):
     study.settings["study"]["shards_per_session"] = 3
     study.write_tables()
     run = subprocess.Popen(
-        study.command(cores=1),
+        study.command(UP_TO, cores=1),
         cwd=study.folder,
         env=study.environment(),
         stdout=subprocess.DEVNULL,
@@ -35,7 +37,7 @@ def killed(finished, tmp_path_factory):
         run.wait()
     study.kept = store_of(study)
     study.run("--unlock", cores=1)
-    study.last = study.run(cores=1)
+    study.last = study.run(UP_TO, cores=1)
     return study
 
 

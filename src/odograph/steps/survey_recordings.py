@@ -8,6 +8,7 @@ from __future__ import annotations
 import json
 import sys
 from collections.abc import Mapping
+from pathlib import Path
 from typing import Any
 
 from odograph.errors import OdographError
@@ -34,7 +35,7 @@ def survey_recording(session: str, nwb: str, settings: IntakeSettings) -> dict[s
     -------
     dict
         ``inventory`` (digest), ``signals`` and ``units`` (digests by name), ``links`` (paths of other files
-        that were read); or ``error`` (a finding) and ``settled``, whether reading again would end the same.
+        that it links to); or ``error`` (a finding) and ``settled``, whether reading again would end the same.
     """
     try:
         recording = read_recording(nwb, settings)
@@ -47,8 +48,42 @@ def survey_recording(session: str, nwb: str, settings: IntakeSettings) -> dict[s
         "inventory": inventory_digest(document),
         "signals": signal_digests(recording),
         "units": {str(unit): digest for unit, digest in unit_digests(recording).items()},
-        "links": [],
+        "links": linked_files(nwb),
     }
+
+
+def linked_files(nwb: str) -> list[str]:
+    """Other files that a recording links to: the planning must look at their time stamps too.
+
+    Parameters
+    ----------
+    nwb : str
+        Path of an HDF5 file that can be read.
+
+    Returns
+    -------
+    list of str
+        Sorted paths, relative to the folder of the file that names them.
+    """
+    import h5py
+
+    found: set[str] = set()
+    seen: set[tuple[int, int]] = set()
+
+    def walk(group: h5py.Group) -> None:
+        for name in group:
+            link = group.get(name, getlink=True)
+            if isinstance(link, h5py.ExternalLink):
+                found.add((Path(group.file.filename).parent / link.filename).as_posix())
+            if isinstance(child := group.get(name), h5py.Group):
+                info = h5py.h5o.get_info(child.id)
+                if (info.fileno, info.addr) not in seen:
+                    seen.add((info.fileno, info.addr))
+                    walk(child)
+
+    with h5py.File(nwb, "r") as file:
+        walk(file)
+    return sorted(found)
 
 
 def inventory_digest(document: Mapping[str, Any]) -> str:
