@@ -140,7 +140,7 @@ def p_of(design, counts, term, plan, *, by_fft=True):
     space = workspace(design, ())
     null = null_model(space, fit_whole(space, design, unit), design, unit, plan)
     spectrum = transform_covariate(term, plan) if by_fft else None
-    return shift_test(term, np.ones(1), null, plan, spectrum, plan.at_steps(bin_cells(space, design)))
+    return shift_test(term, null, plan, spectrum, plan.at_steps(bin_cells(space, design)))
 
 
 def test_all_shifts_by_fft_and_one_by_one_agree(design):

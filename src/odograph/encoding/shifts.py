@@ -9,10 +9,11 @@ are computed with the term's covariate turned circularly against spikes and the 
 step that undoes most of the penalty's pull on the null model (c is small), whose bias would otherwise look
 like tuning to anything correlated with the other terms; V accounts for what they have already explained,
 which at the true alignment is more than at any other. The statistic is a sum of squares of U standardised by
-its own V, weighted towards smooth curves alike for all shifts. Shifting keeps every signal's own
-autocorrelation, which is what makes ordinary tests of tuning too liberal for neurons that drift or burst; p
-is the rank of the true alignment, (1 + exceedances) / (1 + shifts) (Davison & Hinkley 1997, Bootstrap Methods
-and their Application, section 4.2).
+its own V, weighted towards smooth curves; of a few degrees of smoothness, set beforehand, the one that stands
+out most counts, alike for all shifts (strengths fitted at the true alignment would favour it). Shifting keeps
+every signal's own autocorrelation, which is what makes ordinary tests of tuning too liberal for neurons that
+drift or burst; p is the rank of the true alignment, (1 + exceedances) / (1 + shifts) (Davison & Hinkley 1997,
+Bootstrap Methods and their Application, section 4.2).
 
 The sequence of valid time is what is turned, so masked time has no part in it. Shifts go in steps of a few
 bins, over which residuals are summed; where it is affordable U is had for all admissible shifts at once as a
@@ -38,6 +39,7 @@ from odograph.encoding.terms import Term
 FFT_LIMIT = 4_000_000  # numbers in a term's transformed basis: about 60 MB
 UNDERSMOOTHING = 0.05
 VARIANCE_SHIFTS = 16
+SMOOTHNESS = (0.06, 0.25, 0.8)
 
 
 @dataclass(frozen=True)
@@ -216,12 +218,7 @@ def score_variance(term: Term, null: NullModel, plan: ShiftPlan, cells: np.ndarr
 
 
 def shift_test(
-    term: Term,
-    strengths: np.ndarray,
-    null: NullModel,
-    plan: ShiftPlan,
-    spectrum: np.ndarray | None,
-    cells: np.ndarray,
+    term: Term, null: NullModel, plan: ShiftPlan, spectrum: np.ndarray | None, cells: np.ndarray
 ) -> tuple[float, int]:
     """p of a term given the model of all other terms.
 
@@ -229,8 +226,6 @@ def shift_test(
     ----------
     term : Term
         The tested term.
-    strengths : ndarray, (n_penalties,)
-        Its smoothing strengths in the model that has it.
     null : NullModel
     plan : ShiftPlan
     spectrum : ndarray or None
@@ -247,35 +242,57 @@ def shift_test(
     """
     if not len(plan.shifts):
         return float("nan"), 0
-    at_truth, away = _standardisers(term, strengths, null, plan, cells)
+    at_truth, away, weights = _standardisers(term, null, plan, cells)
     shifts = plan.shifts if spectrum is not None else plan.drawn
     if spectrum is not None:
         turned = fft.irfft(np.conj(fft.rfft(null.residual)) * spectrum, n=plan.n_steps, axis=1)
-        truth, sums = turned[:, 0], turned[:, shifts]
+        truth, sums = turned[:, :1], turned[:, shifts]
     else:
         per_cell = np.empty((len(shifts) + 1, term.n_cells))
         for row, shift in enumerate(np.append(0, shifts)):
             shifted_cell_sums(plan.cells(term), null.residual, int(shift), per_cell[row])
         sums = (per_cell @ (term.basis.dense() @ term.coordinates.matrix())).T
-        truth, sums = sums[:, 0], sums[:, 1:]
-    statistic = np.sum((away @ sums) ** 2, axis=0)
+        truth, sums = sums[:, :1], sums[:, 1:]
+    statistic = _largest(weights @ np.hstack([at_truth @ truth, away @ sums]) ** 2)
     # Rounding must not decide ties, which occur where a covariate repeats itself.
-    exceed = int(np.sum(statistic >= np.sum((at_truth @ truth) ** 2) * (1 - 1e-9)))
+    exceed = int(np.sum(statistic[1:] >= statistic[0] - 1e-9 * abs(statistic[0])))
     return (1 + exceed) / (1 + len(shifts)), len(shifts)
 
 
+def _largest(sums: np.ndarray) -> np.ndarray:
+    """Over degrees of smoothness, the largest of each alignment's sums in standard deviations."""
+    centre, spread = sums.mean(axis=1, keepdims=True), sums.std(axis=1, keepdims=True)
+    return np.max((sums - centre) / np.maximum(spread, 1e-300), axis=0)
+
+
 def _standardisers(
-    term: Term, strengths: np.ndarray, null: NullModel, plan: ShiftPlan, cells: np.ndarray
-) -> tuple[np.ndarray, np.ndarray]:
-    """Matrices that turn U into the terms of the statistic's sum: at the true alignment, and away from it."""
+    term: Term, null: NullModel, plan: ShiftPlan, cells: np.ndarray
+) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Matrices that standardise U at the true alignment and away from it, and weights of its squares.
+
+    Both lead to coordinates in which U has unit variance and roughness is diagonal; weights, (n_degrees,
+    n_coordinates), make sums with SMOOTHNESS times the coordinates as effective degrees of freedom.
+    """
     drawn = plan.drawn[np.linspace(0, len(plan.drawn) - 1, min(VARIANCE_SHIFTS, len(plan.drawn))).astype(int)]
     away = np.mean([score_variance(term, null, plan, cells, int(shift)) for shift in drawn], axis=0)
     away[np.diag_indices_from(away)] += 1e-8 * np.trace(away) / len(away)
     # Where the other terms determine the covariate, what is left to standardise by is kept from vanishing.
     truth = score_variance(term, null, plan, cells, 0) + 1e-3 * away
-    smooth = away.copy()
-    smooth[np.diag_indices_from(smooth)] += strengths @ term.coordinates.spectra
-    weight = linalg.solve_triangular(linalg.cholesky(smooth, lower=True), np.eye(len(smooth)), lower=True)
-    root = linalg.cholesky(away, lower=True)
+    roughness = term.coordinates.spectra.sum(axis=0)
+    stiff, vectors = linalg.eigh(np.diag(roughness), away)
+    stiff = np.maximum(stiff, 0)
+    weights = np.array([1 / (1 + _strength(stiff, share * len(stiff)) * stiff) for share in SMOOTHNESS])
     inverse = linalg.solve_triangular(linalg.cholesky(truth, lower=True), np.eye(len(truth)), lower=True)
-    return weight @ root @ inverse, weight
+    return vectors.T @ linalg.cholesky(away, lower=True) @ inverse, vectors.T, weights
+
+
+def _strength(stiff: np.ndarray, freedom: float) -> float:
+    """The strength at which sum 1 / (1 + strength * stiff) is `freedom`, or as near as it can be."""
+    free = np.sum(stiff <= 1e-12 * stiff.max())
+    if freedom <= free + 0.1:
+        freedom = free + 0.1 * (len(stiff) - free)
+    low, high = -60.0, 60.0
+    for _ in range(60):
+        middle = (low + high) / 2
+        low, high = (middle, high) if np.sum(1 / (1 + np.exp(middle) * stiff)) > freedom else (low, middle)
+    return float(np.exp(middle))

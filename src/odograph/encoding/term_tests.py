@@ -2,13 +2,8 @@
 
 from __future__ import annotations
 
-from itertools import pairwise
-
-import numpy as np
-
 from odograph.encoding.design import SessionDesign
 from odograph.encoding.fit import Fit
-from odograph.encoding.layout import Workspace
 from odograph.encoding.shared import covariate_spectrum, shift_plan, workspace
 from odograph.encoding.shifts import bin_cells, null_model, shift_test
 from odograph.encoding.spikes import UnitSpikes
@@ -24,10 +19,9 @@ def term_tests(
     design : SessionDesign
     unit : UnitSpikes
     fits : dict of Fit
-        The fits to all time of the full model and of every model that lacks one term.
+        The fits to all time of every model that lacks one term.
     """
     names, plan = tuple(term.name for term in design.terms), shift_plan(design)
-    strengths = strengths_by_term(workspace(design, names), fits[names])
     out = {}
     for term in design.terms:
         others = tuple(name for name in names if name != term.name)
@@ -35,12 +29,5 @@ def term_tests(
         null = null_model(space, fits[others], design, unit, plan)
         cells = plan.at_steps(bin_cells(space, design))
         spectrum = covariate_spectrum(design, term.name)
-        out[term.name] = shift_test(term, strengths[term.name], null, plan, spectrum, cells)
+        out[term.name] = shift_test(term, null, plan, spectrum, cells)
     return out
-
-
-def strengths_by_term(space: Workspace, fit: Fit) -> dict[str, np.ndarray]:
-    """A fit's smoothing strengths for each of its terms."""
-    bounds = np.cumsum([0, *(len(term.coordinates.spectra) for term in space.terms)])
-    strengths = np.exp(fit.log_strengths)
-    return {term.name: strengths[a:b] for term, (a, b) in zip(space.terms, pairwise(bounds), strict=True)}
