@@ -275,15 +275,26 @@ def _standardisers(
     """
     drawn = plan.drawn[np.linspace(0, len(plan.drawn) - 1, min(VARIANCE_SHIFTS, len(plan.drawn))).astype(int)]
     away = np.mean([score_variance(term, null, plan, cells, int(shift)) for shift in drawn], axis=0)
-    away[np.diag_indices_from(away)] += 1e-8 * np.trace(away) / len(away)
+    away = _floored(away)
     # Where the other terms determine the covariate, what is left to standardise by is kept from vanishing.
-    truth = score_variance(term, null, plan, cells, 0) + 1e-3 * away
+    truth = _floored(score_variance(term, null, plan, cells, 0)) + 1e-3 * away
     roughness = term.coordinates.spectra.sum(axis=0)
     stiff, vectors = linalg.eigh(np.diag(roughness), away)
     stiff = np.maximum(stiff, 0)
     weights = np.array([1 / (1 + _strength(stiff, share * len(stiff)) * stiff) for share in SMOOTHNESS])
     inverse = linalg.solve_triangular(linalg.cholesky(truth, lower=True), np.eye(len(truth)), lower=True)
     return vectors.T @ linalg.cholesky(away, lower=True) @ inverse, vectors.T, weights
+
+
+def _floored(variance: np.ndarray) -> np.ndarray:
+    """A variance whose eigenvalues are at least a thousandth of their mean.
+
+    Directions that the data do not inform (splines never visited, the constant of a category's levels) have
+    none, up to rounding of either sign; U is as good as zero there, and stays so.
+    """
+    values, vectors = np.linalg.eigh((variance + variance.T) / 2)
+    lowest = 1e-3 * max(values.mean(), 1e-12)
+    return (vectors * np.maximum(values, lowest)) @ vectors.T
 
 
 def _strength(stiff: np.ndarray, freedom: float) -> float:

@@ -18,6 +18,7 @@ else, U and V computed anew for every shift.
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass
 
 import numpy as np
@@ -29,13 +30,14 @@ from odograph.encoding.design import SessionDesign
 from odograph.encoding.fit import Fit
 from odograph.encoding.layout import Workspace
 from odograph.encoding.shifts import ShiftPlan, null_model
-from odograph.encoding.smoothing import Quadratic, factorise, tune
+from odograph.encoding.smoothing import Quadratic, tune
 from odograph.encoding.spikes import UnitSpikes
 from odograph.encoding.terms import Term
 
 SPEED_SCALE_CM_S = 5.0
 LARGEST_GAIN = 3.0
 STRENGTH_ROUNDS = 2
+COORDINATES_AT_ONCE = 8  # in the gain test's cross-correlations, to bound its memory
 
 
 @dataclass(frozen=True)
@@ -81,19 +83,21 @@ def modulation(speed_cm_s: np.ndarray) -> np.ndarray:
     return (z - z.mean()) / z.std()
 
 
-def scaled_terms(space: Workspace) -> list[int]:
-    """Places in the table of the terms whose tuning may be scaled by speed: planes and circles."""
-    return [t for t, term in enumerate(space.terms) if term.kind in ("plane", "circle")]
+def scaled_terms(space: Workspace, names: tuple[str, ...]) -> list[int]:
+    """Places in the table of the terms whose tuning is scaled by speed."""
+    return [t for t, term in enumerate(space.terms) if term.name in names]
 
 
 class _Joint:
     """The speed-gain model of one session's full model on its collapsed rows."""
 
-    def __init__(self, space: Workspace, speed_term: int, z_cell: np.ndarray, fit: Fit) -> None:
+    def __init__(
+        self, space: Workspace, names: tuple[str, ...], speed_term: int, z_cell: np.ndarray, fit: Fit
+    ) -> None:
         self.space, self.lay = space, space.layout
         self.cells = self.lay.table.cells
         self.z = z_cell[self.cells[speed_term]]
-        self.scaled = scaled_terms(space)
+        self.scaled = scaled_terms(space, names)
         self.log_strengths = fit.log_strengths
 
     @property
@@ -178,7 +182,13 @@ class _Joint:
 
 
 def fit_gains(
-    space: Workspace, design: SessionDesign, unit: UnitSpikes, fit: Fit, speed_name: str, z: np.ndarray
+    space: Workspace,
+    design: SessionDesign,
+    unit: UnitSpikes,
+    fit: Fit,
+    names: tuple[str, ...],
+    speed_name: str,
+    z: np.ndarray,
 ) -> GainFit:
     """Fit the speed-gain model jointly, from the additive fit of the full model.
 
@@ -188,6 +198,9 @@ def fit_gains(
         Of the full model.
     fit : Fit
         The additive fit: the start, and the smoothing strengths that are kept.
+    names : tuple of str
+        The planes and circles whose tuning is scaled. A term that the unit does not encode has no gain: there
+        is nothing to scale.
     speed_name : str
         The term whose cells carry z.
     z : ndarray, (n_bins,)
@@ -197,7 +210,7 @@ def fit_gains(
     term = space.terms[speed_term]
     seconds = np.bincount(term.cell, minlength=term.n_cells)
     z_cell = np.bincount(term.cell, weights=z, minlength=term.n_cells) / np.maximum(seconds, 1)
-    joint = _Joint(space, speed_term, z_cell, fit)
+    joint = _Joint(space, names, speed_term, z_cell, fit)
     spike_cells = np.array([t.cell[unit.bins] for t in space.terms])
     spikes = joint.spikes(spike_cells, z_cell[spike_cells[speed_term]])
     beta, gains = fit.coefficients.copy(), np.zeros(len(joint.scaled))
@@ -281,12 +294,9 @@ def _choose_strengths(joint: _Joint, beta: np.ndarray, gains: np.ndarray, spikes
 
 
 def _inverse(hessian: np.ndarray) -> np.ndarray:
-    """Inverse of the negative Hessian; where it is not positive definite, its positive part's."""
-    try:
-        return factorise(hessian)[1]
-    except FloatingPointError:
-        values, vectors = np.linalg.eigh(hessian)
-        return (vectors / np.maximum(np.abs(values), 1e-6 * values.max())) @ vectors.T
+    """Inverse of the negative Hessian, its curvatures taken as positive, so that every step climbs."""
+    values, vectors = np.linalg.eigh(hessian)
+    return (vectors / np.maximum(np.abs(values), 1e-9 * values.max())) @ vectors.T
 
 
 def gain_test(
@@ -320,18 +330,19 @@ def gain_test(
 
     score = against(e * effect, 0)
     variance = against(w * effect**2, 1)
-    crossed = against(_step_design(space, plan) * (w * effect), 0)
+    crossed = np.concatenate([against(rows * (w * effect), 0) for rows in _design_rows(space, plan)])
     variance = variance - np.sum(crossed * (null.inverse @ crossed), axis=0)
     statistic = np.abs(score) / np.sqrt(np.maximum(variance, 1e-12 * np.abs(variance).max() + 1e-300))
     return float((1 + np.sum(statistic[1:] >= statistic[0] * (1 - 1e-9))) / len(shifts))
 
 
-def _step_design(space: Workspace, plan: ShiftPlan) -> np.ndarray:
-    """The full model's design matrix over steps, (n_coordinates, n_steps)."""
-    rows = [np.ones((1, plan.n_steps))]
+def _design_rows(space: Workspace, plan: ShiftPlan) -> Iterator[np.ndarray]:
+    """The full model's design matrix over steps, a few coordinates at a time, each (k, n_steps)."""
+    yield np.ones((1, plan.n_steps))
     for term in space.terms:
-        rows.append((term.basis.dense() @ term.coordinates.matrix())[plan.cells(term)].T)
-    return np.concatenate(rows)
+        basis = (term.basis.dense() @ term.coordinates.matrix()).T
+        for first in range(0, len(basis), COORDINATES_AT_ONCE):
+            yield basis[first : first + COORDINATES_AT_ONCE][:, plan.cells(term)]
 
 
 def describe_gains(

@@ -64,10 +64,15 @@ def read_arena(opened: OpenRecording, settings: IntakeSettings) -> Arena | None:
             )
         place = chosen
         table = opened.places[place]
-        corners = np.stack(
-            [opened.array(table[name].data, f"{place}/{name}").astype(np.float64) for name in ("x_m", "y_m")],
-            axis=1,
-        )
+        x, y = (opened.numbers(table[name].data, f"{place}/{name}") for name in ("x_m", "y_m"))
+        if x.ndim != 1 or x.shape != y.shape:
+            raise opened.refuse(
+                f"columns x_m and y_m of shapes {x.shape} and {y.shape}",
+                place=place,
+                expected="one number in each column for each corner",
+                remedy="correct the table, or set intake.arena_corners_m",
+            )
+        corners = np.stack([x, y], axis=1)
     check_finite(opened, corners, place, "corners")
     if len(corners) > 3 and np.array_equal(corners[0], corners[-1]):
         corners = corners[:-1]
@@ -121,9 +126,15 @@ def read_invalid_times(opened: OpenRecording) -> Intervals | None:
         return None
     place = "intervals/invalid_times"
     start, stop = (
-        opened.array(table[name].data, f"{place}/{name}").astype(np.float64)
-        for name in ("start_time", "stop_time")
+        opened.numbers(table[name].data, f"{place}/{name}") for name in ("start_time", "stop_time")
     )
+    if start.ndim != 1 or start.shape != stop.shape:
+        raise opened.refuse(
+            f"columns start_time and stop_time of shapes {start.shape} and {stop.shape}",
+            place=place,
+            expected="one number in each column for each interval",
+            remedy="correct the table of invalid times",
+        )
     check_finite(opened, start, f"{place}/start_time", "times")
     check_finite(opened, stop, f"{place}/stop_time", "times")
     back = np.flatnonzero(stop < start)

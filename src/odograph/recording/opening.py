@@ -48,10 +48,12 @@ class OpenRecording:
         """Add a finding (`warn` or `note`)."""
         self.findings.append(finding(level, found, **facts))
 
-    def array(self, data: Any, place: str) -> np.ndarray:
-        """Read a data set whole; a damaged one is refused."""
+    def array(self, data: Any, place: str, part: slice | None = None) -> np.ndarray:
+        """Read a data set, whole or in part; a damaged one is refused."""
         try:
-            return np.asarray(data[()] if hasattr(data, "shape") and hasattr(data, "id") else data[:])
+            if part is None:
+                part = slice(None) if np.ndim(data) else ()
+            return np.asarray(data[part])
         except (OSError, RuntimeError) as error:
             raise self.refuse(
                 f"the data cannot be read ({_first_line(error)})",
@@ -59,6 +61,18 @@ class OpenRecording:
                 expected="data that are whole",
                 remedy="copy the file anew from its source; this copy is damaged",
             ) from error
+
+    def numbers(self, data: Any, place: str, part: slice | None = None) -> np.ndarray:
+        """Read a data set of numbers as float64; one of another type is refused."""
+        stored = self.array(data, place, part)
+        if stored.dtype.kind not in "fiub":
+            raise self.refuse(
+                f"data of type {stored.dtype}",
+                place=place,
+                expected="numbers",
+                remedy="check the place in the settings of intake, or write the data anew as numbers",
+            )
+        return stored.astype(np.float64)
 
     def resolve(self, place: str) -> str | None:
         """Turn a place given by the user into a place of the file; None when nothing is there."""
@@ -101,10 +115,10 @@ def open_recording(path: str | Path, settings: IntakeSettings) -> Iterator[OpenR
     pynwb = _import_pynwb()
     with warnings.catch_warnings():
         warnings.simplefilter("ignore")
-        io, nwbfile = _read(pynwb, path, links)
+        io, nwbfile, places, aliases = _read(pynwb, path, links)
         try:
             lost = tuple(link.place for link in links.missing)
-            opened = OpenRecording(path, nwbfile, facts, *_places(io, nwbfile), lost)
+            opened = OpenRecording(path, nwbfile, facts, places, aliases, lost)
             for link in links.missing:
                 opened.note(
                     "warn",
@@ -238,11 +252,12 @@ def _check_links(path: Path, settings: IntakeSettings) -> Links:
     return links
 
 
-def _read(pynwb: Any, path: Path, links: Links) -> tuple[Any, Any]:
+def _read(pynwb: Any, path: Path, links: Links) -> tuple[Any, Any, dict[str, Any], dict[str, str]]:
     io = None
     try:
         io = pynwb.NWBHDF5IO(path, "r", load_namespaces=True)
-        return io, io.read()
+        nwbfile = io.read()
+        return io, nwbfile, *_places(io, nwbfile)
     except Exception as error:
         # pynwb and hdmf raise many kinds for a malformed file, down to KeyError and TypeError.
         if io is not None:

@@ -4,12 +4,12 @@ from __future__ import annotations
 
 from typing import Any
 
-import h5py
 import numpy as np
 
 from odograph.recording.choosing import choose, describe
 from odograph.recording.model import Pulses
 from odograph.recording.opening import OpenRecording
+from odograph.recording.ragged import row_ends
 from odograph.recording.series import check_finite, is_series, read_times
 from odograph.settings.intake import IntakeSettings
 
@@ -130,7 +130,7 @@ def _times_of(
     if getattr(thing, "colnames", None):
         return _times_of_table(opened, thing, place, column, settings)
     if _has_event_times(thing):
-        times = opened.array(thing.timestamps, f"{place}/timestamps")
+        times = opened.numbers(thing.timestamps, f"{place}/timestamps")
         return _with_label(opened, thing, times, place, settings)
     if is_series(thing):
         return _times_of_series(opened, thing, place, settings)
@@ -154,7 +154,7 @@ def _times_of_table(
             remedy=f"set intake.frame_pulses_place to {place}/COLUMN",
         )
     indexed = getattr(table[name], "target", None)
-    values = opened.array((indexed if indexed is not None else table[name]).data, f"{place}/{name}")
+    values = opened.numbers((indexed if indexed is not None else table[name]).data, f"{place}/{name}")
     wanted = settings.frame_pulses_label
     if wanted is not None:
         labels = next((known for known in LABEL_COLUMNS if known in table.colnames), None)
@@ -167,8 +167,7 @@ def _times_of_table(
             )
         chosen = np.array([str(label) == wanted for label in table[labels].data[:]], dtype=bool)
         if indexed is not None:
-            ends = opened.array(table[name].data, f"{place}/{name}").astype(np.int64)
-            chosen = np.repeat(chosen, np.diff(ends, prepend=0))
+            chosen = np.repeat(chosen, np.diff(row_ends(opened, table, place, name), prepend=0))
         values = values[chosen]
     return values
 
@@ -206,7 +205,7 @@ def _times_of_series(opened: OpenRecording, series: Any, place: str, settings: I
         return _with_label(opened, series, read_times(opened, series, place), place, settings)
     if series.timestamps is None:
         return _edges_of_line(opened, series, place, settings)
-    times = opened.array(series.timestamps, f"{place}/timestamps").astype(np.float64)
+    times = opened.numbers(series.timestamps, f"{place}/timestamps")
     if np.ndim(series.data) != 1 or np.shape(series.data)[0] != times.size:
         raise opened.refuse(
             f"data of shape {np.shape(series.data)} with {times.size} time stamps",
@@ -216,7 +215,7 @@ def _times_of_series(opened: OpenRecording, series: Any, place: str, settings: I
         )
     if settings.frame_pulses_label is not None:
         return _with_label(opened, series, times, place, settings)
-    values = opened.array(series.data, f"{place}/data").astype(np.float64)
+    values = opened.numbers(series.data, f"{place}/data")
     rising = settings.frame_pulses_edge == "rising"
     if isinstance(series, IntervalSeries):
         return times[values > 0 if rising else values < 0]
@@ -237,10 +236,12 @@ def _edges_of_line(opened: OpenRecording, series: Any, place: str, settings: Int
             expected="one line, shape (n,)",
             remedy="write the line of the camera alone, or its edges as a table of events",
         )
+
+    def read(start: int) -> np.ndarray:
+        return opened.numbers(data, f"{place}/data", slice(start, start + CHUNK_SAMPLES))
+
     pieces = range(0, len(data), CHUNK_SAMPLES)
-    extremes = [
-        (float(np.min(part)), float(np.max(part))) for part in map(_piece(opened, data, place), pieces)
-    ]
+    extremes = [(float(np.min(part)), float(np.max(part))) for part in map(read, pieces)]
     low, high = min(pair[0] for pair in extremes), max(pair[1] for pair in extremes)
     if not high > low:
         raise opened.refuse(
@@ -252,27 +253,12 @@ def _edges_of_line(opened: OpenRecording, series: Any, place: str, settings: Int
     rising = settings.frame_pulses_edge == "rising"
     found, before = [], None
     for start in pieces:
-        above = _piece(opened, data, place)(start) > (low + high) / 2
+        above = read(start) > (low + high) / 2
         # A line that starts in a pulse shows no edge there.
         edges = _edges(above, rising, before=bool(above[0]) if before is None else before)
         found.append(start + np.flatnonzero(edges))
         before = bool(above[-1])
     return float(series.starting_time or 0.0) + np.concatenate(found) / float(series.rate)
-
-
-def _piece(opened: OpenRecording, data: h5py.Dataset, place: str) -> Any:
-    def read(start: int) -> np.ndarray:
-        try:
-            return np.asarray(data[start : start + CHUNK_SAMPLES])
-        except (OSError, RuntimeError) as error:
-            raise opened.refuse(
-                f"the data cannot be read ({error})",
-                place=f"{place}/data",
-                expected="data that are whole",
-                remedy="copy the file anew from its source; this copy is damaged",
-            ) from error
-
-    return read
 
 
 def _edges(above: np.ndarray, rising: bool, *, before: bool) -> np.ndarray:

@@ -98,7 +98,7 @@ def _rate_hz(series: Any) -> float | None:
     if getattr(series, "rate", None):
         return float(series.rate)
     stamps = getattr(series, "timestamps", None)
-    if stamps is None or np.ndim(stamps) != 1 or len(stamps) < 2:
+    if stamps is None or np.ndim(stamps) != 1 or len(stamps) < 2 or stamps.dtype.kind not in "fiu":
         return None
     steps = np.diff(np.asarray(stamps[:STEPS_LOOKED_AT], dtype=np.float64))
     step = float(np.median(steps))

@@ -199,9 +199,9 @@ def _confidence(opened: OpenRecording, series: Any, place: str, time_s: np.ndarr
     data = getattr(series, "confidence", None)
     if data is None or np.ndim(data) == 0:
         return None
-    values = one_column(opened, opened.array(data, f"{place}/confidence"), place)
+    values = one_column(opened, opened.numbers(data, f"{place}/confidence"), place)
     check_length(opened, values, time_s, f"{place}/confidence")
-    return values.astype(np.float64)
+    return values
 
 
 def _check_extent(opened: OpenRecording, xy_m: np.ndarray, place: str) -> None:

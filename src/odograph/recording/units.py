@@ -6,12 +6,12 @@ from collections import Counter
 from collections.abc import Collection
 from typing import Any
 
-import h5py
 import numpy as np
 
 from odograph.recording.choosing import choose
 from odograph.recording.model import Scalar, Unit
 from odograph.recording.opening import OpenRecording
+from odograph.recording.ragged import read_ragged, row_ends
 from odograph.settings.intake import IntakeSettings, UnitCondition
 
 STRUCTURAL = ("spike_times", "obs_intervals", "electrodes", "electrode_group")
@@ -60,8 +60,7 @@ def read_units(
     rows = _rows(opened, table, place, wanted)
     columns = scalar_columns(opened, table, place)
     regions = _regions(opened, table, place, settings, columns)
-    spikes = _ragged(opened, table, place, "spike_times", list(rows.values()))
-    observed = _ragged(opened, table, place, "obs_intervals", list(rows.values()))
+    spikes, observed = _ragged_columns(opened, table, place, list(rows.values()))
     units = []
     for unit_id, row in sorted(rows.items()):
         attributes = {name: values[row] for name, values in columns.items()}
@@ -75,7 +74,15 @@ def read_units(
 
 
 def _rows(opened: OpenRecording, table: Any, place: str, wanted: Collection[int] | None) -> dict[int, int]:
-    ids = [int(value) for value in opened.array(table.id.data, f"{place}/id").ravel()]
+    stored = opened.array(table.id.data, f"{place}/id")
+    if stored.size and (stored.ndim != 1 or stored.dtype.kind not in "iu"):
+        raise opened.refuse(
+            f"ids of shape {stored.shape} and type {stored.dtype}",
+            place=f"{place}/id",
+            expected="whole numbers, one for each unit",
+            remedy="number the units anew",
+        )
+    ids = [int(value) for value in stored.ravel()]
     if not ids:
         raise opened.refuse(
             "the table of units is empty",
@@ -105,49 +112,20 @@ def _rows(opened: OpenRecording, table: Any, place: str, wanted: Collection[int]
     return {unit_id: rows[unit_id] for unit_id in wanted}
 
 
-def _ragged(
-    opened: OpenRecording, table: Any, place: str, name: str, rows: list[int]
-) -> dict[int, np.ndarray]:
-    """Entries of a ragged column for some rows; the column is read once when most rows are wanted."""
-    if name not in table.colnames:
-        if name == "spike_times":
-            raise opened.refuse(
-                f"the table of units has no spike times; its columns: {', '.join(table.colnames)}",
-                place=place,
-                expected="a column spike_times",
-                remedy="write the spike times of every unit, in seconds",
-            )
-        return {}
-    index = table[name]
-    data = index.target.data
-    ends = opened.array(index.data, f"{place}/{name}_index").astype(np.int64)
-    starts = np.concatenate([[0], ends[:-1]])
-    n_entries = len(data)
-    if np.any(ends < starts) or (ends.size and ends[-1] > n_entries) or ends.size != len(table.id):
+def _ragged_columns(
+    opened: OpenRecording, table: Any, place: str, rows: list[int]
+) -> tuple[dict[int, np.ndarray], dict[int, np.ndarray]]:
+    if "spike_times" not in table.colnames:
         raise opened.refuse(
-            f"the index of {name} does not fit: {ends.size} ends for {len(table.id)} units, the last "
-            f"{ends[-1] if ends.size else None} of {n_entries} entries",
-            place=f"{place}/{name}_index",
-            expected="one rising end for each unit",
-            remedy="write the table of units anew",
-        )
-    share = sum(int(ends[row] - starts[row]) for row in rows) / max(n_entries, 1)
-    if share > 0.3:
-        whole = opened.array(data, f"{place}/{name}")
-        return {row: whole[starts[row] : ends[row]] for row in rows}
-    return {row: _slice(opened, data, int(starts[row]), int(ends[row]), f"{place}/{name}") for row in rows}
-
-
-def _slice(opened: OpenRecording, data: h5py.Dataset, start: int, stop: int, place: str) -> np.ndarray:
-    try:
-        return np.asarray(data[start:stop])
-    except (OSError, RuntimeError) as error:
-        raise opened.refuse(
-            f"the data cannot be read ({error})",
+            f"the table of units has no spike times; its columns: {', '.join(table.colnames)}",
             place=place,
-            expected="data that are whole",
-            remedy="copy the file anew from its source; this copy is damaged",
-        ) from error
+            expected="a column spike_times",
+            remedy="write the spike times of every unit, in seconds",
+        )
+    spikes = read_ragged(opened, table, place, "spike_times", rows)
+    if "obs_intervals" not in table.colnames:
+        return spikes, {}
+    return spikes, read_ragged(opened, table, place, "obs_intervals", rows)
 
 
 def _spike_times(
@@ -237,11 +215,12 @@ def _sorted_times(
 def _observed(opened: OpenRecording, stored: np.ndarray | None, times: np.ndarray, place: str) -> np.ndarray:
     if stored is None or stored.size == 0:
         return np.empty((0, 2))
-    intervals = stored.astype(np.float64)
-    rows = intervals.reshape(-1) if intervals.ndim == 2 and intervals.shape[1] == 2 else None
-    if rows is None or not np.isfinite(rows).all() or np.any(np.diff(rows) < 0):
+    rows = stored.astype(np.float64).reshape(-1) if stored.dtype.kind in "fiu" else np.empty(0)
+    pairs = stored.ndim == 2 and stored.shape[1] == 2 and rows.size
+    if not pairs or not np.isfinite(rows).all() or np.any(np.diff(rows) < 0):
         raise opened.refuse(
-            f"observed intervals that are no rising list of (start, stop): shape {intervals.shape}",
+            f"observed intervals that are no rising list of (start, stop): shape {stored.shape}, "
+            f"type {stored.dtype}",
             place=f"{place}, obs_intervals",
             expected="seconds, shape (n, 2), in order and apart",
             remedy="correct the column obs_intervals",
@@ -257,7 +236,7 @@ def _observed(opened: OpenRecording, stored: np.ndarray | None, times: np.ndarra
             expected="spikes within obs_intervals",
             remedy="correct the column obs_intervals or the unit",
         )
-    return intervals
+    return rows.reshape(-1, 2)
 
 
 def scalar_columns(opened: OpenRecording, table: Any, place: str) -> dict[str, list[Scalar]]:
@@ -306,11 +285,18 @@ def _electrode_regions(opened: OpenRecording, table: Any, place: str) -> dict[in
     if electrodes is None or "location" not in electrodes.colnames:
         return {}
     locations = [str(_plain(value)) for value in electrodes["location"].data[:]]
-    numbers = opened.array(region.data, f"{place}/electrodes").astype(np.int64)
+    numbers = opened.array(region.data, f"{place}/electrodes")
+    if numbers.ndim != 1 or numbers.dtype.kind not in "iu":
+        raise opened.refuse(
+            f"electrodes of shape {numbers.shape} and type {numbers.dtype}",
+            place=f"{place}/electrodes",
+            expected="rows of the table of electrodes",
+            remedy="write the column anew, or set intake.region_column",
+        )
     if region is column:
         per_row = [[number] for number in numbers]
     else:
-        per_row = np.split(numbers, opened.array(column.data, f"{place}/electrodes_index").astype(int)[:-1])
+        per_row = np.split(numbers, row_ends(opened, table, place, "electrodes")[:-1])
     regions = {}
     for row, members in enumerate(per_row):
         names = sorted(
