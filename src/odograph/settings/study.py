@@ -22,7 +22,7 @@ class StudySettings(StageSettings):
         "or the run stops.",
     )
     shards_per_session: int = setting(
-        4,
+        2,
         "Number of jobs the units of one session are spread over; the results do not depend on it.",
         unit="jobs",
         ge=1,
