@@ -15,6 +15,8 @@ rule all:
         "results/report.html",
         all_cards,
         all_session_figures,
+    message:
+        "everything is up to date"
 
 
 include: "workflow/rules/intake.smk"
