@@ -47,6 +47,16 @@ def test_a_mixture_is_found_and_its_curves_have_the_true_shape(table, mixed):
     assert abs(mixed.curves["position_y_m"][row] - 0.6) < 0.08
 
 
+def test_gains_are_told_for_the_terms_a_unit_encodes_and_no_others(mixed, design, simulate, settings):
+    assert mixed.row["speed_gain_status"] == "fitted"
+    for term in ("position", "head_direction"):
+        assert abs(mixed.row[f"{term}_speed_gain"]) < 4 * mixed.row[f"{term}_speed_gain_se"]
+    row = analyse_unit(design, simulate("head_direction", 1), None, settings).row
+    assert np.isfinite(row["head_direction_speed_gain"]) and np.isnan(row["position_speed_gain"])
+    flat = analyse_unit(design, simulate("flat", 3), None, settings).row
+    assert flat["speed_gain_status"] == "not_fitted"
+
+
 def test_bands_enclose_their_curves(mixed):
     for name in ("position", "head_direction", "speed"):
         low, rate, high = (mixed.curves[f"{name}_{part}_hz"] for part in ("rate_low", "rate", "rate_high"))

@@ -151,6 +151,7 @@ def _empty_row(design: SessionDesign, unit: UnitSpikes) -> dict:
         "speed_shape": "",
         "speed_shape_probability": np.nan,
         "slow_fast_cut_cm_s": np.nan,
+        "speed_gain_status": "not_fitted",
     }
     for term in design.terms:
         row[f"encodes_{term.name}"] = False
@@ -235,13 +236,13 @@ def _gains(design: SessionDesign, unit: UnitSpikes, space: Workspace, full: Scor
     z = modulation(design.speed_cm_s)
     fitted = fit_gains(space, design, unit, full.fit, tuple(tuned), speed.name, z)
     if not fitted.converged:
-        return {}
+        return {"speed_gain_status": "failed"}
     p = {}
     if design.settings.tests:
         p = {name: gain_test(space, design, unit, full.fit, z, shift_plan(design), name) for name in tuned}
     above = design.settings.running_above_cm_s
     described = describe_gains(space, design, fitted, speed.name, z, above, p)
-    return {
+    return {"speed_gain_status": "fitted"} | {
         f"{name}_{column}": value
         for name in tuned
         for column, value in zip(GAIN_COLUMNS, astuple(described[name]), strict=True)

@@ -295,8 +295,11 @@ def _choose_strengths(joint: _Joint, beta: np.ndarray, gains: np.ndarray, spikes
 
 def _inverse(hessian: np.ndarray) -> np.ndarray:
     """Inverse of the negative Hessian, its curvatures taken as positive, so that every step climbs."""
-    values, vectors = np.linalg.eigh(hessian)
-    return (vectors / np.maximum(np.abs(values), 1e-9 * values.max())) @ vectors.T
+    # Strong penalties spread the diagonal over many orders of magnitude, which is scaled out first.
+    scale = 1 / np.sqrt(np.maximum(np.abs(np.diag(hessian)), 1e-12))
+    values, vectors = np.linalg.eigh(hessian * scale[:, None] * scale)
+    vectors = vectors * scale[:, None]
+    return (vectors / np.maximum(np.abs(values), 1e-10)) @ vectors.T
 
 
 def gain_test(
