@@ -5,6 +5,7 @@ import pytest
 from scipy.optimize import minimize
 from sklearn.linear_model import PoissonRegressor
 
+from odograph.encoding.bases import cyclic_basis, open_basis
 from odograph.encoding.design import prepare_session
 from odograph.encoding.evaluate import fit_whole
 from odograph.encoding.fit import fit_model
@@ -153,3 +154,31 @@ def test_iterations_that_run_out_are_reported(design, simulate):
     spikes = space.project(np.concatenate([unit.per_cell(t) for t in space.terms]), unit.n_spikes)
     fit = fit_model(space, spikes, np.ones(design.folds.n_groups), largest_iterations=2)
     assert not fit.converged
+
+
+def test_discretising_the_covariates_moves_the_fitted_curves_little(table, simulate):
+    """Curves of the same penalised model on undiscretised covariates: within 0.5 % (rms), 2 % at most."""
+    design = prepare_session(table, EncodingSettings(drift=False))
+    space = workspace(design, ("head_direction", "speed"))
+    unit = bin_spikes(design, simulate("head_direction+speed"))
+    fit = fit_whole(space, design, unit)
+    blocks = [np.ones((design.n_bins, 1))]
+    for term in space.terms:
+        values = table[term.columns[0]]
+        exact = (
+            cyclic_basis(values, term.basis.size)
+            if term.kind == "circle"
+            else open_basis(values, *term.spans[0], term.basis.size)
+        )
+        blocks.append(exact.dense() @ term.coordinates.matrix())
+    X, ridge = np.hstack(blocks), np.exp(fit.log_strengths) @ space.layout.spectra
+    beta = fit.coefficients.copy()
+    for _ in range(30):
+        mu = design.bin_s * np.exp(X @ beta)
+        score = X.T @ (unit.counts - mu) - ridge * beta
+        step = np.linalg.solve((X * mu[:, None]).T @ X + np.diag(ridge), score)
+        beta += step
+    assert np.abs(step).max() < 1e-9
+    difference = X @ (fit.coefficients - beta)
+    assert np.sqrt(np.mean(difference**2)) < 0.005
+    assert np.quantile(np.abs(difference), 0.999) < 0.02
