@@ -104,12 +104,13 @@ def test_bending_energy_of_a_known_curve():
     assert coefficients @ gram(size, 2) @ coefficients == pytest.approx(24.0, rel=1e-9)
 
 
-def test_trace_ratio_counts_the_penalised_coordinates():
-    # Exact: sum_j strength_j tr(S_lam^- S_j) is the rank of S_lam, whatever the strengths.
+def test_what_each_penalty_leaves_free():
+    # Exact: straight lines (cyclic: constants, left out) are free; ridge frees nothing; a plane 1, x, y, xy.
     for c, rank in [
         (curve_coordinates(9), 7),
         (curve_coordinates(9, cyclic=True), 8),
         (level_coordinates(4), 4),
+        (surface_coordinates(6), 36 - 4),
     ]:
-        assert c.trace_ratio(np.array([3.7])).sum() == pytest.approx(rank)
-    assert surface_coordinates(6).trace_ratio(np.array([1e-6, 1e6])).sum() == pytest.approx(36 - 4)
+        assert np.count_nonzero(c.spectra.sum(axis=0) > 1e-9) == rank
+        assert np.all(c.spectra >= 0)

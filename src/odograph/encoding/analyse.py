@@ -17,7 +17,7 @@ from odograph.encoding import design as design_module
 from odograph.encoding.curves import seconds_per_cell, tuning_curves
 from odograph.encoding.design import SessionDesign, model_name
 from odograph.encoding.evaluate import Score, evaluate, fold_spikes
-from odograph.encoding.layout import Workspace, cell_basis
+from odograph.encoding.layout import Workspace
 from odograph.encoding.select import best_score, select_model
 from odograph.encoding.shapes import curve_shape
 from odograph.encoding.shared import shift_plan, workspace
@@ -260,7 +260,7 @@ def _shape(design: SessionDesign, space: Workspace, full: Score, row: dict) -> d
     values = np.asarray(design.columns["speed_cm_s"], dtype=float)[design.valid]
     low, high = np.quantile(values, [0.05, 0.95])
     inside = (term.axes[0] >= low) & (term.axes[0] <= high)
-    basis = cell_basis(term)[inside]
+    basis = term.centred_functions[inside]
     shape = curve_shape(
         basis @ full.fit.coefficients[block],
         basis @ full.fit.covariance[block, block] @ basis.T,

@@ -144,17 +144,6 @@ class Coordinates:
         whole = self.factors[0] if len(self.factors) == 1 else np.kron(*self.factors)
         return whole[:, 1:] if self.drops_constant else whole
 
-    def trace_ratio(self, strengths: np.ndarray) -> np.ndarray:
-        """strength_j tr(S_lam^- S_j) for each penalty j, S_lam the sum of strengths times penalties."""
-        weighted = strengths[:, None] * self.spectra
-        total = weighted.sum(axis=0)
-        return np.divide(weighted, total, out=np.zeros_like(weighted), where=total > 0).sum(axis=1)
-
-    def log_determinant(self, strengths: np.ndarray) -> float:
-        """log of the product of the non-zero spectrum of S_lam."""
-        total = strengths @ self.spectra
-        return float(np.log(total[self.spectra.any(axis=0)]).sum())
-
 
 def _diagonalise(stiffness: np.ndarray, mass: np.ndarray, linear: bool) -> tuple[np.ndarray, np.ndarray]:
     """Generalised eigenvectors, mass-orthonormal, the null space spelled out as constant (and linear)."""

@@ -11,7 +11,7 @@ from scipy.stats import norm
 from odograph.descriptors.rate_map import circular_rate, line_rate, smoothed_rate
 from odograph.encoding.design import SessionDesign
 from odograph.encoding.fit import Fit
-from odograph.encoding.layout import Layout, cell_basis
+from odograph.encoding.layout import Layout
 from odograph.encoding.spikes import UnitSpikes
 from odograph.encoding.terms import Term
 
@@ -28,7 +28,7 @@ def term_effect(layout: Layout, fit: Fit, name: str) -> tuple[np.ndarray, np.nda
     """
     t = layout.index_of(name)
     block = layout.slices[t]
-    basis = cell_basis(layout.table.terms[t])
+    basis = layout.table.terms[t].centred_functions
     covariance = fit.covariance[block, block]
     effect = basis @ fit.coefficients[block]
     return effect, np.sqrt(np.maximum(np.einsum("ij,jk,ik->i", basis, covariance, basis, optimize=True), 0))

@@ -280,10 +280,3 @@ class Workspace:
                     term.coordinates, splines[first : first + lay.spline_count[t]]
                 )
         return out
-
-
-def cell_basis(term: Term) -> np.ndarray:
-    """A term's basis at its cells, less its mean over occupancy, (n_cells, n_coordinates)."""
-    dense = term.basis.dense() @ term.coordinates.matrix()
-    occupancy = np.bincount(term.cell, minlength=term.n_cells)
-    return dense - (occupancy / occupancy.sum()) @ dense

@@ -191,7 +191,7 @@ def transform_covariate(term: Term, plan: ShiftPlan) -> np.ndarray | None:
     """
     if term.coordinates.size * plan.n_steps > FFT_LIMIT:
         return None
-    basis = term.basis.dense() @ term.coordinates.matrix()
+    basis = term.functions
     return fft.rfft(np.ascontiguousarray(basis[plan.cells(term)].T), axis=1)
 
 
@@ -211,7 +211,7 @@ def score_variance(term: Term, null: NullModel, plan: ShiftPlan, cells: np.ndarr
         shift,
         products,
     )
-    basis = term.basis.dense() @ term.coordinates.matrix()
+    basis = term.functions
     own = (basis * products[:, :1]).T @ basis
     crossed = null.space.reduce_rows(np.ascontiguousarray(products.T)) @ basis
     return own - crossed.T @ null.inverse @ crossed
@@ -251,7 +251,7 @@ def shift_test(
         per_cell = np.empty((len(shifts) + 1, term.n_cells))
         for row, shift in enumerate(np.append(0, shifts)):
             shifted_cell_sums(plan.cells(term), null.residual, int(shift), per_cell[row])
-        sums = (per_cell @ (term.basis.dense() @ term.coordinates.matrix())).T
+        sums = (per_cell @ term.functions).T
         truth, sums = sums[:, :1], sums[:, 1:]
     statistic = _largest(weights @ np.hstack([at_truth @ truth, away @ sums]) ** 2)
     # Rounding must not decide ties, which occur where a covariate repeats itself.

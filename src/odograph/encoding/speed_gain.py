@@ -320,7 +320,7 @@ def gain_test(
     null = null_model(space, fit, design, unit, plan)
     t = space.layout.index_of(name)
     term, block = space.terms[t], space.layout.slices[t]
-    effect = ((term.basis.dense() @ term.coordinates.matrix()) @ fit.coefficients[block])[plan.cells(term)]
+    effect = (term.functions @ fit.coefficients[block])[plan.cells(term)]
     e, w = null.residual, null.expected
     zs = plan.per_step(z) / plan.bins_per_step
     shifts = np.append(0, plan.drawn)
@@ -343,7 +343,7 @@ def _design_rows(space: Workspace, plan: ShiftPlan) -> Iterator[np.ndarray]:
     """The full model's design matrix over steps, a few coordinates at a time, each (k, n_steps)."""
     yield np.ones((1, plan.n_steps))
     for term in space.terms:
-        basis = (term.basis.dense() @ term.coordinates.matrix()).T
+        basis = term.functions.T
         for first in range(0, len(basis), COORDINATES_AT_ONCE):
             yield basis[first : first + COORDINATES_AT_ONCE][:, plan.cells(term)]
 
@@ -367,9 +367,7 @@ def describe_gains(
     for name, gain, variance in zip(fitted.terms, fitted.gains, np.diag(fitted.covariance), strict=True):
         t = space.layout.index_of(name)
         term = space.terms[t]
-        effect = (term.basis.dense() @ term.coordinates.matrix()) @ fitted.coefficients[
-            space.layout.slices[t]
-        ]
+        effect = term.functions @ fitted.coefficients[space.layout.slices[t]]
         seconds = np.bincount(term.cell, minlength=term.n_cells) * design.bin_s
         rates = [np.exp((1 + gain * at) * effect) for at in z_at]
         bits = [information_bits_per_spike(seconds, rate) for rate in rates]
@@ -390,13 +388,11 @@ def _speed_rate(space: Workspace, fitted: GainFit, speed_name: str, speeds: np.n
     """Rate at each speed with every other term at its occupancy mean, hertz."""
     t = space.layout.index_of(speed_name)
     term: Term = space.terms[t]
-    effect = (term.basis.dense() @ term.coordinates.matrix()) @ fitted.coefficients[space.layout.slices[t]]
+    effect = term.functions @ fitted.coefficients[space.layout.slices[t]]
     others = 0.0
     for u, other in enumerate(space.terms):
         if other.kind in ("plane", "circle") or u == t:
             continue
-        values = (other.basis.dense() @ other.coordinates.matrix()) @ fitted.coefficients[
-            space.layout.slices[u]
-        ]
+        values = other.functions @ fitted.coefficients[space.layout.slices[u]]
         others += float(np.mean(values[other.cell]))
     return np.exp(fitted.coefficients[0] + others + np.interp(speeds, term.axes[0], effect))

@@ -11,6 +11,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 
@@ -61,6 +62,17 @@ class Term:
     @property
     def n_cells(self) -> int:
         return len(self.basis.columns)
+
+    @cached_property
+    def functions(self) -> np.ndarray:
+        """The functions of the term's coordinates at the cells, (n_cells, n_coordinates)."""
+        return self.basis.dense() @ self.coordinates.matrix()
+
+    @cached_property
+    def centred_functions(self) -> np.ndarray:
+        """The same less their means over occupancy, (n_cells, n_coordinates)."""
+        occupancy = np.bincount(self.cell, minlength=self.n_cells)
+        return self.functions - (occupancy / occupancy.sum()) @ self.functions
 
 
 def _span(values: np.ndarray, term: TermSettings) -> tuple[float, float]:
