@@ -1,6 +1,6 @@
 """Fitted and observed tuning curves in hertz, with pointwise Bayesian bands.
 
-Bands: Wood 2006, Aust. N.Z. J. Stat. 48:445.
+Bands: Wood 2006, Aust. N.Z. J. Stat. 48:445, with the uncertainty of the mean level.
 """
 
 from __future__ import annotations
@@ -22,16 +22,21 @@ OBSERVED_SIGMA_CELLS = 1.5
 def term_effect(layout: Layout, fit: Fit, name: str) -> tuple[np.ndarray, np.ndarray]:
     """A term's contribution to the log rate at its cells, centred over occupancy, and its standard error.
 
+    The error includes that of the mean level, without which bands close where a curve crosses its mean and
+    cover too little (Marra & Wood 2012, Scand. J. Stat. 39:53).
+
     Returns
     -------
     effect, standard_error : ndarray, (n_cells,)
     """
     t = layout.index_of(name)
-    block = layout.slices[t]
-    basis = layout.table.terms[t].centred_functions
-    covariance = fit.covariance[block, block]
-    effect = basis @ fit.coefficients[block]
-    return effect, np.sqrt(np.maximum(np.einsum("ij,jk,ik->i", basis, covariance, basis, optimize=True), 0))
+    block, terms = layout.slices[t], layout.table.terms
+    functions = terms[t].centred_functions
+    level = np.concatenate([[1.0], *(term.mean_functions for term in terms)])
+    of_level = fit.covariance @ level
+    variance = np.sum((functions @ fit.covariance[block, block]) * functions, axis=1)
+    variance += 2 * functions @ of_level[block] + level @ of_level
+    return functions @ fit.coefficients[block], np.sqrt(np.maximum(variance, 0))
 
 
 def seconds_per_cell(term: Term, bin_s: float) -> np.ndarray:

@@ -69,10 +69,15 @@ class Term:
         return self.basis.dense() @ self.coordinates.matrix()
 
     @cached_property
-    def centred_functions(self) -> np.ndarray:
-        """The same less their means over occupancy, (n_cells, n_coordinates)."""
+    def mean_functions(self) -> np.ndarray:
+        """Means of `functions` over occupancy, (n_coordinates,)."""
         occupancy = np.bincount(self.cell, minlength=self.n_cells)
-        return self.functions - (occupancy / occupancy.sum()) @ self.functions
+        return (occupancy / occupancy.sum()) @ self.functions
+
+    @property
+    def centred_functions(self) -> np.ndarray:
+        """`functions` less their means over occupancy, (n_cells, n_coordinates)."""
+        return self.functions - self.mean_functions
 
 
 def _span(values: np.ndarray, term: TermSettings) -> tuple[float, float]:
