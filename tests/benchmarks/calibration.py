@@ -23,8 +23,9 @@ from odograph.encoding.analyse import prepare_session
 from odograph.encoding.curves import term_effect
 from odograph.encoding.design import SessionDesign
 from odograph.encoding.evaluate import fit_whole
+from odograph.encoding.gain_test import gain_test
 from odograph.encoding.shared import shift_plan, workspace
-from odograph.encoding.speed_gain import fit_gains, gain_test, modulation
+from odograph.encoding.speed_gain import fit_gains, modulation
 from odograph.encoding.spikes import UnitSpikes, bin_spikes
 from odograph.encoding.term_tests import term_tests
 from odograph.settings.encoding import EncodingSettings

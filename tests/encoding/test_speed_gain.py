@@ -4,8 +4,10 @@ import numpy as np
 import pytest
 
 from odograph.encoding.evaluate import fit_whole
+from odograph.encoding.gain_meaning import describe_gains
+from odograph.encoding.gain_test import gain_test
 from odograph.encoding.shared import shift_plan, workspace
-from odograph.encoding.speed_gain import _Joint, describe_gains, fit_gains, gain_test, modulation
+from odograph.encoding.speed_gain import _Joint, fit_gains, modulation
 from odograph.encoding.spikes import bin_spikes
 
 FULL = ("position", "head_direction", "speed")

@@ -17,12 +17,14 @@ from odograph.encoding import design as design_module
 from odograph.encoding.curves import seconds_per_cell, tuning_curves
 from odograph.encoding.design import SessionDesign, model_name
 from odograph.encoding.evaluate import Score, evaluate, fold_spikes
+from odograph.encoding.gain_meaning import describe_gains
+from odograph.encoding.gain_test import gain_test
 from odograph.encoding.layout import Workspace
 from odograph.encoding.select import best_score, select_model
 from odograph.encoding.shapes import curve_shape
 from odograph.encoding.shared import shift_plan, workspace
 from odograph.encoding.slow_fast import NOT_AVAILABLE, compare_halves, running_halves
-from odograph.encoding.speed_gain import describe_gains, fit_gains, gain_test, modulation
+from odograph.encoding.speed_gain import fit_gains, modulation
 from odograph.encoding.spikes import UnitSpikes, bin_spikes
 from odograph.encoding.term_tests import term_tests
 from odograph.encoding.terms import Term

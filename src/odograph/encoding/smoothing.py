@@ -16,6 +16,7 @@ from dataclasses import dataclass
 from functools import cached_property
 
 import numpy as np
+from numba import njit
 from scipy.linalg import lapack
 
 from odograph.encoding import kernels
@@ -85,6 +86,64 @@ def factorise(matrix: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     raise FloatingPointError("the penalised information matrix is not positive definite")
 
 
+@njit(cache=True, nogil=True)
+def strength_derivatives(covariance, coefficients, spectra, strengths):
+    """What V's derivatives by the log strengths are made of.
+
+    covariance (n, n), coefficients (n,), spectra (n_penalties, n), strengths (n_penalties,). Returns
+    strength_j times b'S_j b, tr(S_lam^- S_j) and tr(A^-1 S_j), each (n_penalties,), and the Hessian of V,
+    (n_penalties, n_penalties).
+    """
+    m, n = spectra.shape
+    rough, ratio, trace, hessian = np.zeros(m), np.zeros(m), np.zeros(m), np.zeros((m, m))
+    total = np.zeros(n)
+    for j in range(m):
+        for i in range(n):
+            total[i] += strengths[j] * spectra[j, i]
+    for j in range(m):
+        across = np.zeros(n)
+        for i in range(n):
+            w = strengths[j] * spectra[j, i]
+            if w == 0.0:
+                continue
+            rough[j] += w * coefficients[i] ** 2
+            ratio[j] += w / total[i]
+            trace[j] += w * covariance[i, i]
+            pull = w * coefficients[i]
+            for k in range(n):
+                c = covariance[i, k]
+                across[k] += c * (2 * pull * coefficients[k] + w * c)
+            for k in range(m):
+                hessian[j, k] += w * strengths[k] * spectra[k, i] / total[i] ** 2 / 2
+        for k in range(m):
+            for i in range(n):
+                hessian[j, k] -= across[i] * strengths[k] * spectra[k, i] / 2
+        hessian[j, j] += (rough[j] - ratio[j] + trace[j]) / 2
+    return rough, ratio, trace, hessian
+
+
+@njit(cache=True, nogil=True)
+def descent(hessian, gradient, free):
+    """Newton's move, (n,), among the `free` entries, for a function that need not be convex."""
+    places = np.flatnonzero(free)
+    n = len(places)
+    block = np.empty((n, n))
+    for i in range(n):
+        for j in range(n):
+            block[i, j] = hessian[places[i], places[j]]
+    values, vectors = np.linalg.eigh(block)
+    move = np.zeros(len(gradient))
+    for k in range(n):
+        slope = 0.0
+        for i in range(n):
+            slope += vectors[i, k] * gradient[places[i]]
+        # Where the curvature is not positive the direction still descends, with a length the slope sets.
+        curvature = max(abs(values[k]), abs(slope) / LARGEST_MOVE, 1e-7)
+        for i in range(n):
+            move[places[i]] -= vectors[i, k] * slope / curvature
+    return move
+
+
 class _Solved:
     """The working problem at given log strengths, with what Newton's method on them needs."""
 
@@ -104,42 +163,26 @@ class _Solved:
         return float(-(self.problem.target @ self.coefficients) / 2 + self._half_log_determinant - prior / 2)
 
     @cached_property
-    def weighted(self) -> np.ndarray:
-        """strength_j times the diagonal of S_j, (n_penalties, n)."""
-        return self.strengths[:, None] * self.problem.spectra
-
-    @cached_property
     def total(self) -> np.ndarray:
         """Diagonal of S_lam, (n,)."""
         return self.strengths @ self.problem.spectra
 
     @cached_property
-    def share(self) -> np.ndarray:
-        """Each penalty's share of S_lam by coordinate, (n_penalties, n); terms share no coordinates."""
-        return np.divide(self.weighted, self.total, out=np.zeros_like(self.weighted), where=self.total > 0)
-
-    @cached_property
-    def parts(self) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-        """strength_j times b'S_j b, tr(S_lam^- S_j) and tr(A^-1 S_j)."""
-        rough = self.weighted @ self.coefficients**2
-        return rough, self.share.sum(axis=1), self.weighted @ np.diag(self.covariance)
+    def derivatives(self) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
+        """strength_j times b'S_j b, tr(S_lam^- S_j) and tr(A^-1 S_j), each (n_penalties,); V's Hessian."""
+        return strength_derivatives(self.covariance, self.coefficients, self.problem.spectra, self.strengths)
 
     @property
     def gradient(self) -> np.ndarray:
-        rough, ratio, trace = self.parts
+        rough, ratio, trace, _ = self.derivatives
         return (rough - ratio + trace) / 2
 
     def hessian(self) -> np.ndarray:
-        rough, ratio, trace = self.parts
-        pull = self.weighted * self.coefficients
-        out = -(pull @ self.covariance @ pull.T) - self.weighted @ self.covariance**2 @ self.weighted.T / 2
-        out += self.share @ self.share.T / 2
-        out[np.diag_indices_from(out)] += (rough - ratio + trace) / 2
-        return out
+        return self.derivatives[3]
 
     def fellner_schall(self) -> np.ndarray:
         """The generalized Fellner-Schall update of the log strengths."""
-        rough, ratio, trace = self.parts
+        rough, ratio, trace, _ = self.derivatives
         change = np.log(np.maximum(ratio - trace, 1e-12) / np.maximum(rough, 1e-12))
         return _bounded(self.rho + np.clip(change, -LARGEST_MOVE, LARGEST_MOVE))
 
@@ -187,12 +230,7 @@ def _move(here: _Solved) -> tuple[np.ndarray, float]:
     )
     if not free.any():
         return np.zeros_like(gradient), 0.0
-    values, vectors = np.linalg.eigh(here.hessian()[np.ix_(free, free)])
-    slope = vectors.T @ gradient[free]
-    # Where the curvature is not positive the direction still descends, with a length the slope sets.
-    curvature = np.maximum(np.abs(values), np.maximum(np.abs(slope) / LARGEST_MOVE, 1e-7))
-    move = np.zeros_like(gradient)
-    move[free] = -(vectors @ (slope / curvature))
+    move = descent(here.hessian(), gradient, free)
     move = _bounded(here.rho + move) - here.rho
     return move, float(-(gradient @ move) / 2)
 

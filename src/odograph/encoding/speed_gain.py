@@ -18,51 +18,21 @@ else, U and V computed anew for every shift.
 
 from __future__ import annotations
 
-from collections.abc import Iterator
 from dataclasses import dataclass
 
 import numpy as np
-from scipy import fft
 
-from odograph.descriptors.information import information_bits_per_spike
 from odograph.encoding import kernels
 from odograph.encoding.design import SessionDesign
 from odograph.encoding.fit import Fit
 from odograph.encoding.layout import Workspace
-from odograph.encoding.shifts import ShiftPlan, null_model
 from odograph.encoding.smoothing import Quadratic, tune
 from odograph.encoding.spikes import UnitSpikes
-from odograph.encoding.terms import Term
 
 SPEED_SCALE_CM_S = 5.0
 LARGEST_GAIN = 3.0
 STRENGTH_ROUNDS = 2
 COORDINATES_AT_ONCE = 8  # in the gain test's cross-correlations, to bound its memory
-
-
-@dataclass(frozen=True)
-class Gain:
-    """The speed gain of one term.
-
-    Attributes
-    ----------
-    gain, standard_error : float
-        Per standard deviation of z.
-    p : float
-        Two-sided, by circular shifts; NaN when there is none.
-    slow_bits_per_spike, fast_bits_per_spike : float
-        Information of the fitted tuning at the 20th and the 80th percentile of running speed.
-    slow_bits_per_s, fast_bits_per_s : float
-        The same times the fitted mean rate at that speed.
-    """
-
-    gain: float
-    standard_error: float
-    p: float
-    slow_bits_per_spike: float
-    fast_bits_per_spike: float
-    slow_bits_per_s: float
-    fast_bits_per_s: float
 
 
 @dataclass(frozen=True)
@@ -300,99 +270,3 @@ def _inverse(hessian: np.ndarray) -> np.ndarray:
     values, vectors = np.linalg.eigh(hessian * scale[:, None] * scale)
     vectors = vectors * scale[:, None]
     return (vectors / np.maximum(np.abs(values), 1e-10)) @ vectors.T
-
-
-def gain_test(
-    space: Workspace,
-    design: SessionDesign,
-    unit: UnitSpikes,
-    fit: Fit,
-    z: np.ndarray,
-    plan: ShiftPlan,
-    name: str,
-) -> float:
-    """Two-sided p of a term's gain: the standardised efficient score among circular shifts of z.
-
-    Parameters as for `fit_gains`; `name` is the scaled term. The draw of shifts in `plan` is used.
-    """
-    if not len(plan.drawn):
-        return float("nan")
-    null = null_model(space, fit, design, unit, plan)
-    t = space.layout.index_of(name)
-    term, block = space.terms[t], space.layout.slices[t]
-    effect = (term.functions @ fit.coefficients[block])[plan.cells(term)]
-    e, w = null.residual, null.expected
-    zs = plan.per_step(z) / plan.bins_per_step
-    shifts = np.append(0, plan.drawn)
-    turned = np.conj(fft.rfft(zs)), np.conj(fft.rfft(zs**2))
-
-    def against(signal: np.ndarray, which: int) -> np.ndarray:
-        """sum_i signal_i z_(i + s)^k for the shifts, (..., n_shifts)."""
-        product = np.conj(fft.rfft(signal, axis=-1)) * np.conj(turned[which])
-        return fft.irfft(product, n=plan.n_steps, axis=-1)[..., shifts]
-
-    score = against(e * effect, 0)
-    variance = against(w * effect**2, 1)
-    crossed = np.concatenate([against(rows * (w * effect), 0) for rows in _design_rows(space, plan)])
-    variance = variance - np.sum(crossed * (null.inverse @ crossed), axis=0)
-    statistic = np.abs(score) / np.sqrt(np.maximum(variance, 1e-12 * np.abs(variance).max() + 1e-300))
-    return float((1 + np.sum(statistic[1:] >= statistic[0] * (1 - 1e-9))) / len(shifts))
-
-
-def _design_rows(space: Workspace, plan: ShiftPlan) -> Iterator[np.ndarray]:
-    """The full model's design matrix over steps, a few coordinates at a time, each (k, n_steps)."""
-    yield np.ones((1, plan.n_steps))
-    for term in space.terms:
-        basis = term.functions.T
-        for first in range(0, len(basis), COORDINATES_AT_ONCE):
-            yield basis[first : first + COORDINATES_AT_ONCE][:, plan.cells(term)]
-
-
-def describe_gains(
-    space: Workspace,
-    design: SessionDesign,
-    fitted: GainFit,
-    speed_name: str,
-    z: np.ndarray,
-    running_above_cm_s: float,
-    p_values: dict[str, float],
-) -> dict[str, Gain]:
-    """Gains in plain units: information at the 20th and 80th percentile of running speed."""
-    running = design.speed_cm_s > running_above_cm_s
-    speeds = np.quantile(design.speed_cm_s[running] if running.any() else design.speed_cm_s, [0.2, 0.8])
-    order = np.argsort(design.speed_cm_s, kind="stable")
-    z_at = np.interp(speeds, design.speed_cm_s[order], z[order])
-    speed_rate = _speed_rate(space, fitted, speed_name, speeds)
-    out = {}
-    for name, gain, variance in zip(fitted.terms, fitted.gains, np.diag(fitted.covariance), strict=True):
-        t = space.layout.index_of(name)
-        term = space.terms[t]
-        effect = term.functions @ fitted.coefficients[space.layout.slices[t]]
-        seconds = np.bincount(term.cell, minlength=term.n_cells) * design.bin_s
-        rates = [np.exp((1 + gain * at) * effect) for at in z_at]
-        bits = [information_bits_per_spike(seconds, rate) for rate in rates]
-        level = [float(seconds @ r / seconds.sum()) * s for r, s in zip(rates, speed_rate, strict=True)]
-        out[name] = Gain(
-            float(gain),
-            float(np.sqrt(max(variance, 0.0))),
-            p_values.get(name, float("nan")),
-            bits[0],
-            bits[1],
-            bits[0] * level[0],
-            bits[1] * level[1],
-        )
-    return out
-
-
-def _speed_rate(space: Workspace, fitted: GainFit, speed_name: str, speeds: np.ndarray) -> np.ndarray:
-    """Rate at each speed with every other term at its occupancy mean, hertz."""
-    t = space.layout.index_of(speed_name)
-    term: Term = space.terms[t]
-    effect = term.functions @ fitted.coefficients[space.layout.slices[t]]
-    others = 0.0
-    for u, other in enumerate(space.terms):
-        if other.kind in ("plane", "circle") or u == t:
-            continue
-        values = other.functions @ fitted.coefficients[space.layout.slices[u]]
-        others += float(np.mean(values[other.cell]))
-    return np.exp(fitted.coefficients[0] + others + np.interp(speeds, term.axes[0], effect))
