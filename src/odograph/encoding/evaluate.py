@@ -111,7 +111,7 @@ def evaluate(space: Workspace, model: tuple[str, ...], design, unit: UnitSpikes,
         converged = converged and fit.converged
         seen = [tables.held_out[fold][name] for name in names]
         seen_sums = _project(space, seen, tables.n_held_out[fold])
-        expected = space.expected(fit.coefficients, folds.held_out(fold).astype(float))
+        expected = fit.expected_spikes @ folds.held_out(fold)
         gain[fold] = seen_sums @ fit.coefficients - expected - _constant_rate(tables, fold)
     return _score(model, gain, unit, tables, whole, converged)
 

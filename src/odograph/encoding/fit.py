@@ -36,6 +36,8 @@ class Fit:
         Effective degrees of freedom tr((X'WX + S_lam)^-1 X'WX).
     log_likelihood : float
         sum_spikes eta - sum_rows mu, eta in log hertz.
+    expected_spikes : ndarray, (n_groups,)
+        Expected spikes in every group, those that did not train included.
     converged : bool
     iterations : int
         Passes over the rows.
@@ -48,6 +50,7 @@ class Fit:
     log_strengths: np.ndarray
     edf: float
     log_likelihood: float
+    expected_spikes: np.ndarray
     converged: bool
     iterations: int
     decrement: float
@@ -126,12 +129,14 @@ def fit_model(
     if not np.all(np.isfinite(beta)):
         raise FloatingPointError("the fitted rates are not finite")
     covariance = state.covariance
+    expected_spikes = space.expected_by_group(beta, len(use))
     return Fit(
         coefficients=beta,
         covariance=covariance,
         log_strengths=rho,
         edf=float(np.sum(covariance * quadratic.information)),
-        log_likelihood=float(spikes @ beta - space.expected(beta, use)),
+        log_likelihood=float(spikes @ beta - expected_spikes @ use),
+        expected_spikes=expected_spikes,
         converged=converged,
         iterations=iteration,
         decrement=decrement,

@@ -32,6 +32,14 @@ def expected_counts(cells, seconds, group, use, factor, cell_start, mu):
 
 
 @njit(cache=True, nogil=True)
+def group_sums(group, mu, out):
+    """Sum of `mu` over the rows of every group; out (n_groups,) is overwritten."""
+    out[:] = 0.0
+    for r in range(len(mu)):
+        out[group[r]] += mu[r]
+
+
+@njit(cache=True, nogil=True)
 def cell_sums(cells, mu, cell_start, out):
     """Sum of `mu` over the rows of every cell of every term; out (all cells,) is overwritten."""
     out[:] = 0.0

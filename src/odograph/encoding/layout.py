@@ -189,17 +189,30 @@ class Workspace:
             np.multiply(table.seconds, use[table.group], out=self.mu)
             self.mu *= np.exp(coefficients[0])
             return float(self.mu.sum())
+        factor = np.exp(self.effects(coefficients))
+        factor[: lay.cell_end[0]] *= np.exp(coefficients[0])
+        return kernels.expected_counts(
+            table.cells, table.seconds, table.group, use, factor, lay.cell_start, self.mu
+        )
+
+    def effects(self, coefficients: np.ndarray) -> np.ndarray:
+        """Fill `eta`, every term's part of the log rate at its cells, laid end to end, and return it."""
+        lay = self.layout
         for t, term in enumerate(self.terms):
             first = lay.spline_start[t]
             self._splines[first : first + lay.spline_count[t]] = from_coordinates(
                 term.coordinates, coefficients[lay.slices[t]]
             )
-        kernels.cell_values(self._splines, *self.flat, self.eta)
-        factor = np.exp(self.eta)
-        factor[: lay.cell_end[0]] *= np.exp(coefficients[0])
-        return kernels.expected_counts(
-            table.cells, table.seconds, table.group, use, factor, lay.cell_start, self.mu
-        )
+        if self.terms:
+            kernels.cell_values(self._splines, *self.flat, self.eta)
+        return self.eta
+
+    def expected_by_group(self, coefficients: np.ndarray, n_groups: int) -> np.ndarray:
+        """Expected spikes in every group, (n_groups,); fills `mu` and `eta` for all rows."""
+        self.expected(coefficients, np.ones(n_groups))
+        out = np.empty(n_groups)
+        kernels.group_sums(self.layout.table.group, self.mu, out)
+        return out
 
     def derivatives(self, total: float) -> tuple[np.ndarray, np.ndarray]:
         """X'mu, (n_coordinates,), and X'WX, (n_coordinates, n_coordinates), at the last `expected` call."""
