@@ -20,11 +20,11 @@ def expected_counts(cells, seconds, group, use, factor, cell_start, mu):
     """
     n_terms, n_rows = cells.shape
     for r in range(n_rows):
-        mu[r] = seconds[r] * use[group[r]] * factor[cell_start[0] + cells[0, r]]
+        mu[r] = seconds[r] * use[np.uint64(group[r])] * factor[np.uint64(cell_start[0] + cells[0, r])]
     for t in range(1, n_terms):
         start = cell_start[t]
         for r in range(n_rows):
-            mu[r] *= factor[start + cells[t, r]]
+            mu[r] *= factor[np.uint64(start + cells[t, r])]
     total = 0.0
     for r in range(n_rows):
         total += mu[r]
@@ -36,7 +36,7 @@ def group_sums(group, mu, out):
     """Sum of `mu` over the rows of every group; out (n_groups,) is overwritten."""
     out[:] = 0.0
     for r in range(len(mu)):
-        out[group[r]] += mu[r]
+        out[np.uint64(group[r])] += mu[r]
 
 
 @njit(cache=True, nogil=True)
@@ -47,7 +47,7 @@ def cell_sums(cells, mu, cell_start, out):
     for t in range(n_terms):
         start = cell_start[t]
         for r in range(n_rows):
-            out[start + cells[t, r]] += mu[r]
+            out[np.uint64(start + cells[t, r])] += mu[r]
 
 
 @njit(cache=True, nogil=True)
@@ -186,9 +186,8 @@ def plane_information(
     offsets,
     sizes,
     hessian,
-    sums,
 ):
-    """X'WX of a model whose first term is a plane, and the sums of `mu` per cell; both overwritten.
+    """X'WX of a model whose first term is a plane, but for the other terms' own blocks; overwritten.
 
     Rows are sorted by the plane's cell (y first, then x), so each cell's rows, row_start[c]:row_start[c + 1],
     are met once: what they give to the other terms' columns is gathered in a short vector, and the plane's
@@ -198,7 +197,6 @@ def plane_information(
     other terms that each padded column stands for.
     """
     hessian[:, :] = 0.0
-    sums[:] = 0.0
     n_terms = cells.shape[0]
     first = offsets[0] + sizes[0]  # columns of the other terms follow those of the plane
     n_other = hessian.shape[0] - first
@@ -215,22 +213,22 @@ def plane_information(
                 continue
             total = 0.0
             for r in range(row_start[c], row_start[c + 1]):
-                m = mu[r]
-                total += m
-                for t in range(1, n_terms):
-                    k = cell_start[t] + cells[t, r]
-                    sums[k] += m
+                total += mu[r]
+            for t in range(1, n_terms):
+                for r in range(row_start[c], row_start[c + 1]):
+                    m = mu[r]
+                    k = np.uint64(cell_start[t] + cells[t, r])
                     p = padded_start[k]
                     padded[p] += m * padded_weights[k, 0]
-                    padded[p + 1] += m * padded_weights[k, 1]
-                    padded[p + 2] += m * padded_weights[k, 2]
-                    padded[p + 3] += m * padded_weights[k, 3]
+                    padded[p + np.uint64(1)] += m * padded_weights[k, 1]
+                    padded[p + np.uint64(2)] += m * padded_weights[k, 2]
+                    padded[p + np.uint64(3)] += m * padded_weights[k, 3]
             beside[:] = 0.0
             for p in range(len(padded)):
                 beside[padded_column[p]] += padded[p]
                 padded[p] = 0.0
             beside[n_other] = total
-            sums[c] = total
+            hessian[0, 0] += total
             for i in range(4):
                 a, w = x_columns[ix, i], x_weights[ix, i]
                 for k in range(n_other + 1):
@@ -249,24 +247,34 @@ def plane_information(
                     column = offsets[0] + y_columns[iy, j]
                     for d in range(max(0, a - 3), min(n_x, a + 4)):
                         hessian[row, column + d * n_y] += v * band[a, d]
-    hessian[0, 0] = 0.0
-    for c in range(cell_start[0], cell_end[0]):
-        hessian[0, 0] += sums[c]
 
 
 @njit(cache=True, nogil=True)
-def joint_histograms(cells, mu, n_cells, start, out):
-    """Joint sums of `mu` over the cells of every pair of terms but the first, laid end to end in `out`.
+def joint_histograms(cells, mu, cell_start, cell_end, start, joint, sums):
+    """Sums of `mu` over the cells of every term but the first, and jointly over those of every pair of them.
 
-    start (n_terms, n_terms): where the pair (t, u), 0 < t < u, begins; n_cells (n_terms,).
+    start (n_terms, n_terms): where the pair (t, u), 0 < t < u, begins in `joint`, which has the pairs end to
+    end; sums (all cells,). Both are overwritten.
     """
-    out[:] = 0.0
-    n_terms = cells.shape[0]
+    joint[:] = 0.0
+    sums[:] = 0.0
+    n_terms, n_rows = cells.shape
     for t in range(1, n_terms):
         for u in range(t + 1, n_terms):
-            base, width = start[t, u], n_cells[u]
-            for r in range(cells.shape[1]):
-                out[base + cells[t, r] * width + cells[u, r]] += mu[r]
+            base, width = start[t, u], cell_end[u] - cell_start[u]
+            for r in range(n_rows):
+                joint[np.uint64(base + cells[t, r] * width + cells[u, r])] += mu[r]
+    if n_terms == 2:
+        for r in range(n_rows):
+            sums[np.uint64(cell_start[1] + cells[1, r])] += mu[r]
+    for t in range(1, n_terms - 1):  # the margins of a pair are cheaper than another pass
+        u = n_terms - 1
+        base, width = start[t, u], cell_end[u] - cell_start[u]
+        for c in range(cell_end[t] - cell_start[t]):
+            for d in range(width):
+                sums[cell_start[t] + c] += joint[base + c * width + d]
+                if t == 1:
+                    sums[cell_start[u] + d] += joint[base + c * width + d]
 
 
 @njit(cache=True, nogil=True)

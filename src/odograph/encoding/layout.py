@@ -135,7 +135,7 @@ def pad_bases(layout: Layout) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
     column : ndarray of int64, (n_padded,)
         The column that each padded one stands for, counted from the first column after the plane's.
     """
-    start = np.zeros(len(layout.columns), dtype=np.int64)
+    start = np.zeros(len(layout.columns), dtype=np.uint64)
     weights = np.zeros((len(layout.columns), 4))
     column: list[int] = []
     base = 0
@@ -232,8 +232,8 @@ class Workspace:
                 lay.spline_count,
                 self._information,
             )
-        gradient = self.project(self._sums, total)
-        return gradient, self.reduce(self._information)
+        information = self.reduce(self._information)
+        return information[:, 0].copy(), information  # the intercept's column is X'W1
 
     def reduce(self, information: np.ndarray) -> np.ndarray:
         """X'WX in coordinates, (n_coordinates, n_coordinates), from splines, (n_splines, n_splines)."""
@@ -258,10 +258,9 @@ class Workspace:
             lay.spline_start,
             lay.spline_count,
             self._information,
-            self._sums,
         )
         kernels.joint_histograms(
-            lay.table.cells, self.mu, lay.cell_end - lay.cell_start, self._joint_start, self._joint
+            lay.table.cells, self.mu, lay.cell_start, lay.cell_end, self._joint_start, self._joint, self._sums
         )
         kernels.small_blocks(
             self._joint, self._joint_start, self._sums, *self.flat, lay.spline_count, self._information
