@@ -16,6 +16,7 @@ from odograph.encoding.design import SessionDesign
 from odograph.encoding.fit import Fit, fit_model
 from odograph.encoding.layout import Workspace
 from odograph.encoding.spikes import UnitSpikes
+from odograph.encoding.terms import Term
 
 
 @dataclass(frozen=True)
@@ -51,14 +52,25 @@ class Score:
 
 @dataclass(frozen=True)
 class FoldSpikes:
-    """A unit's spikes per cell of every term and per fold: trained on, and held out."""
+    """What a unit's spikes give to every fold of every model.
 
-    training: list[dict[str, np.ndarray]]
-    held_out: list[dict[str, np.ndarray]]
+    Attributes
+    ----------
+    training, held_out : dict of ndarray, each (n_folds, n_coordinates)
+        X'y of each term, by its name, over the spikes trained on and over those held out.
+    n_training, n_held_out : ndarray, (n_folds,)
+    training_s, held_out_s : ndarray, (n_folds,)
+    saturated : float
+        Log-likelihood of the model with a rate of its own for every bin.
+    """
+
+    training: dict[str, np.ndarray]
+    held_out: dict[str, np.ndarray]
     n_training: np.ndarray
     n_held_out: np.ndarray
     training_s: np.ndarray
     held_out_s: np.ndarray
+    saturated: float
 
 
 def fold_spikes(design: SessionDesign, unit: UnitSpikes) -> FoldSpikes:
@@ -67,29 +79,27 @@ def fold_spikes(design: SessionDesign, unit: UnitSpikes) -> FoldSpikes:
     terms = [*design.terms, *([design.drift] if design.drift else [])]
     group = folds.group[unit.bins]
     seconds = np.bincount(folds.group, minlength=folds.n_groups) * design.bin_s
-    training, held_out = [], []
-    uses, tests = [], []
-    for fold in range(folds.n_folds):
-        use, test = folds.training(fold), folds.held_out(fold)
-        training.append({term.name: unit.per_cell(term, use[group]) for term in terms})
-        held_out.append({term.name: unit.per_cell(term, test[group]) for term in terms})
-        uses.append(use)
-        tests.append(test)
-    use, test = np.array(uses), np.array(tests)
+    use = np.array([folds.training(fold) for fold in range(folds.n_folds)])
+    test = np.array([folds.held_out(fold) for fold in range(folds.n_folds)])
+
+    def sums(term: Term, which: np.ndarray) -> np.ndarray:
+        return np.array([unit.per_cell(term, spikes) for spikes in which[:, group]]) @ term.functions
+
     return FoldSpikes(
-        training,
-        held_out,
+        {term.name: sums(term, use) for term in terms},
+        {term.name: sums(term, test) for term in terms},
         use[:, group].sum(axis=1),
         test[:, group].sum(axis=1),
         use @ seconds,
         test @ seconds,
+        float(np.sum(xlogy(unit.counts, unit.counts / design.bin_s) - unit.counts)),
     )
 
 
 def fit_whole(space: Workspace, design: SessionDesign, unit: UnitSpikes) -> Fit:
     """Fit a model to all valid time."""
     cells = [unit.per_cell(term) for term in space.terms]
-    spikes = _project(space, cells, unit.n_spikes)
+    spikes = space.project(np.concatenate(cells) if cells else np.empty(0), float(unit.n_spikes))
     return fit_model(space, spikes, np.ones(design.folds.n_groups))
 
 
@@ -105,19 +115,13 @@ def evaluate(space: Workspace, model: tuple[str, ...], design, unit: UnitSpikes,
     folds, names = design.folds, [term.name for term in space.terms]
     gain, converged = np.zeros(folds.n_folds), whole.converged
     for fold in range(folds.n_folds):
-        trained = [tables.training[fold][name] for name in names]
-        spikes = _project(space, trained, tables.n_training[fold])
+        spikes = np.concatenate([[tables.n_training[fold]], *(tables.training[n][fold] for n in names)])
         fit = fit_model(space, spikes, folds.training(fold).astype(float), whole)
         converged = converged and fit.converged
-        seen = [tables.held_out[fold][name] for name in names]
-        seen_sums = _project(space, seen, tables.n_held_out[fold])
+        seen = np.concatenate([[tables.n_held_out[fold]], *(tables.held_out[n][fold] for n in names)])
         expected = fit.expected_spikes @ folds.held_out(fold)
-        gain[fold] = seen_sums @ fit.coefficients - expected - _constant_rate(tables, fold)
-    return _score(model, gain, unit, tables, whole, converged)
-
-
-def _project(space: Workspace, cells: list[np.ndarray], n_spikes: float) -> np.ndarray:
-    return space.project(np.concatenate(cells) if cells else np.empty(0), float(n_spikes))
+        gain[fold] = seen @ fit.coefficients - expected - _constant_rate(tables, fold)
+    return _score(model, gain, tables, whole, converged)
 
 
 def _constant_rate(tables: FoldSpikes, fold: int) -> float:
@@ -126,12 +130,9 @@ def _constant_rate(tables: FoldSpikes, fold: int) -> float:
     return float(xlogy(tables.n_held_out[fold], rate) - rate * tables.held_out_s[fold])
 
 
-def _score(model, gain, unit, tables, whole, converged) -> Score:
+def _score(model, gain, tables, whole, converged) -> Score:
     n = int(tables.n_held_out.sum())
     to_bits = 1 / (max(n, 1) * np.log(2))
-    # The saturated model's rate in a bin is its count over the bin's width.
-    width = tables.held_out_s.sum() / len(unit.counts)
-    saturated = float(np.sum(xlogy(unit.counts, unit.counts / width) - unit.counts))
     constant = sum(_constant_rate(tables, fold) for fold in range(len(gain)))
     return Score(
         model=model,
@@ -139,7 +140,7 @@ def _score(model, gain, unit, tables, whole, converged) -> Score:
         n_spikes=n,
         bits_per_spike=float(gain.sum() * to_bits),
         bits_per_spike_se=float(np.sqrt(len(gain)) * gain.std(ddof=1) * to_bits),
-        deviance_explained=float(gain.sum() / (saturated - constant)),
+        deviance_explained=float(gain.sum() / (tables.saturated - constant)),
         converged=converged,
         fit=whole,
     )
