@@ -93,7 +93,7 @@ def gain_results(job: Job) -> list[float]:
     _, design, unit = simulate(job)
     space, z = workspace(design, TERMS), modulation(design.speed_cm_s)
     fit = fit_whole(space, design, unit)
-    gains = fit_gains(space, design, unit, fit, TERMS[:2], "speed", z)
+    gains = fit_gains(space, unit, fit, TERMS[:2], "speed", z)
     out = []
     for name in ("position", "head_direction"):
         i = gains.terms.index(name)

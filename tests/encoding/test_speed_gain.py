@@ -7,7 +7,7 @@ from odograph.encoding.evaluate import fit_whole
 from odograph.encoding.gain_meaning import describe_gains
 from odograph.encoding.gain_test import gain_test
 from odograph.encoding.shared import shift_plan, workspace
-from odograph.encoding.speed_gain import _Joint, fit_gains, modulation
+from odograph.encoding.speed_gain import GainModel, fit_gains, modulation
 from odograph.encoding.spikes import bin_spikes
 
 FULL = ("position", "head_direction", "speed")
@@ -35,21 +35,16 @@ def test_modulation_is_monotone_and_standardised():
 
 def test_score_and_hessian_are_derivatives_of_the_likelihood(table, design, z):
     space, unit = workspace(design, FULL), unit_with_gain(table, design, 0.3, 1)
-    fit, t = fit_whole(space, design, unit), space.layout.index_of("speed")
-    speed = space.terms[t]
-    z_cell = np.bincount(speed.cell, z, speed.n_cells) / np.maximum(np.bincount(speed.cell), 1)
-    joint = _Joint(space, ("position", "head_direction"), t, z_cell, fit)
-    cells = np.array([term.cell[unit.bins] for term in space.terms])
-    spikes = joint.spikes(cells, z_cell[cells[t]])
+    fit = fit_whole(space, design, unit)
+    model = GainModel(space, unit, fit, ("position", "head_direction"), "speed", z)
     n = len(fit.coefficients)
     point = np.append(fit.coefficients, [0.1, 0.25])
 
     def score_at(p):
-        mu, scale, effect = joint.rows(p[:n], p[n:])
-        return joint.step(p[:n], p[n:], spikes, mu, scale, effect)
+        return model.derivatives(model.at(p[:n], p[n:]))
 
     def value_at(p):
-        return joint.value(p[:n], p[n:], spikes, joint.rows(p[:n], p[n:])[0])
+        return model.at(p[:n], p[n:]).value
 
     score, hessian = score_at(point)
     for direction in np.random.default_rng(2).normal(size=(4, n + 2)):
@@ -67,7 +62,7 @@ def test_gains_are_recovered(table, design, z, gain):
     for seed in range(3):
         unit = unit_with_gain(table, design, gain, seed)
         fit = fit_whole(space, design, unit)
-        found = fit_gains(space, design, unit, fit, ("head_direction",), "speed", z)
+        found = fit_gains(space, unit, fit, ("head_direction",), "speed", z)
         assert found.converged and found.terms == ("head_direction",)
         errors.append((found.gains[0] - gain) / np.sqrt(found.covariance[0, 0]))
     assert np.all(np.abs(errors) < 4) and abs(np.mean(errors)) < 2
@@ -79,7 +74,7 @@ def test_a_gain_is_tested_and_told_in_bits(table, design, z):
     fit = fit_whole(space, design, unit)
     p = gain_test(space, design, unit, fit, z, plan, "head_direction")
     assert p == pytest.approx(1 / (1 + len(plan.drawn)))
-    found = fit_gains(space, design, unit, fit, ("head_direction",), "speed", z)
+    found = fit_gains(space, unit, fit, ("head_direction",), "speed", z)
     told = describe_gains(space, design, found, "speed", z, 2.0, {"head_direction": p})["head_direction"]
     assert told.fast_bits_per_spike > 1.5 * told.slow_bits_per_spike
     assert told.fast_bits_per_s > told.slow_bits_per_s > 0

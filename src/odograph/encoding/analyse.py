@@ -236,7 +236,7 @@ def _gains(design: SessionDesign, unit: UnitSpikes, space: Workspace, full: Scor
     if speed is None or not tuned:
         return {}
     z = modulation(design.speed_cm_s)
-    fitted = fit_gains(space, design, unit, full.fit, tuple(tuned), speed.name, z)
+    fitted = fit_gains(space, unit, full.fit, tuple(tuned), speed.name, z)
     if not fitted.converged:
         return {"speed_gain_status": "failed"}
     p = {}

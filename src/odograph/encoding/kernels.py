@@ -132,6 +132,32 @@ def information(
 
 
 @njit(cache=True, nogil=True)
+def scaled_counts(cells, seconds, scale, effects, cell_start, constant, mu):
+    """Expected count of every row when rows scale each term's effect; fills mu (n_rows,), returns its sum.
+
+    scale (n_terms, n_rows), effects (all cells,), constant the log rate without any term.
+    """
+    mu[:] = constant
+    for t in range(len(cell_start)):
+        for r in range(len(mu)):
+            mu[r] += scale[t, r] * effects[np.uint64(cell_start[t] + cells[t, r])]
+    total = 0.0
+    for r in range(len(mu)):
+        mu[r] = seconds[r] * np.exp(min(mu[r], 50.0))
+        total += mu[r]
+    return total
+
+
+@njit(cache=True, nogil=True)
+def scaled_sums(cells, value, scale, cell_start, out):
+    """Sums of value (n_rows,) times each term's scale over its cells; out (all cells,) is overwritten."""
+    out[:] = 0.0
+    for t in range(len(cell_start)):
+        for r in range(len(value)):
+            out[np.uint64(cell_start[t] + cells[t, r])] += value[r] * scale[t, r]
+
+
+@njit(cache=True, nogil=True)
 def scaled_information(
     cells, mu, scale, cell_start, cell_end, columns, weights, supports, offsets, sizes, hessian
 ):
