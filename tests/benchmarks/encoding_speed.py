@@ -31,7 +31,7 @@ from odograph.encoding.fit import Fit
 from odograph.encoding.layout import Workspace
 from odograph.encoding.select import select_model
 from odograph.encoding.shared import covariate_spectrum, shift_plan, workspace
-from odograph.encoding.shifts import bin_cells, null_model, shift_test
+from odograph.encoding.shifts import null_model, shift_test, step_cells
 from odograph.encoding.spikes import UnitSpikes, bin_spikes
 from odograph.settings.encoding import EncodingSettings, TermSettings
 
@@ -242,7 +242,7 @@ def one_test(design: SessionDesign, unit: UnitSpikes, name: str) -> int:
     space = workspace(design, tuple(other.name for other in design.terms if other.name != name))
     plan = shift_plan(design)
     null = null_model(space, fit_whole(space, design, unit), design, unit, plan)
-    cells = plan.at_steps(bin_cells(space, design))
+    cells = step_cells(space, plan)
     return shift_test(term, null, plan, covariate_spectrum(design, name), cells)[1]
 
 

@@ -8,12 +8,12 @@ from odograph.encoding.evaluate import fit_whole
 from odograph.encoding.shapes import classify, curve_shape, largest_climb
 from odograph.encoding.shared import workspace
 from odograph.encoding.shifts import (
-    bin_cells,
     null_model,
     plan_shifts,
     score_variance,
     shift_test,
     shifted_cell_sums,
+    step_cells,
     transform_covariate,
 )
 from odograph.encoding.slow_fast import compare_halves, running_halves
@@ -150,7 +150,7 @@ def p_of(design, counts, term, plan, *, by_fft=True):
     space = workspace(design, ())
     null = null_model(space, fit_whole(space, design, unit), design, unit, plan)
     spectrum = transform_covariate(term, plan) if by_fft else None
-    return shift_test(term, null, plan, spectrum, plan.at_steps(bin_cells(space, design)))
+    return shift_test(term, null, plan, spectrum, step_cells(space, plan))
 
 
 def test_all_shifts_by_fft_and_one_by_one_agree(design):
@@ -181,7 +181,7 @@ def test_variance_of_the_score_is_that_of_the_dense_regression(design):
     space = workspace(design, ("head_direction",))
     fit = fit_whole(space, design, unit)
     null = null_model(space, fit, design, unit, plan)
-    cells = plan.at_steps(bin_cells(space, design))
+    cells = step_cells(space, plan)
     X = np.hstack(
         [np.ones((plan.n_steps, 1))]
         + [(t.basis.dense() @ t.coordinates.matrix())[c] for t, c in zip(space.terms, cells, strict=True)]

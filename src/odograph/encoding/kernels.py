@@ -132,15 +132,16 @@ def information(
 
 
 @njit(cache=True, nogil=True)
-def scaled_counts(cells, seconds, scale, effects, cell_start, constant, mu):
-    """Expected count of every row when rows scale each term's effect; fills mu (n_rows,), returns its sum.
+def scaled_counts(cells, seconds, gains, z, effects, cell_start, constant, mu):
+    """Expected count of every row when rows scale the terms' effects; fills mu (n_rows,), returns its sum.
 
-    scale (n_terms, n_rows), effects (all cells,), constant the log rate without any term.
+    A row scales term t by 1 + gains[t] z[r]; gains (n_terms,), z (n_rows,), effects (all cells,), constant
+    the log rate without any term.
     """
     mu[:] = constant
     for t in range(len(cell_start)):
         for r in range(len(mu)):
-            mu[r] += scale[t, r] * effects[np.uint64(cell_start[t] + cells[t, r])]
+            mu[r] += (1 + gains[t] * z[r]) * effects[np.uint64(cell_start[t] + cells[t, r])]
     total = 0.0
     for r in range(len(mu)):
         mu[r] = seconds[r] * np.exp(min(mu[r], 50.0))
@@ -149,40 +150,44 @@ def scaled_counts(cells, seconds, scale, effects, cell_start, constant, mu):
 
 
 @njit(cache=True, nogil=True)
-def scaled_sums(cells, value, scale, cell_start, out):
+def scaled_sums(cells, value, gains, z, cell_start, out):
     """Sums of value (n_rows,) times each term's scale over its cells; out (all cells,) is overwritten."""
     out[:] = 0.0
     for t in range(len(cell_start)):
         for r in range(len(value)):
-            out[np.uint64(cell_start[t] + cells[t, r])] += value[r] * scale[t, r]
+            out[np.uint64(cell_start[t] + cells[t, r])] += value[r] * (1 + gains[t] * z[r])
 
 
 @njit(cache=True, nogil=True)
 def scaled_information(
-    cells, mu, scale, cell_start, cell_end, columns, weights, supports, offsets, sizes, hessian
+    cells, mu, gains, z, cell_start, cell_end, columns, weights, supports, offsets, sizes, hessian
 ):
-    """X'WX when rows scale each term's basis; scale (n_terms, n_rows), `hessian` is overwritten."""
+    """X'WX when rows scale each term's basis as in `scaled_counts`; `hessian` is overwritten."""
     hessian[:, :] = 0.0
     hessian[0, 0] = mu.sum()
     n_terms, n_rows = cells.shape
+    product = np.empty(n_rows)
     for t in range(n_terms):
-        a, z, s = cell_start[t], cell_end[t], supports[t]
-        once, twice = np.zeros(z - a), np.zeros(z - a)
+        a, e, s = cell_start[t], cell_end[t], supports[t]
+        once, twice = np.zeros(e - a), np.zeros(e - a)
         for r in range(n_rows):
-            once[cells[t, r]] += mu[r] * scale[t, r]
-            twice[cells[t, r]] += mu[r] * scale[t, r] ** 2
-        _diagonal_block(twice, columns[a:z, :s], weights[a:z, :s], offsets[t], hessian)
-        for c in range(z - a):
+            scale = 1 + gains[t] * z[r]
+            once[cells[t, r]] += mu[r] * scale
+            twice[cells[t, r]] += mu[r] * scale**2
+        _diagonal_block(twice, columns[a:e, :s], weights[a:e, :s], offsets[t], hessian)
+        for c in range(e - a):
             for j in range(s):
                 hessian[offsets[t] + columns[a + c, j], 0] += (once[c] - twice[c]) * weights[a + c, j]
         for u in range(t + 1, n_terms):
             b, y, q = cell_start[u], cell_end[u], supports[u]
+            for r in range(n_rows):
+                product[r] = mu[r] * (1 + gains[t] * z[r]) * (1 + gains[u] * z[r])
             _cross_block(
                 cells[t],
                 cells[u],
-                mu * scale[t] * scale[u],
-                columns[a:z, :s],
-                weights[a:z, :s],
+                product,
+                columns[a:e, :s],
+                weights[a:e, :s],
                 columns[b:y, :q],
                 weights[b:y, :q],
                 sizes[u],

@@ -102,16 +102,6 @@ def shifted_cell_sums(cell, residual, shift, out):
 
 
 @njit(cache=True, nogil=True)
-def bin_rates(cells, factors, starts, scale, out):
-    """Expected count of every valid bin: `scale` times one factor per term; cells (n_terms, n_bins)."""
-    for i in range(len(out)):
-        value = scale
-        for t in range(len(starts)):
-            value *= factors[starts[t] + cells[t, i]]
-        out[i] = value
-
-
-@njit(cache=True, nogil=True)
 def shifted_products(cells, starts, columns, weights, supports, offsets, value, cell, shift, out):
     """out[c] = sum of value[i] X[i] over steps whose tested covariate, turned by `shift`, lies in cell c.
 
@@ -158,30 +148,28 @@ def null_model(
     total = space.expected(fit.coefficients, ones)
     factors = np.exp(space.eta)
     gradient, information = space.derivatives(total)
-    cells = bin_cells(space, design)
-    mu = np.empty(design.n_bins)
-    bin_rates(cells, factors, space.layout.cell_start, np.exp(fit.coefficients[0]) * design.bin_s, mu)
+    places = list(zip(space.layout.cell_start, space.layout.cell_end, space.terms, strict=True))
+    mu = np.full(design.n_bins, np.exp(fit.coefficients[0]) * design.bin_s)
+    for start, end, term in places:
+        mu *= factors[start:end][term.cell]
     ridge = np.exp(fit.log_strengths) @ space.layout.spectra
     score = space.project(
         np.concatenate([unit.per_cell(t) for t in space.terms]) if space.terms else np.empty(0), unit.n_spikes
     )
     inverse = factorise(information + np.diag(UNDERSMOOTHING * ridge))[1]
     step = inverse @ (score - gradient)
-    space.expected(step, ones)  # leaves the step's effects at the cells in `eta`
+    effects = space.effects(step)
     shift = np.full(design.n_bins, step[0])
-    for t, start in enumerate(space.layout.cell_start):
-        shift += space.eta[start + cells[t]]
+    for start, end, term in places:
+        shift += effects[start:end][term.cell]
     residual = plan.per_step(unit.counts - mu * (1 + shift))
     return NullModel(residual - residual.mean(), plan.per_step(mu), space, inverse)
 
 
-def bin_cells(space: Workspace, design: SessionDesign) -> np.ndarray:
-    """The cell of every bin for each of a model's terms, (n_terms, n_bins) of int32."""
-    key = ("bins", tuple(term.name for term in space.terms))
-    if key not in design.kept:
-        cells = [term.cell for term in space.terms]
-        design.kept[key] = np.array(cells, dtype=np.int32).reshape(len(cells), design.n_bins)
-    return design.kept[key]
+def step_cells(space: Workspace, plan: ShiftPlan) -> np.ndarray:
+    """The cell of each of a model's terms in the middle of every step, (n_terms, n_steps) of int32."""
+    cells = [plan.cells(term) for term in space.terms]
+    return np.array(cells, dtype=np.int32).reshape(len(cells), plan.n_steps)
 
 
 def transform_covariate(term: Term, plan: ShiftPlan) -> np.ndarray | None:

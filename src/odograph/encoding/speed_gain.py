@@ -64,8 +64,8 @@ class Point:
         Every term's part of the log rate at its cells, unscaled, laid end to end.
     mu : ndarray, (n_rows,)
         Expected spikes of every row.
-    scale : ndarray, (n_terms, n_rows)
-        1 + g z of scaled terms, 1 of the others.
+    by_term : ndarray, (n_terms,)
+        The gains of all terms, 0 of those that are not scaled.
     value : float
         Penalised log-likelihood.
     """
@@ -74,7 +74,7 @@ class Point:
     gains: np.ndarray
     effects: np.ndarray
     mu: np.ndarray
-    scale: np.ndarray
+    by_term: np.ndarray
     value: float
 
 
@@ -144,16 +144,15 @@ class GainModel:
     def at(self, coefficients: np.ndarray, gains: np.ndarray) -> Point:
         """The model at some parameters."""
         effects = self.space.effects(coefficients).copy()
-        scale = np.ones(self.cells.shape)
-        for g, t in zip(gains, self.scaled, strict=True):
-            scale[t] += g * self.z
-        mu = np.empty(len(self.z))
+        by_term = np.zeros(len(self.cells))
+        by_term[self.scaled] = gains
+        mu, seconds, starts = np.empty(len(self.z)), self.lay.table.seconds, self.lay.cell_start
         total = kernels.scaled_counts(
-            self.cells, self.lay.table.seconds, scale, effects, self.lay.cell_start, coefficients[0], mu
+            self.cells, seconds, by_term, self.z, effects, starts, coefficients[0], mu
         )
         value = self.n_spikes * coefficients[0] + effects @ self.seen(gains) - total
         value -= self.ridge @ coefficients**2 / 2
-        return Point(coefficients, gains, effects, mu, scale, float(value))
+        return Point(coefficients, gains, effects, mu, by_term, float(value))
 
     def derivatives(self, point: Point) -> tuple[np.ndarray, np.ndarray]:
         """Score, (n + n_scaled,), and negative Hessian of the penalised likelihood at a point."""
@@ -170,7 +169,7 @@ class GainModel:
             total = pull.sum()
             score[n + i] = point.effects[self.of(t)] @ self.weighted[self.of(t)] - total
             crossed = np.empty(len(self.spikes))
-            kernels.scaled_sums(self.cells, pull, point.scale, self.lay.cell_start, crossed)
+            kernels.scaled_sums(self.cells, pull, point.by_term, self.z, self.lay.cell_start, crossed)
             # The predictor is bilinear in f_t and g_t, so the residual enters the observed Hessian as well.
             n_cells = len(point.effects[self.of(t)])
             crossed[self.of(t)] -= self.weighted[self.of(t)]
@@ -184,7 +183,7 @@ class GainModel:
         """X'WX and X'mu of the bases as scaled at the point."""
         raw = np.empty((self.lay.n_splines, self.lay.n_splines))
         kernels.scaled_information(
-            self.cells, point.mu, point.scale, *self.space.flat, self.lay.spline_count, raw
+            self.cells, point.mu, point.by_term, self.z, *self.space.flat, self.lay.spline_count, raw
         )
         information = self.space.reduce(raw)
         return information, information[:, 0].copy()

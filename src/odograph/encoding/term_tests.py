@@ -5,7 +5,7 @@ from __future__ import annotations
 from odograph.encoding.design import SessionDesign
 from odograph.encoding.fit import Fit
 from odograph.encoding.shared import covariate_spectrum, shift_plan, workspace
-from odograph.encoding.shifts import bin_cells, null_model, shift_test
+from odograph.encoding.shifts import null_model, shift_test, step_cells
 from odograph.encoding.spikes import UnitSpikes
 
 
@@ -27,7 +27,7 @@ def term_tests(
         others = tuple(name for name in names if name != term.name)
         space = workspace(design, others)
         null = null_model(space, fits[others], design, unit, plan)
-        cells = plan.at_steps(bin_cells(space, design))
+        cells = step_cells(space, plan)
         spectrum = covariate_spectrum(design, term.name)
         out[term.name] = shift_test(term, null, plan, spectrum, cells)
     return out
