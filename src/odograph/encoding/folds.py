@@ -14,7 +14,7 @@ class Folds:
     """Interleaved contiguous blocks with guard gaps.
 
     A bin's group says which fold holds it out and, near a block's border, which neighbouring fold's training
-    leaves it out as well: group = fold + n_folds * (0, or 1 + the neighbour's fold).
+    leaves it out as well: group = fold + n_folds * (0, or 1 + the neighbour's fold), (n_bins,) of int32.
     """
 
     n_folds: int
@@ -59,4 +59,4 @@ def make_folds(time_s: np.ndarray, settings: EncodingSettings) -> Folds:
             guard[inside][t - time_s[last[b - 1]] <= reach] = 1 + (b - 1) % settings.folds
         if b + 1 < n_blocks:
             guard[inside][time_s[first[b + 1]] - t <= reach] = 1 + (b + 1) % settings.folds
-    return Folds(settings.folds, fold + settings.folds * guard)
+    return Folds(settings.folds, (fold + settings.folds * guard).astype(np.int32))

@@ -21,7 +21,7 @@ from odograph.encoding.layout import Workspace
 from odograph.encoding.shifts import ShiftPlan, null_model
 from odograph.encoding.spikes import UnitSpikes
 
-COORDINATES_AT_ONCE = 8  # in cross-correlations, to bound their memory
+COORDINATES_AT_ONCE = 4  # in cross-correlations, to bound their memory
 
 
 def gain_test(

@@ -39,6 +39,7 @@ from odograph.encoding.terms import Term
 FFT_LIMIT = 4_000_000  # numbers in a term's transformed basis: about 60 MB
 UNDERSMOOTHING = 0.05
 VARIANCE_SHIFTS = 16
+SHIFTS_AT_ONCE = 16384  # to bound the memory of intermediate results
 SMOOTHNESS = (0.06, 0.25, 0.8)
 
 
@@ -233,15 +234,21 @@ def shift_test(
     at_truth, away, weights = _standardisers(term, null, plan, cells)
     shifts = plan.shifts if spectrum is not None else plan.drawn
     if spectrum is not None:
-        turned = fft.irfft(np.conj(fft.rfft(null.residual)) * spectrum, n=plan.n_steps, axis=1)
-        truth, sums = turned[:, :1], turned[:, shifts]
+        turned = np.empty((len(spectrum), plan.n_steps))
+        residual = np.conj(fft.rfft(null.residual))
+        for row, one in zip(turned, spectrum, strict=True):
+            row[:] = fft.irfft(residual * one, n=plan.n_steps)
+        truth, sums = turned[:, :1], turned[:, shifts[0] : shifts[-1] + 1]
     else:
         per_cell = np.empty((len(shifts) + 1, term.n_cells))
         for row, shift in enumerate(np.append(0, shifts)):
             shifted_cell_sums(plan.cells(term), null.residual, int(shift), per_cell[row])
         sums = (per_cell @ term.functions).T
         truth, sums = sums[:, :1], sums[:, 1:]
-    statistic = _largest(weights @ np.hstack([at_truth @ truth, away @ sums]) ** 2)
+    squares = [weights @ (at_truth @ truth) ** 2]
+    for first in range(0, len(shifts), SHIFTS_AT_ONCE):
+        squares.append(weights @ (away @ sums[:, first : first + SHIFTS_AT_ONCE]) ** 2)
+    statistic = _largest(np.hstack(squares))
     # Rounding must not decide ties, which occur where a covariate repeats itself.
     exceed = int(np.sum(statistic[1:] >= statistic[0] - 1e-9 * abs(statistic[0])))
     return (1 + exceed) / (1 + len(shifts)), len(shifts)
