@@ -6,7 +6,7 @@ Bands: Wood 2006, Aust. N.Z. J. Stat. 48:445, with the uncertainty of the mean l
 from __future__ import annotations
 
 import numpy as np
-from scipy.stats import norm
+from scipy.special import ndtri
 
 from odograph.descriptors.rate_map import circular_rate, line_rate, smoothed_rate
 from odograph.encoding.design import SessionDesign
@@ -15,7 +15,7 @@ from odograph.encoding.layout import Layout
 from odograph.encoding.spikes import UnitSpikes
 from odograph.encoding.terms import Term
 
-BAND = float(norm.ppf(0.975))
+BAND = float(ndtri(0.975))
 OBSERVED_SIGMA_CELLS = 1.5
 
 
