@@ -10,7 +10,6 @@ from dataclasses import dataclass
 
 import numpy as np
 from numba import njit
-from scipy.signal import lfilter
 
 from odograph.encoding.speed_gain import modulation
 
@@ -52,6 +51,8 @@ class Tuning:
 
 def _smooth_noise(rng: np.random.Generator, n: int, seconds: float) -> np.ndarray:
     """Gaussian noise of variance 1 that forgets itself exponentially within `seconds`, (n,)."""
+    from scipy.signal import lfilter  # here, so that a shard whose memory is measured goes without it
+
     keep = np.exp(-BIN_S / seconds)
     white = rng.standard_normal(n)
     white[1:] *= np.sqrt(1 - keep**2)
