@@ -18,7 +18,7 @@ from odograph.settings.encoding import EncodingSettings
 def score(model, gains, spikes=1000):
     gains = np.asarray(gains, dtype=float)
     bits = gains.sum() / (spikes * np.log(2))
-    return Score(tuple(model), gains, spikes, bits, 0.0, 0.0, True, None)
+    return Score(tuple(model), gains, spikes, bits, 0.0, 0.0, True, None, None)
 
 
 def test_bits_per_spike_of_a_unit_that_fires_in_part_of_the_arena(table):

@@ -19,6 +19,7 @@ from odograph.encoding.design import SessionDesign, model_name
 from odograph.encoding.evaluate import Score, evaluate, fold_spikes
 from odograph.encoding.gain_meaning import describe_gains
 from odograph.encoding.gain_test import gain_test
+from odograph.encoding.goodness import judge
 from odograph.encoding.layout import Workspace
 from odograph.encoding.select import best_score, select_model
 from odograph.encoding.shapes import curve_shape
@@ -107,6 +108,9 @@ def analyse_unit(
         for name, (p, shifts) in term_tests(design, unit, {x.model: x.fit for x in scores}).items():
             row |= {f"{name}_p": p, f"{name}_shifts": shifts}
     full = _by_model(scores)[tuple(term.name for term in design.terms)]
+    selected = next(score for score in scores if model_name(score.model) == row["selected_model"])
+    found, drawn = _goodness(design, unit, selected)
+    row, curves = row | found, curves | drawn
     space = workspace(design, full.model)
     curves |= tuning_curves(design, unit, space.layout, full.fit)
     row |= _information(design, unit, curves)
@@ -150,6 +154,11 @@ def _empty_row(design: SessionDesign, unit: UnitSpikes) -> dict:
         "best_model": "",
         "selected_bits_per_spike": np.nan,
         "selected_deviance_explained": np.nan,
+        "rescaling_ks": np.nan,
+        "rescaling_ks_p": np.nan,
+        "rescaling_intervals": 0,
+        "residual_correlation_peak": np.nan,
+        "residual_correlation_peak_lag_s": np.nan,
         "speed_shape": "",
         "speed_shape_probability": np.nan,
         "slow_fast_cut_cm_s": np.nan,
@@ -189,6 +198,25 @@ def _selection(design: SessionDesign, scores: list[Score]) -> dict:
         "selected_deviance_explained": selected.deviance_explained,
     }
     return out | {f"encodes_{term.name}": term.name in selected.model for term in design.terms}
+
+
+def _goodness(design: SessionDesign, unit: UnitSpikes, selected: Score) -> tuple[dict, dict]:
+    """How well the selected model describes held-out time: columns of the row, and curves."""
+    rescaling, residuals = judge(workspace(design, selected.model), design, unit, selected)
+    peak, lag_s = residuals.peak
+    row = {
+        "rescaling_ks": rescaling.statistic,
+        "rescaling_ks_p": rescaling.p,
+        "rescaling_intervals": rescaling.n_intervals,
+        "residual_correlation_peak": peak,
+        "residual_correlation_peak_lag_s": lag_s,
+    }
+    curves = {
+        "residual_lag_s": residuals.lag_s,
+        "residual_autocorrelation": residuals.correlation,
+        "residual_band": residuals.band,
+    }
+    return row, curves
 
 
 def _coarse_cell(design: SessionDesign, term: Term) -> np.ndarray:

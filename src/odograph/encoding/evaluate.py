@@ -38,6 +38,8 @@ class Score:
         Every fold's fit converged.
     fit : Fit
         The fit to all data.
+    fold_coefficients : ndarray, (n_folds, n_coordinates)
+        What was fitted without each fold.
     """
 
     model: tuple[str, ...]
@@ -48,6 +50,7 @@ class Score:
     deviance_explained: float
     converged: bool
     fit: Fit
+    fold_coefficients: np.ndarray
 
 
 @dataclass(frozen=True)
@@ -113,15 +116,16 @@ def evaluate(space: Workspace, model: tuple[str, ...], design, unit: UnitSpikes,
     """
     whole = fit_whole(space, design, unit)
     folds, names = design.folds, [term.name for term in space.terms]
-    gain, converged = np.zeros(folds.n_folds), whole.converged
+    gain, converged, coefficients = np.zeros(folds.n_folds), whole.converged, []
     for fold in range(folds.n_folds):
         spikes = np.concatenate([[tables.n_training[fold]], *(tables.training[n][fold] for n in names)])
         fit = fit_model(space, spikes, folds.training(fold).astype(float), whole)
         converged = converged and fit.converged
+        coefficients.append(fit.coefficients)
         seen = np.concatenate([[tables.n_held_out[fold]], *(tables.held_out[n][fold] for n in names)])
         expected = fit.expected_spikes @ folds.held_out(fold)
         gain[fold] = seen @ fit.coefficients - expected - _constant_rate(tables, fold)
-    return _score(model, gain, tables, whole, converged)
+    return _score(model, gain, tables, whole, converged, np.array(coefficients))
 
 
 def _constant_rate(tables: FoldSpikes, fold: int) -> float:
@@ -130,7 +134,7 @@ def _constant_rate(tables: FoldSpikes, fold: int) -> float:
     return float(xlogy(tables.n_held_out[fold], rate) - rate * tables.held_out_s[fold])
 
 
-def _score(model, gain, tables, whole, converged) -> Score:
+def _score(model, gain, tables, whole, converged, fold_coefficients) -> Score:
     n = int(tables.n_held_out.sum())
     to_bits = 1 / (max(n, 1) * np.log(2))
     constant = sum(_constant_rate(tables, fold) for fold in range(len(gain)))
@@ -143,4 +147,5 @@ def _score(model, gain, tables, whole, converged) -> Score:
         deviance_explained=float(gain.sum() / (tables.saturated - constant)),
         converged=converged,
         fit=whole,
+        fold_coefficients=fold_coefficients,
     )

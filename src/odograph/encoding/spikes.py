@@ -20,12 +20,15 @@ class UnitSpikes:
         Index among the valid bins, ascending.
     all_bins : ndarray of int64, (n_spikes,)
         Index among all analysis bins.
+    within : ndarray, (n_spikes,)
+        Place in the bin, 0 to 1.
     counts : ndarray, (n_bins,)
         Spikes per valid bin.
     """
 
     bins: np.ndarray
     all_bins: np.ndarray
+    within: np.ndarray
     counts: np.ndarray
 
     @property
@@ -47,9 +50,12 @@ def bin_spikes(design: SessionDesign, spike_times_s: np.ndarray) -> UnitSpikes:
     spike_times_s : ndarray, (n,)
         Recording clock.
     """
-    index = np.searchsorted(design.edges_s, np.sort(spike_times_s), side="right") - 1
-    index = index[(index >= 0) & (index < len(design.valid))]
-    index = index[design.valid[index]]
+    times = np.sort(spike_times_s)
+    index = np.searchsorted(design.edges_s, times, side="right") - 1
+    inside = (index >= 0) & (index < len(design.valid))
+    inside[inside] = design.valid[index[inside]]
+    index = index[inside]
+    within = np.clip((times[inside] - design.edges_s[index]) / design.bin_s, 0.0, 1.0)
     rank = np.cumsum(design.valid) - 1
     bins = rank[index]
-    return UnitSpikes(bins, index, np.bincount(bins, minlength=design.n_bins).astype(float))
+    return UnitSpikes(bins, index, within, np.bincount(bins, minlength=design.n_bins).astype(float))
