@@ -20,7 +20,7 @@ BIN_S = 0.02
 
 
 def test_intervals_in_expected_spikes():
-    # By hand: bins expect 0.5, 1 and 2 spikes; spikes half into the first, a quarter into the third, at its end.
+    # By hand: bins expect 0.5, 1 and 2 spikes; one spike half into the first, two in the third
     found = rescaled_intervals(np.array([0.5, 1.0, 2.0]), np.array([0, 2, 2]), np.array([0.5, 0.25, 1.0]))
     np.testing.assert_allclose(found, [0.25, 1.75, 1.5])
 
