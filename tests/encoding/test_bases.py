@@ -114,3 +114,20 @@ def test_what_each_penalty_leaves_free():
     ]:
         assert np.count_nonzero(c.spectra.sum(axis=0) > 1e-9) == rank
         assert np.all(c.spectra >= 0)
+
+
+def test_slope_energy_of_known_curves():
+    # Exact, over unit knots 0..6: the integral of the squared slope of x is 6, of x^2 it is 4 * 6^3 / 3.
+    size = 9
+    grid = np.linspace(0, size - 3, 200)
+    for power, expected in ((0, 0.0), (1, 6.0), (2, 288.0)):
+        values = grid**power
+        coefficients, *_ = np.linalg.lstsq(open_basis(grid, 0, size - 3, size).dense(), values, rcond=None)
+        assert coefficients @ gram(size, 1) @ coefficients == pytest.approx(expected, abs=1e-9)
+
+
+def test_coordinates_carry_the_slope_penalty():
+    c, b = curve_coordinates(9, order=1), np.random.default_rng(1).normal(size=8)
+    spline = c.matrix() @ b
+    assert c.spectra[0] @ b**2 == pytest.approx(spline @ gram(9, 1) @ spline)
+    assert np.all(c.spectra > 1e-3)  # nothing but the constant, which is left out, goes free

@@ -1,9 +1,9 @@
 """Cubic B-spline bases on uniform knots, open and cyclic, and their derivative penalties.
 
 A basis is evaluated in its sparse form: at any point exactly four splines are non-zero. Penalties are
-integrals of squared second derivatives in units of the knot spacing, computed exactly by Gauss-Legendre
-quadrature (Eilers & Marx 1996, Stat. Sci. 11:89, for splines with penalties; Wood 2017, Generalized Additive
-Models, 2nd ed., section 5.3, for derivative penalties).
+integrals of squared first or second derivatives in units of the knot spacing, computed exactly by
+Gauss-Legendre quadrature (Eilers & Marx 1996, Stat. Sci. 11:89, for splines with penalties; Wood 2017,
+Generalized Additive Models, 2nd ed., section 5.3, for derivative penalties).
 """
 
 from __future__ import annotations
@@ -162,9 +162,13 @@ def _diagonalise(stiffness: np.ndarray, mass: np.ndarray, linear: bool) -> tuple
     return np.column_stack([*basis, vectors]), np.concatenate([np.zeros(len(null)), values[keep]])
 
 
-def curve_coordinates(size: int, *, cyclic: bool = False) -> Coordinates:
-    """Integrated squared second derivative of a curve; straight lines (circle: constants) go unpenalised."""
-    factor, values = _diagonalise(gram(size, 2, cyclic=cyclic), gram(size, 0, cyclic=cyclic), not cyclic)
+def curve_coordinates(size: int, *, cyclic: bool = False, order: int = 2) -> Coordinates:
+    """Integrated squared derivative of a curve of order 1 or 2.
+
+    The second derivative leaves straight lines unpenalised (on a circle constants), the first constants only.
+    """
+    stiffness = gram(size, order, cyclic=cyclic)
+    factor, values = _diagonalise(stiffness, gram(size, 0, cyclic=cyclic), order == 2 and not cyclic)
     return Coordinates((factor,), values[None, 1:])
 
 

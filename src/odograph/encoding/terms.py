@@ -3,7 +3,7 @@
 | kind     | covariate                | basis                           | left unpenalised        |
 |----------|--------------------------|---------------------------------|-------------------------|
 | plane    | two coordinates          | tensor product of cubic splines | 1, x, y, xy             |
-| line     | one coordinate           | cubic B-splines                 | straight lines          |
+| line     | one coordinate           | cubic B-splines                 | straight lines, or none |
 | circle   | an angle of period 2 pi  | cyclic cubic B-splines          | the constant            |
 | category | levels of a state        | one column a level              | nothing (ridge)         |
 """
@@ -149,7 +149,7 @@ def _line(term, values):
     cell, centres = _axis(values[0], *span, term.cells)
     return (
         open_basis(centres, *span, term.basis_size),
-        curve_coordinates(term.basis_size),
+        curve_coordinates(term.basis_size, order=term.penalty_order),
         cell,
         (centres,),
         (span,),

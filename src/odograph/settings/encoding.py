@@ -18,6 +18,9 @@ class TermSettings(StageSettings):
     kind: TermKind = setting(..., "plane (two coordinates), line, circle (period 2 pi rad) or category")
     columns: list[str] = setting(..., "columns of the behaviour table: two for a plane, else one")
     basis_size: int = setting(10, "B-splines per axis (ignored for a category)", ge=4, le=40)
+    penalty_order: Literal[1, 2] = setting(
+        2, "derivative a line's penalty is on: 2 leaves straight lines free, 1 shrinks to a constant"
+    )
     cells: int = setting(40, "grid cells per axis on which the covariate is discretised", ge=8, le=200)
     low: float | None = setting(None, "lower end of the range; null takes it from the data")
     high: float | None = setting(None, "upper end of the range; null takes it from the data")
@@ -27,6 +30,8 @@ class TermSettings(StageSettings):
         wanted = 2 if self.kind == "plane" else 1
         if len(self.columns) != wanted:
             raise ValueError(f"a term of kind {self.kind} takes {wanted} column(s), not {len(self.columns)}")
+        if self.penalty_order != 2 and self.kind != "line":
+            raise ValueError(f"penalty_order is a setting of lines; a {self.kind} has its own penalty")
         if self.low is not None and self.high is not None and self.low >= self.high:
             raise ValueError("low must be below high")
         return self
