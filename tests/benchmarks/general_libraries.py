@@ -27,7 +27,7 @@ R_SCRIPT = Path(__file__).with_name("full_model.R")
 
 def model_terms(design: SessionDesign, model: tuple[str, ...]) -> list[Term]:
     """The terms of a model, drift included."""
-    return [term for term in design.terms if term.name in model] + ([design.drift] if design.drift else [])
+    return [*(term for term in design.terms if term.name in model), *design.nuisance]
 
 
 def sparse_design(terms: list[Term], keep: np.ndarray) -> sparse.csc_matrix:

@@ -20,6 +20,7 @@ from odograph.encoding.evaluate import Score, evaluate, fold_spikes
 from odograph.encoding.gain_meaning import describe_gains
 from odograph.encoding.gain_test import gain_test
 from odograph.encoding.goodness import judge
+from odograph.encoding.history import fitted_filter, with_history
 from odograph.encoding.layout import Workspace
 from odograph.encoding.select import best_score, select_model
 from odograph.encoding.shapes import curve_shape
@@ -88,6 +89,8 @@ def analyse_unit(
         A unit that cannot be fitted comes back with `status` and `status_reason`, and without curves.
     """
     design = _observed_design(design, observed_s)
+    if settings.history_s > 0:
+        design = with_history(design, spike_times_s)
     unit = bin_spikes(design, np.asarray(spike_times_s, dtype=float))
     row = _empty_row(design, unit)
     curves = {"spike_bins": unit.all_bins.astype(np.int32)}
@@ -113,6 +116,9 @@ def analyse_unit(
     row, curves = row | found, curves | drawn
     space = workspace(design, full.model)
     curves |= tuning_curves(design, unit, space.layout, full.fit)
+    if design.history is not None:
+        fitted = fitted_filter(design, space.layout, full.fit)
+        curves |= {f"history_{name}": values for name, values in vars(fitted).items()}
     row |= _information(design, unit, curves)
     row |= _shape(design, space, full, row)
     row |= _gains(design, unit, space, full, row)

@@ -21,7 +21,7 @@ from odograph.settings.encoding import EncodingSettings
 
 @dataclass(frozen=True)
 class RowTable:
-    """The collapsed rows of one model; terms in the order of falling cell number.
+    """The collapsed rows of one model; planes first, then terms in the order of falling cell number.
 
     Attributes
     ----------
@@ -51,12 +51,15 @@ class SessionDesign:
     valid : ndarray of bool, (n_all_bins,)
     terms : tuple of Term
         The variables that may be encoded, as configured.
-    drift : Term or None
+    nuisance : tuple of Term
+        Terms of every model, never tested: the slow drift, a unit's spike history.
     folds : Folds
     speed_cm_s : ndarray, (n_bins,)
         Running speed in valid bins; empty when the table has none.
     columns : dict of ndarray, each (n_all_bins,)
         The behaviour columns that terms use.
+    history : ndarray, (n_lags, n_functions), or None
+        Functions of the spike history, see `odograph.encoding.history`.
     kept : dict
         What is worked out once and used for every unit (row tables, workspaces, restricted designs).
     """
@@ -65,11 +68,12 @@ class SessionDesign:
     edges_s: np.ndarray
     valid: np.ndarray
     terms: tuple[Term, ...]
-    drift: Term | None
+    nuisance: tuple[Term, ...]
     folds: Folds
     speed_cm_s: np.ndarray
     columns: dict[str, np.ndarray]
     settings: EncodingSettings
+    history: np.ndarray | None = None
     kept: dict = field(default_factory=dict, repr=False, compare=False)
 
     @property
@@ -85,8 +89,7 @@ class SessionDesign:
         """The row table of a model, built on first use."""
         if ("table", model) not in self.kept:
             chosen = [term for term in self.terms if term.name in model]
-            table = collapse(chosen + ([self.drift] if self.drift else []), self.folds, self.bin_s)
-            self.kept["table", model] = table
+            self.kept["table", model] = collapse([*chosen, *self.nuisance], self.folds, self.bin_s)
         return self.kept["table", model]
 
 
@@ -96,18 +99,17 @@ def model_name(model: tuple[str, ...]) -> str:
 
 
 def collapse(terms: list[Term], folds: Folds, bin_s: float) -> RowTable:
-    """Merge bins with equal cells and equal group into rows."""
-    ordered = sorted(terms, key=lambda term: (-term.n_cells, term.name))
-    key = np.zeros(len(folds.group), dtype=np.int64)
-    for term in ordered:
-        key = key * term.n_cells + term.cell
-    key = key * folds.n_groups + folds.group
-    unique, counts = np.unique(key, return_counts=True)
-    rest, group = np.divmod(unique, folds.n_groups)
-    cells = np.empty((len(ordered), len(unique)), dtype=np.int32)
-    for i in range(len(ordered) - 1, -1, -1):
-        rest, cells[i] = np.divmod(rest, ordered[i].n_cells)
-    return RowTable(tuple(ordered), cells, counts * bin_s, group.astype(np.int32))
+    """Merge bins with equal cells and group into rows; planes come first, then terms by falling cells."""
+    ordered = sorted(terms, key=lambda term: (term.kind != "plane", -term.n_cells, term.name))
+    key, size = np.zeros(len(folds.group), dtype=np.int64), 1
+    for n_cells, cell in [(t.n_cells, t.cell) for t in ordered] + [(folds.n_groups, folds.group)]:
+        if size > np.iinfo(np.int64).max // n_cells:
+            key = np.unique(key, return_inverse=True)[1].astype(np.int64)
+            size = len(key)
+        key, size = key * n_cells + cell, size * n_cells
+    _, first, counts = np.unique(key, return_index=True, return_counts=True)
+    cells = np.array([term.cell[first] for term in ordered], dtype=np.int32).reshape(len(ordered), len(first))
+    return RowTable(tuple(ordered), cells, counts * bin_s, folds.group[first])
 
 
 def prepare_session(behaviour: dict[str, np.ndarray], settings: EncodingSettings) -> SessionDesign:
@@ -174,7 +176,7 @@ def _discretise(behaviour, time_s, valid, bin_s, settings) -> SessionDesign:
         edges_s=edges,
         valid=valid,
         terms=terms,
-        drift=make_drift(time_s[valid], settings) if settings.drift else None,
+        nuisance=(make_drift(time_s[valid], settings),) if settings.drift else (),
         folds=make_folds(time_s[valid], settings),
         speed_cm_s=speed[valid] if len(speed) else speed,
         columns=columns,

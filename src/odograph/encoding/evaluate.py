@@ -79,7 +79,7 @@ class FoldSpikes:
 def fold_spikes(design: SessionDesign, unit: UnitSpikes) -> FoldSpikes:
     """Tabulate a unit's spikes for every fold of its session."""
     folds = design.folds
-    terms = [*design.terms, *([design.drift] if design.drift else [])]
+    terms = [*design.terms, *design.nuisance]
     group = folds.group[unit.bins]
     seconds = np.bincount(folds.group, minlength=folds.n_groups) * design.bin_s
     use = np.array([folds.training(fold) for fold in range(folds.n_folds)])

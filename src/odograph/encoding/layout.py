@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from odograph.encoding import kernels
-from odograph.encoding.bases import Coordinates
+from odograph.encoding.bases import SUPPORT, Coordinates
 from odograph.encoding.design import RowTable
 from odograph.encoding.terms import Term
 
@@ -168,7 +168,11 @@ class Workspace:
             layout.support,
             layout.spline_start,
         )
-        if self.terms and self.terms[0].kind == "plane":
+        # The plane's way asks that all other terms have few splines at a point; a second plane has not.
+        self._plane_first = bool(
+            self.terms and self.terms[0].kind == "plane" and np.all(layout.support[1:] <= SUPPORT)
+        )
+        if self._plane_first:
             first = layout.table.cells[0]
             self._row_start = np.searchsorted(first, np.arange(self.terms[0].n_cells + 1))
             self._joint_start, size = _joint_places([term.n_cells for term in self.terms])
@@ -219,7 +223,7 @@ class Workspace:
         lay = self.layout
         if not self.terms:
             return np.array([total]), np.array([[total]])
-        if self.terms[0].kind == "plane":
+        if self._plane_first:
             self._plane_information()
         else:
             kernels.cell_sums(lay.table.cells, self.mu, lay.cell_start, self._sums)

@@ -59,6 +59,14 @@ class EncodingSettings(StageSettings):
     )
     drift: bool = setting(True, "give every model a slow drift of the rate over the session (never tested)")
     drift_knot_s: float = setting(300.0, "spacing of the drift's knots", unit="s", ge=30)
+    history_s: float = setting(
+        0.0,
+        "reach of the spike history that every model has (never tested); 0 for none",
+        unit="s",
+        ge=0,
+        le=2,
+    )
+    history_functions: int = setting(4, "raised cosines that make up the spike history", ge=2, le=4)
     folds: int = setting(10, "held-out folds, each made of interleaved contiguous blocks", ge=3, le=30)
     blocks_per_fold: int = setting(5, "blocks per fold", ge=1, le=50)
     guard_s: float = setting(
@@ -83,6 +91,15 @@ class EncodingSettings(StageSettings):
         2.0, "slow and fast running are both taken from samples above this speed", unit="cm/s", ge=0
     )
     seed: int = setting(20260, "seed of every random draw in this stage", ge=0)
+
+    @model_validator(mode="after")
+    def _history_stays_within_the_guard(self) -> EncodingSettings:
+        if self.history_s > self.guard_s:
+            raise ValueError(
+                f"history_s ({self.history_s:g} s) must not exceed guard_s ({self.guard_s:g} s), else spikes "
+                "of held-out time would reach the bins that train; raise guard_s as well"
+            )
+        return self
 
     @model_validator(mode="after")
     def _names_are_unique(self) -> EncodingSettings:
