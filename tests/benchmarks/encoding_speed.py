@@ -5,7 +5,7 @@
 Simulated sessions at 50 Hz, units of five kinds from untuned to tuned to everything. Times are medians, and
 CPU seconds of one core unless a line says otherwise, so that other work on the machine counts little. Other
 libraries (glum and scikit-learn, R's mgcv) are measured where they are installed, on the same time bins in
-the same run. About three minutes. glum comes with the extra `benchmark`, mgcv with Debian's r-cran-mgcv.
+the same run. About three minutes. mgcv comes with Debian's r-cran-mgcv.
 """
 
 from __future__ import annotations

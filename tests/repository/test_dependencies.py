@@ -56,10 +56,10 @@ def test_conda_and_pip_install_the_same():
     assert environment["name"] == PROJECT["project"]["name"]
 
 
-def test_make_installs_every_extra_but_the_benchmarks():
+def test_make_installs_every_extra():
     makefile = (ROOT / "Makefile").read_text(encoding="utf-8")
     assert f'".[{",".join(INSTALLED_EXTRAS)}]"' in makefile
-    assert PROJECT["project"]["optional-dependencies"].keys() == {*INSTALLED_EXTRAS, "benchmark"}
+    assert PROJECT["project"]["optional-dependencies"].keys() == set(INSTALLED_EXTRAS)
 
 
 def test_the_pinned_versions_satisfy_what_is_declared():
