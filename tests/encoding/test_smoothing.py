@@ -59,10 +59,10 @@ def test_tuning_ends_where_the_gradient_vanishes_and_the_classical_update_stands
         state = tune(problem, rho, choose=True, tolerance=1e-12)
         rho = state.log_strengths
     there = _Solved(problem, rho)
-    inside = rho < LARGEST_LOG_STRENGTH
-    assert state.settled and inside.any()
-    np.testing.assert_allclose(there.gradient[inside], 0, atol=5e-4)
-    np.testing.assert_allclose(there.fellner_schall()[inside], rho[inside], atol=5e-3)
+    inside = rho < LARGEST_LOG_STRENGTH / 2  # beyond, the likelihood is as good as flat
+    assert state.settled and inside.sum() == 2
+    np.testing.assert_allclose(there.gradient[inside], 0, atol=1e-4)
+    np.testing.assert_allclose(there.fellner_schall()[inside], rho[inside], atol=1e-4)
 
 
 def test_a_useless_penalty_goes_to_its_bound():
