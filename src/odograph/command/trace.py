@@ -48,6 +48,7 @@ def add_parser(subparsers: argparse._SubParsersAction[argparse.ArgumentParser]) 
 
 def run(args: argparse.Namespace) -> int:
     """Trace the product named by `args.target`; returns the exit code."""
+    from odograph.command.setting_places import with_places
     from odograph.provenance.trace import find_start, trace
 
     try:
@@ -57,45 +58,12 @@ def run(args: argparse.Namespace) -> int:
             print(json.dumps({"schema_version": 1, "problems": [error.message()]}, indent=1))
         print(error.message(), file=sys.stderr)
         return EXIT_NO_INPUT
-    config = args.results.resolve().parent / "config" / "config.yaml"
-    settings = with_places(found.settings(), config)
+    settings = with_places(found.settings(), args.results.resolve().parent)
     if args.json:
         print(json.dumps(found.document() | {"settings": settings}, indent=1, sort_keys=True))
     else:
         print("\n".join(text_lines(found, settings, everything=args.all)))
     return EXIT_DATA if found.problems else EXIT_OK
-
-
-def with_places(rows: list[dict[str, Any]], config: Path) -> list[dict[str, Any]]:
-    """Add to each setting its line of the configuration, its default, and its value there now."""
-    from odograph.settings.load import key_lines, load_settings, settings_table
-
-    lines: dict[tuple, int] = {}
-    now: dict[str, Any] = {}
-    defaults: dict[str, Any] = {}
-    try:
-        lines = key_lines(config)
-        now = load_settings(config).model_dump(mode="json")
-    except OdographError:
-        config = None
-    from odograph.settings.all import Settings
-
-    for row in settings_table(Settings()):
-        stage, _, key = row["path"].partition(".")
-        defaults.setdefault(stage, {})[key] = row["default"]
-    placed = []
-    for row in rows:
-        stage, _, key = row["setting"].partition(".")
-        line = lines.get((stage, key))
-        placed.append(
-            row
-            | {
-                "line": f"{config.parent.name}/{config.name}:{line}" if line is not None else None,
-                "default": defaults.get(stage, {}).get(key),
-                "now": now.get(stage, {}).get(key, row["value"]),
-            }
-        )
-    return placed
 
 
 def text_lines(found: Any, settings: list[dict[str, Any]], *, everything: bool = False) -> Iterator[str]:
@@ -167,7 +135,7 @@ def _settings(settings: list[dict[str, Any]], everything: bool) -> Iterator[str]
         line = f"  {row['setting']:<{width}}  {json.dumps(row['value'], ensure_ascii=False)}"
         if sum(other["setting"] == row["setting"] for other in settings) > 1:
             line += f"   for {', '.join(row['sessions'] or ['the study'])}"
-        elif row["value"] != row["now"]:
+        if row["value"] != row["now"]:
             line += f"   (the configuration now says {json.dumps(row['now'], ensure_ascii=False)})"
         yield line + (f"   {row['line']}" if row["line"] else "")
 
