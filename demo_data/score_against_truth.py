@@ -113,7 +113,7 @@ def _speed_shapes(joined: pd.DataFrame, truly: pd.DataFrame, found: pd.DataFrame
 
 
 def _sharpening(joined: pd.DataFrame, truly: pd.DataFrame) -> list[Share]:
-    """How often the information is higher in fast than in slow running, for units that sharpen and others."""
+    """How often units that sharpen, and others, are said to: by halves of the data, and by gains."""
     shares = []
     for name in SHARPENING:
         slow = joined[f"{name}_information_slow_bits_per_spike"]
@@ -123,6 +123,12 @@ def _sharpening(joined: pd.DataFrame, truly: pd.DataFrame) -> list[Share]:
         label = f"more {name.replace('_', ' ')} information when fast"
         shares.append(_count(f"{label}, sharpening", (fast > slow)[judged & sharpens]))
         shares.append(_count(f"{label}, others", (fast > slow)[judged & ~sharpens]))
+        # Gains are there for units that were found to encode the variable.
+        fitted = truly[name] & joined[f"encodes_{name}"].eq(True) & joined[f"{name}_speed_gain"].notna()
+        called = joined[f"{name}_sharpens"].eq(True)
+        label = f"{name.replace('_', ' ')} gain called sharpening"
+        shares.append(_count(f"{label}, sharpening", called[fitted & sharpens]))
+        shares.append(_count(f"{label}, others", called[fitted & ~sharpens]))
     return shares
 
 
@@ -182,6 +188,7 @@ def read_tables(results: Path, truth_file: Path) -> tuple[pd.DataFrame, pd.DataF
     needed += [
         f"{name}_information_{pace}_bits_per_spike" for name in SHARPENING for pace in ("slow", "fast")
     ]
+    needed += [f"{name}_{column}" for name in SHARPENING for column in ("speed_gain", "sharpens")]
     for path, table, columns in ((units_file, units, needed), (truth_file, truth, TRUTH_COLUMNS)):
         missing = [name for name in columns if name not in table]
         if missing:

@@ -34,6 +34,9 @@ def perfect(truth) -> pd.DataFrame:
     sharper = truth["sharpens"].astype(float)
     for column in INFORMATION:
         units[column] = 1.0 + (sharper if "fast" in column else 0.5 * (1 - sharper))
+    for name in ("position", "head_direction"):
+        units[f"{name}_speed_gain"] = (0.4 * sharper).where(units[f"encodes_{name}"])
+        units[f"{name}_sharpens"] = truth["sharpens"].astype(bool) & units[f"encodes_{name}"]
     return units
 
 
@@ -68,6 +71,10 @@ def test_counts_are_variables_of_units(perfect, truth):
     sharpening = scores["more position information when fast, sharpening"]
     assert sharpening.k == sharpening.n == (truth["position"] & truth["sharpens"]).sum() > 0
     assert scores["more position information when fast, others"].k == 0
+    gains = scores["position gain called sharpening, sharpening"]
+    assert gains.k == gains.n == sharpening.n
+    others = scores["position gain called sharpening, others"]
+    assert others.k == 0 and others.n == (truth["position"] & ~truth["sharpens"]).sum()
 
 
 def test_interval_is_wilsons(perfect, truth):

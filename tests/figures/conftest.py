@@ -10,8 +10,8 @@ import pandas as pd
 import pytest
 from matplotlib.text import Text
 
+from odograph.population.adaptivity import speed_table
 from odograph.population.composition import composition
-from odograph.population.speed import speed_table
 from odograph.settings.figures import FiguresSettings
 from odograph.settings.population import PopulationSettings
 

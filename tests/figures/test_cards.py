@@ -194,3 +194,30 @@ def test_arena_keeps_its_shape(shape, unit_row, unit_scores, curves, behaviour, 
     box = axes.get_window_extent()
     wide, high = np.ptp(axes.get_xlim()), np.ptp(axes.get_ylim())
     assert box.width / box.height == pytest.approx(wide / high, rel=0.01)
+
+
+def test_gains_and_goodness_stand_at_the_foot(
+    unit_row, unit_scores, curves, behaviour, corners, settings, misplaced
+):
+    told = unit_row | {
+        "speed_gain_status": "fitted",
+        "position_speed_gain": 0.213,
+        "position_speed_gain_se": 0.041,
+        "position_speed_gain_p": 0.0003,
+        "head_direction_speed_gain": -0.05,
+        "head_direction_speed_gain_se": 0.06,
+        "head_direction_speed_gain_p": 0.44,
+        "rescaling_ks": 0.0213,
+        "rescaling_ks_p": 0.31,
+        "residual_correlation_peak": 0.034,
+        "residual_correlation_peak_lag_s": 0.04,
+    }
+    figure = draw_card(told, unit_scores, curves, behaviour, corners, settings)
+    text = " ".join(t.get_text() for t in figure.texts)
+    assert "Speed gain: position +0.21 ± 0.04, p < 0.001; direction -0.05 ± 0.06, p 0.44." in text
+    assert "Held out: KS 0.021, p 0.31; residual correlation +0.03 at 40 ms." in text
+    assert not misplaced(figure)
+    failed = draw_card(
+        unit_row | {"speed_gain_status": "failed"}, unit_scores, curves, behaviour, corners, settings
+    )
+    assert any("Speed gain: the fit failed" in t.get_text() for t in failed.texts)

@@ -3,10 +3,12 @@
 from __future__ import annotations
 
 import numpy as np
+import pandas as pd
 import pytest
 from matplotlib.text import Text
 
 from odograph.figures.captions import CAPTIONS, POPULATION_FIGURES
+from odograph.figures.gains import draw_speed_gains
 from odograph.figures.population import draw_population_figure
 from odograph.figures.style import figure_bytes
 from odograph.settings.figures import FiguresSettings
@@ -125,3 +127,34 @@ def test_order_of_rows_does_not_matter(name, population, settings, record_id):
 
 def test_captions_name_tables():
     assert all(caption.table.startswith("population/") and caption.text for caption in CAPTIONS.values())
+
+
+def test_gains_are_ordered_and_verdicts_marked(settings):
+    n = 30
+    gain = np.linspace(-0.5, 0.9, n)
+    units = pd.DataFrame(
+        {
+            "session": "a",
+            "unit": np.arange(n)[::-1],
+            "animal": "one",
+            "status": "fitted",
+            "encodes_position": True,
+            "position_speed_gain": gain,
+            "position_speed_gain_se": 0.1,
+            "position_sharpens": gain > 0.3,
+            "position_blunts": gain < -0.3,
+            **{
+                f"position_fitted_{pace}_{unit}": 1.0 + (gain if pace == "fast" else 0)
+                for pace in ("slow", "fast")
+                for unit in ("bits_per_spike", "bits_per_s")
+            },
+        }
+    )
+    figure = draw_speed_gains(units, settings)
+    gains = figure.axes[0]
+    marks = {line.get_marker(): line for line in gains.lines if line.get_marker() not in ("None", "")}
+    assert len(marks["^"].get_xdata()) == int((gain > 0.3).sum())
+    assert len(marks["v"].get_xdata()) == int((gain < -0.3).sum())
+    drawn = np.concatenate([np.column_stack(line.get_data()) for line in marks.values()])
+    assert np.all(np.diff(drawn[np.argsort(drawn[:, 0]), 1]) > 0)
+    assert f"{int((gain > 0.3).sum())} sharpen" in gains.get_xlabel()

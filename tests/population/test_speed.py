@@ -4,8 +4,9 @@ import numpy as np
 import pandas as pd
 import pytest
 
+from odograph.population.adaptivity import speed_table
 from odograph.population.gather import gather_units
-from odograph.population.speed import information_pairs, signed_rank_p, speed_table
+from odograph.population.speed import information_pairs, signed_rank_p
 from odograph.settings.population import PopulationSettings
 
 SETTINGS = PopulationSettings(bootstrap_draws=400)

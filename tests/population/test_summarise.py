@@ -6,10 +6,10 @@ import numpy as np
 import pandas as pd
 import pytest
 
+from odograph.population.adaptivity import speed_table
 from odograph.population.composition import composition
 from odograph.population.gather import gather_units
 from odograph.population.sessions import session_table
-from odograph.population.speed import speed_table
 from odograph.population.summarise import summary, summary_lines
 from odograph.settings.population import PopulationSettings
 

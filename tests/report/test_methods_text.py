@@ -32,6 +32,8 @@ def test_every_setting_it_speaks_of_exists(make_context):
         ("encoding", "folds", 7, "7 folds"),
         ("encoding", "minimum_spikes", 321, "fewer than 321 spikes"),
         ("encoding", "tests", False, "Terms were not tested"),
+        ("encoding", "history_s", 0.25, "own spikes of the last 0.25 s, made of 4 raised cosines"),
+        ("encoding", "test_draws", 777, "ranked among 777 circular shifts of speed"),
         ("population", "false_discovery_rate", 0.01, "false discovery rate of 0.01"),
         ("population", "confidence", 0.9, "90 % intervals"),
         ("sync", "max_bend_ms", 4.5, "more than 4.5 ms"),
@@ -55,8 +57,16 @@ def test_terms_and_models_are_counted(make_context):
     assert "every subset of the terms (1 in all)" in text
 
 
+def test_a_study_without_speed_has_no_speed_gains(make_context):
+    term = {"name": "heading_rate", "kind": "line", "columns": ["heading_rate"], "penalty_order": 1}
+    text, _ = written(make_context, encoding={"terms": [term]})
+    assert "(1 + g z) f" not in text and "first-derivative for heading rate" in text
+    assert "(1 + g z) f" in written(make_context)[0]
+
+
 def test_citations_point_to_references(make_context):
-    text, references = written(make_context, intake={"frame_pulses_place": "acquisition/pulses"})
+    pulses = {"frame_pulses_place": "acquisition/pulses"}
+    text, references = written(make_context, intake=pulses, encoding={"history_s": 0.3})
     cited = {int(n) for group in re.findall(r"\[([\d, ]+)\]", text) for n in group.split(",")}
     assert cited == set(range(1, len(references) + 1))
     assert set(references) == set(REFERENCES.values())
@@ -64,6 +74,6 @@ def test_citations_point_to_references(make_context):
 
 
 def test_first_citations_come_in_order(make_context):
-    text, references = written(make_context)
+    text, references = written(make_context, encoding={"history_s": 0.3})
     seen = [int(n) for group in re.findall(r"\[([\d, ]+)\]", text) for n in group.split(",")]
     assert list(dict.fromkeys(seen)) == list(range(1, len(references) + 1))

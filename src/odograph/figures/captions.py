@@ -47,6 +47,15 @@ CAPTIONS = {
         "marks on the left or lower edge lie at or beyond it.",
         "population/units.tsv",
     ),
+    "speed_gains": Caption(
+        "Speed gain of the tuning",
+        "Units that encode position or head direction, by the gain fitted to them: how much deeper the "
+        "tuning becomes with each standard deviation of the logarithm of running speed (0: not at all, "
+        "above 0: sharper when fast). Lines: standard errors. Filled marks pointing up or down: gains that "
+        "differ from 0 at the study's false discovery rate. At the right, information of the fitted tuning "
+        "at the 20th and the 80th percentile of running speed.",
+        "population/units.tsv",
+    ),
     "held_out_scores": Caption(
         "Held-out score of every model",
         "Log-likelihood of held-out spikes over that of a constant rate, in bits per spike: each unit a dot, "

@@ -23,9 +23,9 @@ from odograph.figures.panels import column, number, place_extent, unit_status, v
 from odograph.figures.style import axes_at, figure_style, new_figure, text_at
 from odograph.settings.figures import FiguresSettings
 
-WIDTH_IN, HEIGHT_IN = 7.2, 5.5
-_MAP_IN, _MAP_BOTTOM_IN = 1.78, 2.76
-_CURVE_IN, _CURVE_BOTTOM_IN = 1.2, 0.77
+WIDTH_IN, HEIGHT_IN = 7.2, 5.64
+_MAP_IN, _MAP_BOTTOM_IN = 1.78, 2.9
+_CURVE_IN, _CURVE_BOTTOM_IN = 1.2, 0.91
 
 
 def draw_card(
@@ -57,7 +57,7 @@ def draw_card(
     Returns
     -------
     Figure
-        7.2 by 5.5 inches, taller where more variables than the usual three were fitted. A unit that was not
+        7.2 by 5.64 inches, taller where more variables than the usual three were fitted. A unit that was not
         fitted gets a card too, which says why.
     """
     with figure_style(settings):
@@ -202,7 +202,39 @@ def _foot(figure: Figure, row: Mapping[str, Any]) -> None:
             "Curves: fitted with 95 % band; dots: observed; broken line: mean rate. "
             "Scores ± standard error; diamond: selected."
         )
-        text_at(figure, 0.1, 0.19, key, va="bottom", fontsize=7, color=SOFT_INK)
+        text_at(figure, 0.1, 0.33, key, va="bottom", fontsize=7, color=SOFT_INK)
     if parts:
         text = "Information, bits per spike: " + "; ".join(parts)
-        text_at(figure, 0.1, 0.05, text, va="bottom", fontsize=7, color=SOFT_INK)
+        text_at(figure, 0.1, 0.19, text, va="bottom", fontsize=7, color=SOFT_INK)
+    last = ". ".join(part for part in (_gains_text(row), _goodness_text(row)) if part)
+    if last:
+        text_at(figure, 0.1, 0.05, f"{last}.", va="bottom", fontsize=7, color=SOFT_INK)
+
+
+def _gains_text(row: Mapping[str, Any]) -> str:
+    """Speed gains with their standard errors and p."""
+    if row.get("speed_gain_status") == "failed":
+        return "Speed gain: the fit failed"
+    told = []
+    for term, label in (("position", "position"), ("head_direction", "direction")):
+        gain, error, p = (row.get(f"{term}_speed_gain{suffix}") for suffix in ("", "_se", "_p"))
+        if number(gain) != "–":
+            tested = f", p {_p_text(p)}" if number(p) != "–" else ""
+            told.append(f"{label} {float(gain):+.2f} ± {float(error):.2f}{tested}")
+    return f"Speed gain: {'; '.join(told)}" if told else ""
+
+
+def _goodness_text(row: Mapping[str, Any]) -> str:
+    """How the selected model fits held-out time."""
+    ks, p = row.get("rescaling_ks"), row.get("rescaling_ks_p")
+    if number(ks) == "–":
+        return ""
+    peak, lag_s = row.get("residual_correlation_peak"), row.get("residual_correlation_peak_lag_s")
+    text = f"Held out: KS {float(ks):.3f}, p {_p_text(p)}"
+    if number(peak) != "–":
+        text += f"; residual correlation {float(peak):+.2f} at {1000 * float(lag_s):.0f} ms"
+    return text
+
+
+def _p_text(p: float) -> str:
+    return "< 0.001" if p < 0.001 else number(p, 2)

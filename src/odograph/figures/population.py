@@ -11,6 +11,7 @@ from matplotlib.ticker import NullFormatter
 
 from odograph.figures.captions import POPULATION_FIGURES
 from odograph.figures.colours import INK, RULE, SOFT_INK, model_label, model_terms, term_colour, term_label
+from odograph.figures.gains import draw_speed_gains
 from odograph.figures.panels import number, say
 from odograph.figures.shares import (
     WIDTH_IN,
@@ -57,6 +58,7 @@ def draw_population_figure(
         "composition": lambda: draw_composition(composition, settings),
         "speed_shapes": lambda: draw_speed_shapes(speed, settings),
         "slow_against_fast": lambda: draw_slow_against_fast(units, speed, settings),
+        "speed_gains": lambda: draw_speed_gains(units, settings),
         "held_out_scores": lambda: draw_held_out_scores(units, scores, settings),
     }
     if name not in figures:

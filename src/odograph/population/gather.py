@@ -87,7 +87,9 @@ def gather_units(
     -------
     DataFrame
         Sorted by session and unit. Inventory attributes are columns `attribute_<name>`; `<variable>_q` are
-        the adjusted p-values. `encodes_<variable>` is False in rows whose `status` is not "fitted".
+        the adjusted p-values. `encodes_<variable>` is False in rows whose `status` is not "fitted". Of the
+        speed gains that were tested, those of units that encode the variable are adjusted together
+        (`<variable>_speed_gain_q`): the variable's tuning `sharpens` with speed (gain above 0) or `blunts`.
 
     Raises
     ------
@@ -252,6 +254,8 @@ def _with_verdicts(units: pd.DataFrame, settings: PopulationSettings) -> pd.Data
         # A variable without a test rests on the selection alone.
         units[f"{variable}_q"] = q
         units[f"encodes_{variable}"] = fitted & holds & (np.isnan(q) | (q <= settings.false_discovery_rate))
+        if f"{variable}_speed_gain_p" in units:
+            units = _with_gain_verdict(units, variable, settings)
     encodes = units[[f"encodes_{variable}" for variable in variables]].to_numpy(bool)
     units["encoded"] = pd.Series(
         [spelled(variables, row) if fit else None for row, fit in zip(encodes, fitted, strict=True)],
@@ -261,6 +265,20 @@ def _with_verdicts(units: pd.DataFrame, settings: PopulationSettings) -> pd.Data
         units.loc[fitted & ~units["encodes_speed"], "speed_shape"] = "not_tuned"
         units.loc[~units["encodes_speed"], "speed_shape_probability"] = np.nan
     return units
+
+
+def _with_gain_verdict(units: pd.DataFrame, variable: str, settings: PopulationSettings) -> pd.DataFrame:
+    """Whether tuning to a variable sharpens or blunts with speed, judged over the units that encode it."""
+    gain, p = (units[f"{variable}_speed_gain{suffix}"].to_numpy(float) for suffix in ("", "_p"))
+    q = benjamini_hochberg(np.where(units[f"encodes_{variable}"], p, np.nan))
+    changes = q <= settings.false_discovery_rate
+    return units.assign(
+        **{
+            f"{variable}_speed_gain_q": q,
+            f"{variable}_sharpens": changes & (gain > 0),
+            f"{variable}_blunts": changes & (gain < 0),
+        }
+    )
 
 
 def spelled(variables: Iterable[str], present: Iterable[bool]) -> str:

@@ -12,48 +12,6 @@ from odograph.population.intervals import bootstrap_interval, counted, median_in
 from odograph.settings.population import PopulationSettings
 
 SHAPES = ("rising", "falling", "non_monotonic", "undecided")
-COLUMNS = (
-    "measure",
-    "level",
-    "name",
-    "category",
-    "k",
-    "n",
-    "animals",
-    "value",
-    "low",
-    "high",
-    "confidence",
-    "unit",
-    "median_slow",
-    "median_fast",
-    "p",
-    "method",
-)
-
-
-def speed_table(units: pd.DataFrame, settings: PopulationSettings) -> pd.DataFrame:
-    """Speed-tuning shapes and the change of information with speed, in one table.
-
-    Parameters
-    ----------
-    units : DataFrame
-        The table of `gather_units`.
-    settings : PopulationSettings
-
-    Returns
-    -------
-    DataFrame
-        Rows with measure "speed_shape": per shape, `k` of the `n` units that encode speed, `value` the
-        share. Rows with measure "<variable>_information_change", for every variable measured at slow and at
-        fast running: `value` is the median over `n` units of fast minus slow (`unit` bits_per_spike), `k` how
-        many units gained, `p` of the Wilcoxon signed-rank test. Each for all animals together and for each
-        animal; the interval is `low`, `high` of `confidence` by `method`.
-    """
-    changes = [
-        row for variable in compared_variables(units) for row in change_rows(units, variable, settings)
-    ]
-    return pd.DataFrame([*shape_rows(units, settings), *changes], columns=list(COLUMNS))
 
 
 def compared_variables(units: pd.DataFrame) -> list[str]:
@@ -66,14 +24,14 @@ def compared_variables(units: pd.DataFrame) -> list[str]:
 
 
 def shape_rows(units: pd.DataFrame, settings: PopulationSettings) -> list[dict[str, object]]:
-    """Rows of the shapes of speed tuning among the units that encode speed; see `speed_table`."""
+    """Rows of the shapes of speed tuning among the units that encode speed; see `adaptivity.speed_table`."""
     fitted = fitted_units(units)
     tuned = fitted[fitted["encodes_speed"].to_numpy(bool)] if "encodes_speed" in fitted else fitted.iloc[:0]
     shape = tuned["speed_shape"].to_numpy(object) if len(tuned) else np.empty(0, object)
     members = np.column_stack([shape == name for name in SHAPES]).reshape(len(tuned), len(SHAPES))
     animals = tuned["animal"].to_numpy(object).astype(str)
     rows = []
-    for level, name, chosen in _by_animal(animals):
+    for level, name, chosen in by_animal(animals):
         counts = share_rows(
             members[chosen],
             animals[chosen],
@@ -116,41 +74,53 @@ def information_pairs(units: pd.DataFrame, variable: str) -> pd.DataFrame:
 
 
 def change_rows(units: pd.DataFrame, variable: str, settings: PopulationSettings) -> list[dict[str, object]]:
-    """Rows of the change of one variable's information from slow to fast running; see `speed_table`."""
+    """Rows of the change of a variable's information from slow to fast running."""
     pairs = information_pairs(units, variable)
     measure = f"{variable}_information_change"
     animals = pairs["animal"].to_numpy(object).astype(str)
     rows = []
-    for level, name, chosen in _by_animal(animals):
+    for level, name, chosen in by_animal(animals):
         part = pairs[chosen]
         change = part["change_bits_per_spike"].to_numpy(float)
-        if level == "animal":
-            interval = median_interval(change, settings.confidence)
-        else:
-            purpose = f"{measure} {level} {name}"
-            interval = bootstrap_interval(change, animals[chosen], np.median, purpose, settings)[0]
-        rows.append(
-            {
-                "measure": measure,
-                "level": level,
-                "name": name,
-                "category": "fast minus slow",
-                "k": int(np.sum(change > 0)),
-                "n": len(change),
-                "animals": len(np.unique(animals[chosen])),
-                "value": _median(change),
-                "low": interval.low,
-                "high": interval.high,
-                "confidence": settings.confidence,
-                "unit": "bits_per_spike",
-                "median_slow": _median(part["slow_bits_per_spike"]),
-                "median_fast": _median(part["fast_bits_per_spike"]),
-                "p": signed_rank_p(change),
-                "method": f"{interval.method}; p: Wilcoxon signed rank over {counted(len(change), 'unit')}, "
-                "as if independent",
-            }
-        )
+        purpose = f"{measure} {level} {name}"
+        row = median_row(change, animals[chosen], settings, purpose, within_animal=level == "animal")
+        row |= {
+            "median_slow": median_or_nan(part["slow_bits_per_spike"]),
+            "median_fast": median_or_nan(part["fast_bits_per_spike"]),
+        }
+        head = {"measure": measure, "level": level, "name": name, "category": "fast minus slow"}
+        rows.append(head | row | {"unit": "bits_per_spike"})
     return rows
+
+
+def median_row(
+    values: np.ndarray,
+    animals: np.ndarray,
+    settings: PopulationSettings,
+    purpose: str,
+    *,
+    within_animal: bool,
+) -> dict[str, object]:
+    """Median of values, (n,), its interval, how many are above 0, and the signed-rank p.
+
+    `purpose` names the random draws, `within_animal` whether the claim is about this one animal.
+    """
+    if within_animal:
+        interval = median_interval(values, settings.confidence)
+    else:
+        interval = bootstrap_interval(values, animals, np.median, purpose, settings)[0]
+    return {
+        "k": int(np.sum(values > 0)),
+        "n": len(values),
+        "animals": len(np.unique(animals)),
+        "value": median_or_nan(values),
+        "low": interval.low,
+        "high": interval.high,
+        "confidence": settings.confidence,
+        "p": signed_rank_p(values),
+        "method": f"{interval.method}; p: Wilcoxon signed rank over {counted(len(values), 'unit')}, "
+        "as if independent",
+    }
 
 
 def signed_rank_p(change: np.ndarray) -> float:
@@ -172,11 +142,12 @@ def signed_rank_p(change: np.ndarray) -> float:
     return float(wilcoxon(change).pvalue) if len(change) else float("nan")
 
 
-def _median(values: np.ndarray) -> float:
+def median_or_nan(values: np.ndarray) -> float:
+    """Median, NaN of nothing."""
     return float(np.median(values)) if len(values) else float("nan")
 
 
-def _by_animal(animals: np.ndarray) -> list[tuple[str, str, np.ndarray]]:
-    """All units, then those of each animal."""
+def by_animal(animals: np.ndarray) -> list[tuple[str, str, np.ndarray]]:
+    """All units, then those of each animal: level, name, which units, (n,) of bool."""
     everything = ("all", "all", np.ones(len(animals), bool))
     return [everything, *(("animal", str(name), animals == name) for name in np.unique(animals))]

@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable, Mapping
+from collections.abc import Callable, Iterable, Mapping
 from typing import Any
 
 import numpy as np
 import pandas as pd
 
 from odograph.population.composition import AT_LEAST_ONE, TWO_OR_MORE
+from odograph.population.gains import gain_variables
 from odograph.population.gather import UNNAMED_ANIMAL, fitted_units, in_order, variables_of
 from odograph.population.intervals import FEW_ANIMALS, counted
 from odograph.population.speed import SHAPES, compared_variables
@@ -69,6 +70,12 @@ def summary(
                 variable: _change(_speed_row(speed, f"{variable}_information_change", "fast minus slow"))
                 for variable in compared_variables(units)
             },
+            "speed_gains": {variable: _gains(speed, variable) for variable in gain_variables(units)},
+            "speed_gains_failed": _count(fitted, "speed_gain_status", lambda column: column == "failed"),
+            "rescaled_intervals_fit": {
+                "k": _count(fitted, "rescaling_ks_p", lambda column: column > 0.05),
+                "n": _count(fitted, "rescaling_ks_p", lambda column: column.notna()),
+            },
             "held_out_bits_per_spike": _quartiles(fitted),
         }
     )
@@ -93,7 +100,7 @@ def summary_lines(summary: Mapping[str, Any]) -> list[str]:
         _further_line(variables[2:]),
         _mixture_line(summary),
         _shapes_line(summary["speed_shapes"]),
-        _information_line(summary["information_change"]),
+        _sharpening_line(summary),
         _trust_line(summary),
     ]
     return [_shortened(line, _LINE_LENGTH) for line in lines]
@@ -157,6 +164,22 @@ def _shapes_line(shapes: Mapping[str, Mapping[str, Any]]) -> str:
         return "Speed tuning: no unit encodes speed."
     told = ", ".join(f"{shapes[shape]['k']} {shape.replace('_', '-')}" for shape in SHAPES)
     return f"Speed tuning: of {counted(n, 'unit')} that {'encodes' if n == 1 else 'encode'} speed {told}."
+
+
+def _sharpening_line(summary: Mapping[str, Any]) -> str:
+    """Fitted speed gains where there are any, else the comparison of slow and fast running."""
+    gains = summary.get("speed_gains") or {}
+    told = []
+    for variable in in_order(gains):
+        gain = gains[variable]
+        if gain["n"]:
+            counts = f"{gain['sharpens']['k']} sharpen, {gain['blunts']['k']} blunt of {gain['n']}"
+            told.append(f"{_words(variable)} {counts} (median gain {gain['median']:+.2f})")
+    if not told:
+        return _information_line(summary["information_change"])
+    failed = summary["speed_gains_failed"]
+    more = f"; {counted(failed, 'fit')} failed" if failed else ""
+    return f"Tuning at higher speed: {'; '.join(told)}{more}."
 
 
 def _information_line(changes: Mapping[str, Mapping[str, Any]]) -> str:
@@ -228,6 +251,22 @@ def _share(row: pd.Series) -> dict[str, Any]:
 def _change(row: pd.Series) -> dict[str, Any]:
     shared = ("n", "animals", "low", "high", "confidence", "median_slow", "median_fast", "p", "method")
     return {"gained": row["k"], "median": row["value"], **{name: row[name] for name in shared}}
+
+
+def _gains(speed: pd.DataFrame, variable: str) -> dict[str, Any]:
+    measure = f"{variable}_speed_gain"
+    median = _speed_row(speed, measure, "median gain")
+    shared = ("n", "animals", "low", "high", "confidence", "p", "method")
+    return {
+        "median": median["value"],
+        **{name: median[name] for name in shared},
+        **{verdict: _share(_speed_row(speed, measure, verdict)) for verdict in ("sharpens", "blunts")},
+    }
+
+
+def _count(units: pd.DataFrame, column: str, holds: Callable[[pd.Series], pd.Series]) -> int:
+    """Units in whose column something holds; 0 where the study has no such column."""
+    return int(holds(units[column]).sum()) if column in units else 0
 
 
 def _speed_row(speed: pd.DataFrame, measure: str, category: str) -> pd.Series:

@@ -15,6 +15,7 @@ REFERENCES = {
     "splines": "Eilers & Marx 1996, Statistical Science 11:89",
     "strengths": "Wood & Fasiolo 2017, Biometrics 73:1071",
     "bands": "Wood 2006, Australian & New Zealand Journal of Statistics 48:445",
+    "history": "Pillow et al. 2008, Nature 454:995",
     "one_se": "Breiman, Friedman, Olshen & Stone 1984, Classification and Regression Trees, section 3.4.3",
     "rank": "Davison & Hinkley 1997, Bootstrap Methods and their Application, sections 3.8 and 4.2",
     "fdr": "Benjamini & Hochberg 1995, Journal of the Royal Statistical Society B 57:289",
@@ -22,6 +23,8 @@ REFERENCES = {
     "Systems 5:1030",
     "wilson": "Wilson 1927, Journal of the American Statistical Association 22:209",
     "signed_rank": "Wilcoxon 1945, Biometrics Bulletin 1:80",
+    "rescaling": "Brown, Barbieri, Ventura, Kass & Frank 2002, Neural Computation 14:325",
+    "level": "Marra & Wood 2012, Scandinavian Journal of Statistics 39:53",
     "engine": "Mölder et al. 2021, Sustainable data analysis with Snakemake, F1000Research 10:33",
 }
 
@@ -103,6 +106,12 @@ _BASES = {
 }
 
 
+def _penalties(terms: list[dict[str, Any]]) -> str:
+    first = [term_label(term["name"]) for term in terms if term.get("penalty_order") == 1]
+    told = "second-derivative penalties"
+    return f"{told} (first-derivative for {', '.join(first)})" if first else told
+
+
 def _encoding(value: Callable[[str], Any], cite: Callable[..., str]) -> list[str]:
     terms = list(value("encoding.terms") or [])
     bases = "; ".join(
@@ -120,13 +129,13 @@ def _encoding(value: Callable[[str], Any], cite: Callable[..., str]) -> list[str
     )
     first = (
         "Spike counts were modelled as Poisson with the log rate a sum of smooth terms under "
-        f"second-derivative penalties {cite('splines')}: {bases}. Smoothing strengths were chosen from the "
-        f"training data by restricted marginal likelihood {cite('strengths')}.{drift} Models of every subset "
+        f"{_penalties(terms)} {cite('splines')}: {bases}. Smoothing strengths were chosen from the "
+        f"training data by restricted marginal likelihood {cite('strengths')}.{drift}{_history(value, cite)} Models of every subset "
         f"of the terms ({models} in all) and the constant model were compared by held-out log-likelihood in "
         f"{folds} folds of {blocks} interleaved contiguous blocks each, {guard_s} s beside each held-out "
         "block being left out of training. The simplest model within one standard error of the best was "
         f"selected {cite('one_se')}. Units with fewer than {fewest} spikes in valid time were not fitted. "
-        f"Bands are pointwise 95 % {cite('bands')}."
+        f"Bands are pointwise 95 %, the uncertainty of the mean level included {cite('bands', 'level')}."
     )
     test = (
         "Each term was tested against the model of the others by circular shifts of its covariate over valid "
@@ -143,7 +152,48 @@ def _encoding(value: Callable[[str], Any], cite: Callable[..., str]) -> list[str
         f"median) after matching them in occupancy and in spikes, over "
         f"{_plain(value('encoding.matching_repeats'))} repeats."
     )
-    return [first, second]
+    return [first, second, *_gains(value, cite, terms), _goodness(cite)]
+
+
+def _history(value: Callable[[str], Any], cite: Callable[..., str]) -> str:
+    if not value("encoding.history_s"):
+        return ""
+    return (
+        f" Every model held a filter of the unit's own spikes of the last {_plain(value('encoding.history_s'))} "
+        f"s, made of {_plain(value('encoding.history_functions'))} raised cosines {cite('history')}."
+    )
+
+
+def _gains(value: Callable[[str], Any], cite: Callable[..., str], terms: list[dict[str, Any]]) -> list[str]:
+    """The speed-gain model, for studies whose terms can have a gain."""
+    speed = next((t for t in terms if t["kind"] == "line" and t["columns"][0] == "speed_cm_s"), None)
+    scaled = [term_label(term["name"]) for term in terms if term["kind"] in ("plane", "circle")]
+    if speed is None or not scaled:
+        return []
+    test = (
+        " A gain was tested by the efficient score at the fit without gains, ranked among "
+        f"{_plain(value('encoding.test_draws'))} circular shifts of speed against everything else "
+        f"{cite('rank')}."
+        if value("encoding.tests")
+        else ""
+    )
+    return [
+        f"Whether tuning sharpens with running speed was asked of the units whose selected model holds "
+        f"{' or '.join(scaled)}: that term's part f of the log rate was replaced by (1 + g z) f, z being "
+        "log(1 + v / 5 cm/s) of the speed v, standardised over valid time. Gains g, tuning and all other "
+        "terms were fitted jointly; standard errors are from the full Hessian of the penalised likelihood. "
+        f"Above 0 a gain means tuning that is deeper and sharper at speed.{test} In plain units it is told "
+        f"as the information of the fitted tuning {cite('information')} at the 20th and the 80th percentile "
+        "of running speed."
+    ]
+
+
+def _goodness(cite: Callable[..., str]) -> str:
+    return (
+        "How well the selected model describes time that it was not fitted to was judged by the "
+        f"Kolmogorov-Smirnov statistic of intervals rescaled by the held-out rate {cite('rescaling')} and by "
+        "the autocorrelation of held-out residuals up to 1 s."
+    )
 
 
 def _population(value: Callable[[str], Any], cite: Callable[..., str]) -> str:
@@ -152,7 +202,8 @@ def _population(value: Callable[[str], Any], cite: Callable[..., str]) -> str:
         "A unit counts as encoding a variable when its selected model holds it and, where the variable was "
         "tested, its p passes a false discovery rate of "
         f"{_plain(value('population.false_discovery_rate'))} over all "
-        f"fitted units {cite('fdr')}. Shares have {level} intervals: within an animal Wilson's "
+        f"fitted units {cite('fdr')}; gains are judged at the same rate over the units that encode the "
+        f"variable. Shares have {level} intervals: within an animal Wilson's "
         f"{cite('wilson')}, over animals a bootstrap that resamples animals and then their units "
         f"{cite('rank')} ({_plain(value('population.bootstrap_draws'))} draws, seed "
         f"{value('population.bootstrap_seed')}). Changes from slow to fast running were tested by the "

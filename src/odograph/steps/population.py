@@ -19,10 +19,10 @@ def work(step: Step) -> None:
     """Gather the units of all sessions, count, compare, and sum up."""
     import pandas as pd
 
+    from odograph.population.adaptivity import speed_table
     from odograph.population.composition import composition
     from odograph.population.gather import gather_scores, gather_units
     from odograph.population.sessions import session_table
-    from odograph.population.speed import speed_table
     from odograph.population.summarise import summary, summary_lines
     from odograph.settings.population import PopulationSettings
 
