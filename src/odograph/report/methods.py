@@ -130,8 +130,8 @@ def _encoding(value: Callable[[str], Any], cite: Callable[..., str]) -> list[str
     first = (
         "Spike counts were modelled as Poisson with the log rate a sum of smooth terms under "
         f"{_penalties(terms)} {cite('splines')}: {bases}. Smoothing strengths were chosen from the "
-        f"training data by restricted marginal likelihood {cite('strengths')}.{drift}{_history(value, cite)} Models of every subset "
-        f"of the terms ({models} in all) and the constant model were compared by held-out log-likelihood in "
+        f"training data by restricted marginal likelihood {cite('strengths')}.{drift}{_history(value, cite)} "
+        f"Models of every subset of the terms ({models} in all) and the constant model were compared by held-out log-likelihood in "
         f"{folds} folds of {blocks} interleaved contiguous blocks each, {guard_s} s beside each held-out "
         "block being left out of training. The simplest model within one standard error of the best was "
         f"selected {cite('one_se')}. Units with fewer than {fewest} spikes in valid time were not fitted. "
@@ -159,8 +159,8 @@ def _history(value: Callable[[str], Any], cite: Callable[..., str]) -> str:
     if not value("encoding.history_s"):
         return ""
     return (
-        f" Every model held a filter of the unit's own spikes of the last {_plain(value('encoding.history_s'))} "
-        f"s, made of {_plain(value('encoding.history_functions'))} raised cosines {cite('history')}."
+        " Every model held a filter of the unit's own spikes of the last "
+        f"{_plain(value('encoding.history_s'))} s, made of {_plain(value('encoding.history_functions'))} raised cosines {cite('history')}."
     )
 
 
