@@ -131,8 +131,8 @@ def _encoding(value: Callable[[str], Any], cite: Callable[..., str]) -> list[str
         "Spike counts were modelled as Poisson with the log rate a sum of smooth terms under "
         f"{_penalties(terms)} {cite('splines')}: {bases}. Smoothing strengths were chosen from the "
         f"training data by restricted marginal likelihood {cite('strengths')}.{drift}{_history(value, cite)} "
-        f"Models of every subset of the terms ({models} in all) and the constant model were compared by held-out log-likelihood in "
-        f"{folds} folds of {blocks} interleaved contiguous blocks each, {guard_s} s beside each held-out "
+        f"Models of every subset of the terms ({models} in all) and the constant model were compared by "
+        f"held-out log-likelihood in {folds} folds of {blocks} interleaved contiguous blocks each, {guard_s} s beside each held-out "
         "block being left out of training. The simplest model within one standard error of the best was "
         f"selected {cite('one_se')}. Units with fewer than {fewest} spikes in valid time were not fitted. "
         f"Bands are pointwise 95 %, the uncertainty of the mean level included {cite('bands', 'level')}."
@@ -160,7 +160,8 @@ def _history(value: Callable[[str], Any], cite: Callable[..., str]) -> str:
         return ""
     return (
         " Every model held a filter of the unit's own spikes of the last "
-        f"{_plain(value('encoding.history_s'))} s, made of {_plain(value('encoding.history_functions'))} raised cosines {cite('history')}."
+        f"{_plain(value('encoding.history_s'))} s, made of {_plain(value('encoding.history_functions'))} "
+        f"raised cosines {cite('history')}."
     )
 
 
