@@ -16,6 +16,7 @@ COLUMNS = (
     "k",
     "n",
     "animals",
+    "sessions",
     "value",
     "low",
     "high",
@@ -29,7 +30,7 @@ COLUMNS = (
 
 
 def speed_table(units: pd.DataFrame, settings: PopulationSettings) -> pd.DataFrame:
-    """Speed-tuning shapes and the change of information with speed, in one table.
+    """Speed-tuning shapes, the change of information with speed, and fitted speed gains, in one table.
 
     Parameters
     ----------
@@ -43,10 +44,12 @@ def speed_table(units: pd.DataFrame, settings: PopulationSettings) -> pd.DataFra
         Rows with measure "speed_shape": per shape, `k` of the `n` units that encode speed, `value` the
         share. Rows with measure "<variable>_information_change", for every variable measured at slow and at
         fast running: `value` is the median over `n` units of fast minus slow (`unit` bits_per_spike), `k` how
-        many units gained, `p` of the Wilcoxon signed-rank test. Rows with measure "<variable>_speed_gain",
-        for every variable with a fitted speed gain, over the units that encode it: the median gain, the
-        shares whose tuning sharpens or blunts, and the change of the fitted information. Each for all animals
-        together and for each animal; the interval is `low`, `high` of `confidence` by `method`.
+        many units gained, `p` of the Wilcoxon signed-rank test; no model stands behind these. Rows with
+        measure "<variable>_speed_gain", for every variable with a fitted speed gain, over the units that
+        encode it: mean and median gain (`k` gains above 0), the shares whose tuning sharpens or blunts, the
+        median change of the fitted information (bits_per_spike, bits_per_s), and of the units asked the share
+        whose fit failed. Each for all units, for each animal, and for each group and region; the interval is
+        `low`, `high` of `confidence` by `method`.
     """
     changes = [
         row for variable in compared_variables(units) for row in change_rows(units, variable, settings)

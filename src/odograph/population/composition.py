@@ -27,6 +27,8 @@ COLUMNS = (
 )
 AT_LEAST_ONE = "at least one variable"
 TWO_OR_MORE = "two or more variables"
+LEVEL_OF_FIT = 0.05
+COMPATIBLE = f"rescaled intervals compatible with the selected model at {100 * LEVEL_OF_FIT:g} %"
 # Above this many variables only the combinations that some unit has are listed.
 _MOST_LISTED_VARIABLES = 4
 
@@ -46,15 +48,17 @@ def composition(units: pd.DataFrame, settings: PopulationSettings) -> pd.DataFra
         One row per level ("all", "animal", "group", "region"), name within it, and category. `kind` is
         "exact" for a combination and nothing else (`position+speed`, `constant`), and "includes" for a
         variable whatever else the unit encodes (`position, whatever else`), `at least one variable` and
-        `two or more variables`. `k` of `n` units in `animals` animals; `share` and its
-        interval `low`, `high` of `confidence` by `method`, as `share_rows` makes them.
+        `two or more variables`. Where fits were judged on held-out time, `kind` "fit" has the units, of those
+        judged, whose rescaled intervals are compatible with the selected model. `k` of `n` units in `animals`
+        animals; `share` and its interval `low`, `high` of `confidence` by `method`, as `share_rows` makes
+        them.
     """
     fitted = fitted_units(units)
     variables = variables_of(units)
     categories, members = _membership(fitted, variables)
     animals = fitted["animal"].to_numpy(object).astype(str)
     rows = []
-    for level, name, chosen in _subsets(fitted):
+    for level, name, chosen in subsets(fitted):
         shares_of_categories = share_rows(
             members[chosen],
             animals[chosen],
@@ -64,7 +68,25 @@ def composition(units: pd.DataFrame, settings: PopulationSettings) -> pd.DataFra
         )
         for (kind, category), shares in zip(categories, shares_of_categories, strict=True):
             rows.append({"level": level, "name": name, "kind": kind, "category": category, **shares})
+        rows += _fit_rows(fitted[chosen], level, name, settings)
     return pd.DataFrame(rows, columns=list(COLUMNS))
+
+
+def _fit_rows(
+    units: pd.DataFrame, level: str, name: str, settings: PopulationSettings
+) -> list[dict[str, object]]:
+    """How many units' selected models pass the Kolmogorov-Smirnov test on held-out time; none without it."""
+    if "rescaling_ks_p" not in units:
+        return []
+    judged = units[units["rescaling_ks_p"].notna()]
+    (share,) = share_rows(
+        (judged["rescaling_ks_p"].to_numpy(float) > LEVEL_OF_FIT)[:, None],
+        judged["animal"].to_numpy(object).astype(str),
+        settings,
+        purpose=f"fit {level} {name}",
+        within_animal=level == "animal",
+    )
+    return [{"level": level, "name": name, "kind": "fit", "category": COMPATIBLE, **share}]
 
 
 def share_rows(
@@ -126,14 +148,17 @@ def share_rows(
     ]
 
 
-def _subsets(fitted: pd.DataFrame) -> list[tuple[str, str, np.ndarray]]:
-    """Level, name and the units that belong there; units without a group or region are in no such subset."""
-    subsets = [("all", "all", np.ones(len(fitted), bool))]
+def subsets(units: pd.DataFrame) -> list[tuple[str, str, np.ndarray]]:
+    """All units, then those of each animal, group and region: level, name, which units, (n,) of bool.
+
+    Units without a group or region are in no such subset.
+    """
+    found = [("all", "all", np.ones(len(units), bool))]
     for level in ("animal", "group", "region"):
-        labels = fitted[level].to_numpy(object)
+        labels = units[level].to_numpy(object)
         names = sorted({str(label) for label in labels if label is not None and label == label})
-        subsets += [(level, name, np.array([label == name for label in labels], bool)) for name in names]
-    return subsets
+        found += [(level, name, np.array([label == name for label in labels], bool)) for name in names]
+    return found
 
 
 def _membership(fitted: pd.DataFrame, variables: list[str]) -> tuple[list[tuple[str, str]], np.ndarray]:

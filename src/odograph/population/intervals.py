@@ -13,7 +13,7 @@ from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.stats import binom, false_discovery_control, norm
+from scipy.stats import binom, false_discovery_control, norm, t
 
 from odograph.settings.population import PopulationSettings
 
@@ -193,6 +193,24 @@ def median_interval(values: np.ndarray, confidence: float) -> Interval:
     if rank < 1:
         return no_interval(counted(n, "unit"))
     return Interval(float(ordered[rank - 1]), float(ordered[n - rank]), "order statistics, over units")
+
+
+def mean_interval(values: np.ndarray, confidence: float) -> Interval:
+    """Student's interval of a mean (Student 1908, Biometrika 6:1).
+
+    Parameters
+    ----------
+    values : (n,) array
+        Independent values.
+    confidence : float
+        Coverage, such as 0.95.
+    """
+    values = np.asarray(values, float)
+    n = len(values)
+    if n < 2:
+        return no_interval(counted(n, "unit"))
+    half = float(t.ppf(0.5 + confidence / 2, n - 1) * values.std(ddof=1) / np.sqrt(n))
+    return Interval(float(values.mean()) - half, float(values.mean()) + half, "Student's t, over units")
 
 
 def counted(number: int, noun: str, plural: str | None = None) -> str:

@@ -6,7 +6,7 @@ import numpy as np
 import pandas as pd
 from scipy.stats import wilcoxon
 
-from odograph.population.composition import share_rows
+from odograph.population.composition import share_rows, subsets
 from odograph.population.gather import fitted_units, variables_of
 from odograph.population.intervals import bootstrap_interval, counted, median_interval
 from odograph.settings.population import PopulationSettings
@@ -30,8 +30,9 @@ def shape_rows(units: pd.DataFrame, settings: PopulationSettings) -> list[dict[s
     shape = tuned["speed_shape"].to_numpy(object) if len(tuned) else np.empty(0, object)
     members = np.column_stack([shape == name for name in SHAPES]).reshape(len(tuned), len(SHAPES))
     animals = tuned["animal"].to_numpy(object).astype(str)
+    sessions = tuned["session"].to_numpy(object)
     rows = []
-    for level, name, chosen in by_animal(animals):
+    for level, name, chosen in subsets(tuned):
         counts = share_rows(
             members[chosen],
             animals[chosen],
@@ -42,7 +43,7 @@ def shape_rows(units: pd.DataFrame, settings: PopulationSettings) -> list[dict[s
         for category, row in zip(SHAPES, counts, strict=True):
             row["value"] = row.pop("share")
             head = {"measure": "speed_shape", "level": level, "name": name, "category": category}
-            rows.append({**head, **row, "unit": "share"})
+            rows.append({**head, **row, "sessions": len(set(sessions[chosen])), "unit": "share"})
     return rows
 
 
@@ -59,14 +60,14 @@ def information_pairs(units: pd.DataFrame, variable: str) -> pd.DataFrame:
     Returns
     -------
     DataFrame
-        session, unit, animal, slow_bits_per_spike, fast_bits_per_spike, change_bits_per_spike (fast minus
-        slow), sorted by animal, session and unit.
+        session, unit, animal, group, region, slow_bits_per_spike, fast_bits_per_spike, change_bits_per_spike
+        (fast minus slow), sorted by animal, session and unit.
     """
     names = [f"{variable}_information_{half}_bits_per_spike" for half in ("slow", "fast")]
     fitted = fitted_units(units)
     fitted = fitted[fitted[f"encodes_{variable}"].to_numpy(bool)]
     slow, fast = (fitted[name].to_numpy(float) for name in names)
-    pairs = fitted[["session", "unit", "animal"]].assign(
+    pairs = fitted[["session", "unit", "animal", "group", "region"]].assign(
         slow_bits_per_spike=slow, fast_bits_per_spike=fast, change_bits_per_spike=fast - slow
     )
     known = np.isfinite(slow) & np.isfinite(fast)
@@ -79,7 +80,7 @@ def change_rows(units: pd.DataFrame, variable: str, settings: PopulationSettings
     measure = f"{variable}_information_change"
     animals = pairs["animal"].to_numpy(object).astype(str)
     rows = []
-    for level, name, chosen in by_animal(animals):
+    for level, name, chosen in subsets(pairs):
         part = pairs[chosen]
         change = part["change_bits_per_spike"].to_numpy(float)
         purpose = f"{measure} {level} {name}"
@@ -89,7 +90,7 @@ def change_rows(units: pd.DataFrame, variable: str, settings: PopulationSettings
             "median_fast": median_or_nan(part["fast_bits_per_spike"]),
         }
         head = {"measure": measure, "level": level, "name": name, "category": "fast minus slow"}
-        rows.append(head | row | {"unit": "bits_per_spike"})
+        rows.append(head | row | {"sessions": part["session"].nunique(), "unit": "bits_per_spike"})
     return rows
 
 
@@ -145,9 +146,3 @@ def signed_rank_p(change: np.ndarray) -> float:
 def median_or_nan(values: np.ndarray) -> float:
     """Median, NaN of nothing."""
     return float(np.median(values)) if len(values) else float("nan")
-
-
-def by_animal(animals: np.ndarray) -> list[tuple[str, str, np.ndarray]]:
-    """All units, then those of each animal: level, name, which units, (n,) of bool."""
-    everything = ("all", "all", np.ones(len(animals), bool))
-    return [everything, *(("animal", str(name), animals == name) for name in np.unique(animals))]

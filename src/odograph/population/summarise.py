@@ -3,13 +3,13 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Iterable, Mapping
+from collections.abc import Iterable, Mapping
 from typing import Any
 
 import numpy as np
 import pandas as pd
 
-from odograph.population.composition import AT_LEAST_ONE, TWO_OR_MORE
+from odograph.population.composition import AT_LEAST_ONE, COMPATIBLE, TWO_OR_MORE
 from odograph.population.gains import gain_variables
 from odograph.population.gather import UNNAMED_ANIMAL, fitted_units, in_order, variables_of
 from odograph.population.intervals import FEW_ANIMALS, counted
@@ -71,11 +71,12 @@ def summary(
                 for variable in compared_variables(units)
             },
             "speed_gains": {variable: _gains(speed, variable) for variable in gain_variables(units)},
-            "speed_gains_failed": _count(fitted, "speed_gain_status", lambda column: column == "failed"),
-            "rescaled_intervals_fit": {
-                "k": _count(fitted, "rescaling_ks_p", lambda column: column > 0.05),
-                "n": _count(fitted, "rescaling_ks_p", lambda column: column.notna()),
-            },
+            "speed_gains_failed": int((fitted["speed_gain_status"] == "failed").sum())
+            if "speed_gain_status" in fitted
+            else 0,
+            "rescaled_intervals_fit": (
+                _share(whole.loc[("fit", COMPATIBLE)]) if ("fit", COMPATIBLE) in whole.index else None
+            ),
             "held_out_bits_per_spike": _quartiles(fitted),
         }
     )
@@ -104,6 +105,14 @@ def summary_lines(summary: Mapping[str, Any]) -> list[str]:
         _trust_line(summary),
     ]
     return [_shortened(line, _LINE_LENGTH) for line in lines]
+
+
+def fit_line(summary: Mapping[str, Any]) -> str:
+    """How many units' selected models agree with held-out time, as a sentence; empty without a test."""
+    share = summary.get("rescaled_intervals_fit")
+    if not share or not share["n"]:
+        return ""
+    return f"Goodness of fit on held-out time: {COMPATIBLE} in {_of_units(share)}{_interval(share)}."
 
 
 def _sessions_line(summary: Mapping[str, Any]) -> str:
@@ -174,7 +183,7 @@ def _sharpening_line(summary: Mapping[str, Any]) -> str:
         gain = gains[variable]
         if gain["n"]:
             counts = f"{gain['sharpens']['k']} sharpen, {gain['blunts']['k']} blunt of {gain['n']}"
-            told.append(f"{_words(variable)} {counts} (median gain {gain['median']:+.2f})")
+            told.append(f"{_words(variable)} {counts} (mean gain {gain['mean']:+.2f})")
     if not told:
         return _information_line(summary["information_change"])
     failed = summary["speed_gains_failed"]
@@ -255,18 +264,17 @@ def _change(row: pd.Series) -> dict[str, Any]:
 
 def _gains(speed: pd.DataFrame, variable: str) -> dict[str, Any]:
     measure = f"{variable}_speed_gain"
-    median = _speed_row(speed, measure, "median gain")
-    shared = ("n", "animals", "low", "high", "confidence", "p", "method")
+    mean, median = (_speed_row(speed, measure, f"{centre} gain") for centre in ("mean", "median"))
+    shared = ("n", "animals", "sessions", "low", "high", "confidence", "method")
     return {
+        "mean": mean["value"],
         "median": median["value"],
-        **{name: median[name] for name in shared},
-        **{verdict: _share(_speed_row(speed, measure, verdict)) for verdict in ("sharpens", "blunts")},
+        **{name: mean[name] for name in shared},
+        **{
+            category: _share(_speed_row(speed, measure, category))
+            for category in ("sharpens", "blunts", "failed")
+        },
     }
-
-
-def _count(units: pd.DataFrame, column: str, holds: Callable[[pd.Series], pd.Series]) -> int:
-    """Units in whose column something holds; 0 where the study has no such column."""
-    return int(holds(units[column]).sum()) if column in units else 0
 
 
 def _speed_row(speed: pd.DataFrame, measure: str, category: str) -> pd.Series:
