@@ -184,6 +184,13 @@ def make_units(animals: list[str], per_animal: int = 9) -> tuple[pd.DataFrame, p
             for term in ("position", "head_direction"):
                 row[f"{term}_information_slow_bits_per_spike"] = 0.1 + 0.03 * k
                 row[f"{term}_information_fast_bits_per_spike"] = 0.12 + 0.04 * k
+                gain = 0.1 * (k - 2) if row[f"encodes_{term}"] else np.nan
+                row[f"{term}_speed_gain"], row[f"{term}_speed_gain_se"] = gain, 0.05
+                row[f"{term}_sharpens"], row[f"{term}_blunts"] = bool(gain > 0.2), bool(gain < 0)
+                for pace, factor in (("slow", 1.0), ("fast", 1.2 + k / 10)):
+                    row[f"{term}_fitted_{pace}_bits_per_spike"] = 0.1 * factor
+                    row[f"{term}_fitted_{pace}_bits_per_s"] = 0.4 * factor
+            row["speed_gain_status"] = "fitted" if status == "fitted" else "not_fitted"
             rows.append(row)
             for place, name in enumerate(MODELS):
                 score = {

@@ -32,6 +32,7 @@ from odograph.encoding.term_tests import term_tests
 from odograph.encoding.terms import Term
 from odograph.settings.encoding import EncodingSettings
 
+GAIN_P = 0.05  # a term whose test has a larger p gets no gain
 # Columns of the speed-gain model for each plane and circle, in the order of the fields of `Gain`.
 GAIN_COLUMNS = (
     "speed_gain",
@@ -266,7 +267,12 @@ def _speed_term(design: SessionDesign) -> Term | None:
 def _gains(design: SessionDesign, unit: UnitSpikes, space: Workspace, full: Score, row: dict) -> dict:
     """Speed gains of the planes and circles that the unit's selected model has."""
     speed = _speed_term(design)
-    tuned = [t.name for t in design.terms if t.kind in ("plane", "circle") and row[f"encodes_{t.name}"]]
+    # A term that was selected by chance has no tuning whose depth could change: its gain is not determined.
+    tuned = [
+        t.name
+        for t in design.terms
+        if t.kind in ("plane", "circle") and row[f"encodes_{t.name}"] and not row[f"{t.name}_p"] > GAIN_P
+    ]
     if speed is None or not tuned:
         return {}
     z = modulation(design.speed_cm_s)

@@ -25,6 +25,7 @@ LARGEST_LOG_STRENGTH = 20.0
 SMALLEST_LOG_STRENGTH = -12.0
 LARGEST_MOVE = 4.0
 INNER_ROUNDS = 4
+SMALLEST_CURVATURE = 0.1
 
 
 @dataclass(frozen=True)
@@ -185,6 +186,17 @@ class _Solved:
         rough, ratio, trace, _ = self.derivatives
         change = np.log(np.maximum(ratio - trace, 1e-12) / np.maximum(rough, 1e-12))
         return _bounded(self.rho + np.clip(change, -LARGEST_MOVE, LARGEST_MOVE))
+
+
+def strength_covariance(problem: Quadratic, rho: np.ndarray) -> np.ndarray:
+    """Covariance of chosen log strengths, (n_penalties, n_penalties): the inverse Hessian of V.
+
+    Directions in which V is as good as flat count with a variance of 1 / SMALLEST_CURVATURE: strengths that
+    may be anything without changing the fit would otherwise have a variance without bound (Wood, Pya &
+    Saefken 2016, J. Am. Stat. Assoc. 111:1548, section 4).
+    """
+    values, vectors = np.linalg.eigh(_Solved(problem, rho).hessian())
+    return (vectors / np.maximum(values, SMALLEST_CURVATURE)) @ vectors.T
 
 
 def _bounded(rho: np.ndarray) -> np.ndarray:

@@ -7,7 +7,8 @@ of the log rate is multiplied up at speed: deeper and sharper tuning, with no sh
 
 All coefficients and gains are fitted jointly by Newton's method on the penalised likelihood. The smoothing
 strengths start from the additive model's and are chosen again at the fitted gains, at which the model is
-linear in its coefficients. Standard errors come from the full (observed) Hessian.
+linear in its coefficients. Standard errors come from the full (observed) Hessian, with the uncertainty of the
+chosen strengths added to first order (Wood, Pya & Saefken 2016, J. Am. Stat. Assoc. 111:1548).
 """
 
 from __future__ import annotations
@@ -19,7 +20,7 @@ import numpy as np
 from odograph.encoding import kernels
 from odograph.encoding.fit import Fit
 from odograph.encoding.layout import Workspace
-from odograph.encoding.smoothing import Quadratic, tune
+from odograph.encoding.smoothing import Quadratic, strength_covariance, tune
 from odograph.encoding.spikes import UnitSpikes
 
 SPEED_SCALE_CM_S = 5.0
@@ -202,11 +203,11 @@ def fit_gains(
         point, _, converged = _climb(model, point)
         _choose_strengths(model, point)
     point, inverse, converged = _climb(model, model.at(point.coefficients, point.gains))
+    covariance = _gain_covariance(model, point, inverse)
     if converged:
         point, converged = _free_amplitudes(model, point)
-    n = len(point.coefficients)
     terms = tuple(space.terms[t].name for t in model.scaled)
-    return GainFit(terms, point.coefficients, point.gains, inverse[n:, n:], converged)
+    return GainFit(terms, point.coefficients, point.gains, covariance, converged)
 
 
 def _climb(model: GainModel, point: Point) -> tuple[Point, np.ndarray, bool]:
@@ -259,14 +260,30 @@ def _free_amplitudes(model: GainModel, point: Point) -> tuple[Point, bool]:
     return point, False
 
 
-def _choose_strengths(model: GainModel, point: Point) -> None:
-    """Smoothing strengths at these gains, for which the model is an ordinary additive one on scaled bases."""
+def _working_problem(model: GainModel, point: Point) -> Quadratic:
+    """Around these gains, at which the model is an ordinary additive one on scaled bases."""
     n = len(point.coefficients)
     score, hessian = model.derivatives(point)
     information = hessian[:n, :n] - np.diag(model.ridge)
     target = score[:n] + model.ridge * point.coefficients + information @ point.coefficients
-    problem = Quadratic(information, target, model.lay.spectra)
+    return Quadratic(information, target, model.lay.spectra)
+
+
+def _choose_strengths(model: GainModel, point: Point) -> None:
+    """Smoothing strengths at these gains."""
+    problem = _working_problem(model, point)
     model.log_strengths = tune(problem, model.log_strengths, choose=True, tolerance=1e-3).log_strengths
+
+
+def _gain_covariance(model: GainModel, point: Point, inverse: np.ndarray) -> np.ndarray:
+    """Covariance of the gains: their block of the inverse Hessian, and what the strengths may move them."""
+    n = len(point.coefficients)
+    pulls = np.exp(model.log_strengths)[:, None] * model.lay.spectra * point.coefficients
+    slopes = -inverse[n:, :n] @ pulls.T
+    return (
+        inverse[n:, n:]
+        + slopes @ strength_covariance(_working_problem(model, point), model.log_strengths) @ slopes.T
+    )
 
 
 def _inverse(hessian: np.ndarray) -> np.ndarray:

@@ -132,9 +132,10 @@ def _encoding(value: Callable[[str], Any], cite: Callable[..., str]) -> list[str
         f"{_penalties(terms)} {cite('splines')}: {bases}. Smoothing strengths were chosen from the "
         f"training data by restricted marginal likelihood {cite('strengths')}.{drift}{_history(value, cite)} "
         f"Models of every subset of the terms ({models} in all) and the constant model were compared by "
-        f"held-out log-likelihood in {folds} folds of {blocks} interleaved contiguous blocks each, {guard_s} s beside each held-out "
-        "block being left out of training. The simplest model within one standard error of the best was "
-        f"selected {cite('one_se')}. Units with fewer than {fewest} spikes in valid time were not fitted. "
+        f"held-out log-likelihood in {folds} folds of {blocks} interleaved contiguous blocks each, "
+        f"{guard_s} s beside each held-out block being left out of training. The simplest model within one "
+        f"standard error of the best was selected {cite('one_se')}. Units with fewer than {fewest} spikes in "
+        "valid time were not fitted. "
         f"Bands are pointwise 95 %, the uncertainty of the mean level included {cite('bands', 'level')}."
     )
     test = (
@@ -180,7 +181,7 @@ def _gains(value: Callable[[str], Any], cite: Callable[..., str], terms: list[di
     )
     return [
         f"Whether tuning sharpens with running speed was asked of the units whose selected model holds "
-        f"{' or '.join(scaled)}: that term's part f of the log rate was replaced by (1 + g z) f, z being "
+        f"{' or '.join(scaled)}, with a p of at most 0.05 where it was tested: that term's part f of the log rate was replaced by (1 + g z) f, z being "
         "log(1 + v / 5 cm/s) of the speed v, standardised over valid time. Gains g, tuning and all other "
         "terms were fitted jointly; standard errors are from the full Hessian of the penalised likelihood. "
         f"Above 0 a gain means tuning that is deeper and sharper at speed.{test} In plain units it is told "
