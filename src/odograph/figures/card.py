@@ -1,4 +1,4 @@
-"""The card of one unit: path and spikes, maps and curves with bands, held-out scores of all models."""
+"""The card of one unit: path and spikes, maps and curves with bands, held-out scores, fit and speed gains."""
 
 from __future__ import annotations
 
@@ -17,15 +17,16 @@ from odograph.figures.card_curves import (
     extra_terms,
     score_rows,
 )
+from odograph.figures.card_fit import ROW_IN, draw_fit_row, has_fit_row
 from odograph.figures.card_maps import draw_maps, draw_spikes
 from odograph.figures.colours import SOFT_INK, VERDICT_COLOURS, model_label
 from odograph.figures.panels import column, number, place_extent, unit_status, valid_bins, wrapped
 from odograph.figures.style import axes_at, figure_style, new_figure, text_at
 from odograph.settings.figures import FiguresSettings
 
-WIDTH_IN, HEIGHT_IN = 7.2, 5.64
-_MAP_IN, _MAP_BOTTOM_IN = 1.78, 2.9
-_CURVE_IN, _CURVE_BOTTOM_IN = 1.2, 0.91
+WIDTH_IN, HEIGHT_IN = 7.2, 5.5
+_MAP_IN, _MAP_BOTTOM_IN = 1.78, 2.76
+_CURVE_IN, _CURVE_BOTTOM_IN = 1.2, 0.77
 
 
 def draw_card(
@@ -57,8 +58,8 @@ def draw_card(
     Returns
     -------
     Figure
-        7.2 by 5.64 inches, taller where more variables than the usual three were fitted. A unit that was not
-        fitted gets a card too, which says why.
+        7.2 by 7 inches (5.5 for results without gains and without a judgement of the fit), taller where more
+        variables than the usual three were fitted. A unit that was not fitted gets a card too, which says why.
     """
     with figure_style(settings):
         extent = place_extent(column(behaviour, "x_m"), column(behaviour, "y_m"), arena_corners_m)
@@ -69,20 +70,24 @@ def draw_card(
         added = extra_terms(curves)
         # With more variables the curves take the whole row and the scores a row of their own below it.
         lift = 0.65 + 0.17 * len(score_rows(scores, str(row.get("selected_model")))) if added else 0.0
-        figure = new_figure(WIDTH_IN, HEIGHT_IN + lift - _MAP_IN + map_in, settings)
+        foot = ROW_IN if has_fit_row(row, curves) else 0.0
+        figure = new_figure(WIDTH_IN, HEIGHT_IN + foot + lift - _MAP_IN + map_in, settings)
         _head(figure, row, behaviour)
-        bottom = _MAP_BOTTOM_IN + lift
+        bottom = _MAP_BOTTOM_IN + foot + lift
+        curve_bottom = _CURVE_BOTTOM_IN + foot
         path, observed, fitted = (axes_at(figure, x, bottom, _MAP_IN, map_in) for x in (0.46, 2.62, 4.56))
         scale = axes_at(figure, 6.44, bottom, 0.09, map_in)
         draw_spikes(path, row, curves, behaviour, arena_corners_m, extent, settings)
         draw_maps(observed, fitted, scale, row, curves, arena_corners_m, extent, settings)
         if added:
-            _curve_row(figure, row, curves, behaviour, added, _CURVE_BOTTOM_IN + lift, settings)
-            draw_scores(axes_at(figure, 3.4, _CURVE_BOTTOM_IN, 3.6, lift - 0.65), row, scores, -0.82)
+            _curve_row(figure, row, curves, behaviour, added, curve_bottom + lift, settings)
+            draw_scores(axes_at(figure, 3.4, curve_bottom, 3.6, lift - 0.65), row, scores, -0.82)
         else:
-            draw_direction(axes_at(figure, 0.46, _CURVE_BOTTOM_IN, 1.78, _CURVE_IN), row, curves, settings)
-            draw_speed(axes_at(figure, 2.62, _CURVE_BOTTOM_IN, 1.15, _CURVE_IN), row, curves, behaviour)
-            draw_scores(axes_at(figure, 5.95, _CURVE_BOTTOM_IN, 1.15, _CURVE_IN + 0.16), row, scores, -1.72)
+            draw_direction(axes_at(figure, 0.46, curve_bottom, 1.78, _CURVE_IN), row, curves, settings)
+            draw_speed(axes_at(figure, 2.62, curve_bottom, 1.15, _CURVE_IN), row, curves, behaviour)
+            draw_scores(axes_at(figure, 5.95, curve_bottom, 1.15, _CURVE_IN + 0.16), row, scores, -1.72)
+        if foot:
+            draw_fit_row(figure, row, curves)
         _foot(figure, row)
     return figure
 
@@ -202,39 +207,7 @@ def _foot(figure: Figure, row: Mapping[str, Any]) -> None:
             "Curves: fitted with 95 % band; dots: observed; broken line: mean rate. "
             "Scores ± standard error; diamond: selected."
         )
-        text_at(figure, 0.1, 0.33, key, va="bottom", fontsize=7, color=SOFT_INK)
+        text_at(figure, 0.1, 0.19, key, va="bottom", fontsize=7, color=SOFT_INK)
     if parts:
         text = "Information, bits per spike: " + "; ".join(parts)
-        text_at(figure, 0.1, 0.19, text, va="bottom", fontsize=7, color=SOFT_INK)
-    last = ". ".join(part for part in (_gains_text(row), _goodness_text(row)) if part)
-    if last:
-        text_at(figure, 0.1, 0.05, f"{last}.", va="bottom", fontsize=7, color=SOFT_INK)
-
-
-def _gains_text(row: Mapping[str, Any]) -> str:
-    """Speed gains with their standard errors and p."""
-    if row.get("speed_gain_status") == "failed":
-        return "Speed gain: the fit failed"
-    told = []
-    for term, label in (("position", "position"), ("head_direction", "direction")):
-        gain, error, p = (row.get(f"{term}_speed_gain{suffix}") for suffix in ("", "_se", "_p"))
-        if number(gain) != "–":
-            tested = f", p {_p_text(p)}" if number(p) != "–" else ""
-            told.append(f"{label} {float(gain):+.2f} ± {float(error):.2f}{tested}")
-    return f"Speed gain: {'; '.join(told)}" if told else ""
-
-
-def _goodness_text(row: Mapping[str, Any]) -> str:
-    """How the selected model fits held-out time."""
-    ks, p = row.get("rescaling_ks"), row.get("rescaling_ks_p")
-    if number(ks) == "–":
-        return ""
-    peak, lag_s = row.get("residual_correlation_peak"), row.get("residual_correlation_peak_lag_s")
-    text = f"Held out: KS {float(ks):.3f}, p {_p_text(p)}"
-    if number(peak) != "–":
-        text += f"; residual correlation {float(peak):+.2f} at {1000 * float(lag_s):.0f} ms"
-    return text
-
-
-def _p_text(p: float) -> str:
-    return "< 0.001" if p < 0.001 else number(p, 2)
+        text_at(figure, 0.1, 0.05, text, va="bottom", fontsize=7, color=SOFT_INK)

@@ -181,7 +181,8 @@ def _gains(value: Callable[[str], Any], cite: Callable[..., str], terms: list[di
     )
     return [
         f"Whether tuning sharpens with running speed was asked of the units whose selected model holds "
-        f"{' or '.join(scaled)}, with a p of at most 0.05 where it was tested: that term's part f of the log rate was replaced by (1 + g z) f, z being "
+        f"{' or '.join(scaled)}, with a p of at most 0.05 where it was tested: that term's part f of the log "
+        "rate was replaced by (1 + g z) f, z being "
         "log(1 + v / 5 cm/s) of the speed v, standardised over valid time. Gains g, tuning and all other "
         "terms were fitted jointly; standard errors are from the full Hessian of the penalised likelihood. "
         f"Above 0 a gain means tuning that is deeper and sharper at speed.{test} In plain units it is told "
