@@ -168,6 +168,7 @@ def _empty_row(design: SessionDesign, unit: UnitSpikes) -> dict:
         "residual_correlation_peak_lag_s": np.nan,
         "speed_shape": "",
         "speed_shape_probability": np.nan,
+        "speed_slope_one_sign_probability": np.nan,
         "slow_fast_cut_cm_s": np.nan,
         "speed_gain_status": "not_fitted",
     }
@@ -308,4 +309,8 @@ def _shape(design: SessionDesign, space: Workspace, full: Score, row: dict) -> d
         basis @ full.fit.covariance[block, block] @ basis.T,
         design.settings.seed,
     )
-    return {"speed_shape": shape.name, "speed_shape_probability": shape.probability}
+    return {
+        "speed_shape": shape.name,
+        "speed_shape_probability": shape.probability,
+        "speed_slope_one_sign_probability": shape.one_sign,
+    }

@@ -3,6 +3,9 @@
 Curves are drawn from the fitted posterior. A draw rises when what it climbs is not undone: its largest fall
 is less than a quarter of its largest climb, over the well-sampled range (5th to 95th percentile of the
 covariate); it falls when the reverse holds; else it is non-monotonic. The share of draws is the probability.
+
+Beside it stands the stricter probability that the slope keeps its sign at every point of that range. A curve
+that levels off has a slope near 0 there, of either sign, which is why it does not decide the shape.
 """
 
 from __future__ import annotations
@@ -19,10 +22,14 @@ SHAPES = ("rising", "falling", "non_monotonic")
 
 @dataclass(frozen=True)
 class Shape:
-    """`name` is one of SHAPES or `undecided`; `probability` belongs to the likeliest of SHAPES."""
+    """`name` is one of SHAPES or `undecided`; `probability` belongs to the likeliest of SHAPES.
+
+    `one_sign` is the probability that the slope keeps its sign throughout.
+    """
 
     name: str
     probability: float
+    one_sign: float
 
 
 def largest_climb(curves: np.ndarray) -> np.ndarray:
@@ -54,4 +61,8 @@ def curve_shape(mean: np.ndarray, covariance: np.ndarray, seed: int) -> Shape:
     share = np.bincount(classify(draws), minlength=3) / DRAWS
     likeliest = int(np.argmax(share))
     probability = float(share[likeliest])
-    return Shape(SHAPES[likeliest] if probability >= LEAST_PROBABILITY else "undecided", probability)
+    slopes = np.diff(draws, axis=1)
+    one_sign = float(np.mean(np.all(slopes >= 0, axis=1) | np.all(slopes <= 0, axis=1)))
+    return Shape(
+        SHAPES[likeliest] if probability >= LEAST_PROBABILITY else "undecided", probability, one_sign
+    )
