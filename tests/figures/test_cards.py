@@ -145,6 +145,11 @@ def test_absent_term_is_said(missing, unit_row, unit_scores, curves, behaviour, 
 
 def test_added_variable_gets_a_panel(unit_row, unit_scores, curves, behaviour, corners, settings, misplaced):
     curves |= {"licking_value": np.arange(5.0), "licking_rate_hz": np.arange(5.0)}
+    unit_row |= {
+        "speed_gain_status": "fitted",
+        "theta_phase_speed_gain": 0.2,
+        "theta_phase_speed_gain_se": 0.1,
+    }
     curves |= {
         "theta_phase_rad": curves["head_direction_rad"],
         "theta_phase_rate_hz": curves["head_direction_rate_hz"],
@@ -196,28 +201,99 @@ def test_arena_keeps_its_shape(shape, unit_row, unit_scores, curves, behaviour, 
     assert box.width / box.height == pytest.approx(wide / high, rel=0.01)
 
 
-def test_gains_and_goodness_stand_at_the_foot(
-    unit_row, unit_scores, curves, behaviour, corners, settings, misplaced
-):
-    told = unit_row | {
+@pytest.fixture
+def judged_row(unit_row) -> dict:
+    """A unit whose gains were fitted and whose fit was judged."""
+    return unit_row | {
         "speed_gain_status": "fitted",
         "position_speed_gain": 0.213,
         "position_speed_gain_se": 0.041,
         "position_speed_gain_p": 0.0003,
+        "position_fitted_slow_bits_per_spike": 0.412,
+        "position_fitted_fast_bits_per_spike": 0.875,
         "head_direction_speed_gain": -0.05,
         "head_direction_speed_gain_se": 0.06,
         "head_direction_speed_gain_p": 0.44,
         "rescaling_ks": 0.0213,
         "rescaling_ks_p": 0.31,
+        "rescaling_intervals": 1571,
         "residual_correlation_peak": 0.034,
         "residual_correlation_peak_lag_s": 0.04,
     }
-    figure = draw_card(told, unit_scores, curves, behaviour, corners, settings)
-    text = " ".join(t.get_text() for t in figure.texts)
-    assert "Speed gain: position +0.21 ± 0.04, p < 0.001; direction -0.05 ± 0.06, p 0.44." in text
-    assert "Held out: KS 0.021, p 0.31; residual correlation +0.03 at 40 ms." in text
-    assert not misplaced(figure)
-    failed = draw_card(
-        unit_row | {"speed_gain_status": "failed"}, unit_scores, curves, behaviour, corners, settings
+
+
+@pytest.fixture
+def judged_curves(curves) -> dict:
+    lag_s = 0.02 * np.arange(1, 51)
+    residuals = 0.1 * np.exp(-lag_s / 0.1) - 0.01
+    return curves | {
+        "residual_lag_s": lag_s,
+        "residual_autocorrelation": residuals,
+        "residual_band": np.full(50, 0.02),
+    }
+
+
+@pytest.mark.parametrize("size", [7, 9])
+def test_gains_and_fit_have_a_row(
+    size, judged_row, judged_curves, unit_scores, behaviour, corners, record_id, misplaced
+):
+    figure = draw_card(
+        judged_row, unit_scores, judged_curves, behaviour, corners, FiguresSettings(dpi=72, font_size_pt=size)
     )
-    assert any("Speed gain: the fit failed" in t.get_text() for t in failed.texts)
+    told = words(figure).splitlines()
+    for line in (
+        "position +0.21 ± 0.04, p < 0.001",
+        "  slow 0.41, fast 0.88 bits per spike",
+        "head direction −0.05 ± 0.06, p = 0.440",
+        "KS 0.021 of 1,571 rescaled intervals,",
+        "p = 0.310: compatible with the model at 5 %",
+        "largest residual correlation +0.03 at 40 ms",
+    ):
+        assert line in told
+    axes = axes_titled(figure, "residual autocorrelation")
+    drawn = [line.get_ydata() for line in axes.lines]
+    assert any(np.array_equal(values, judged_curves["residual_autocorrelation"]) for values in drawn)
+    (band,) = axes.collections
+    edges = band.get_paths()[0].vertices[:, 1]
+    assert (edges.min(), edges.max()) == (-0.02, 0.02)
+    assert misplaced(figure) == []
+
+
+def test_stamp_of_the_record_has_its_place(
+    judged_row, judged_curves, unit_scores, behaviour, corners, settings
+):
+    """The stamp comes when the file is written: the lowest line has to leave the right corner free."""
+    judged_row |= {f"head_direction_information_{pace}_bits_per_spike": 0.1 for pace in ("slow", "fast")}
+    figure = draw_card(judged_row, unit_scores, judged_curves, behaviour, corners, settings)
+    figure.draw_without_rendering()
+    lowest = [text for text in figure.texts if text.get_position()[1] * figure.get_size_inches()[1] < 0.12]
+    assert len(lowest) == 1
+    assert lowest[0].get_window_extent().x1 < figure.bbox.x1 - 1.2 * figure.dpi
+
+
+@pytest.mark.parametrize(
+    "change, line",
+    [
+        ({"speed_gain_status": "failed", "position_speed_gain": np.nan}, "The fit failed."),
+        ({"position_speed_gain": np.nan, "head_direction_speed_gain": np.nan}, "no tuning that can sharpen."),
+        ({"rescaling_ks_p": 0.04}, "p = 0.040: not compatible with the model at 5 %"),
+        ({"rescaling_ks": np.nan, "rescaling_ks_p": np.nan}, "It was not judged for this unit."),
+        ({"position_speed_gain_p": np.nan}, "position +0.21 ± 0.04"),
+    ],
+)
+def test_gains_and_fits_that_are_not_there_are_said(
+    change, line, judged_row, curves, unit_scores, behaviour, corners, settings, misplaced
+):
+    figure = draw_card(judged_row | change, unit_scores, curves, behaviour, corners, settings)
+    assert line in words(figure).splitlines()
+    assert "Residuals were not kept" in words(figure)
+    assert misplaced(figure) == []
+
+
+def test_card_of_results_without_them_is_as_it_was(
+    unit_row, judged_row, unit_scores, curves, behaviour, corners, settings
+):
+    old = draw_card(unit_row, unit_scores, curves, behaviour, corners, settings)
+    new = draw_card(judged_row, unit_scores, curves, behaviour, corners, settings)
+    assert "speed gain" not in words(old)
+    assert new.get_size_inches()[1] - old.get_size_inches()[1] == pytest.approx(1.5)

@@ -161,3 +161,35 @@ def test_gains_are_ordered_and_verdicts_marked(settings):
     drawn = np.concatenate([np.column_stack(line.get_data()) for line in marks.values()])
     assert np.all(np.diff(drawn[np.argsort(drawn[:, 0]), 1]) > 0)
     assert f"{int((gain > 0.3).sum())} sharpen" in gains.get_xlabel()
+
+
+def test_gains_that_leave_the_panel_and_fits_that_failed_are_said(population, settings, misplaced):
+    units, *others = population(STUDIES["three"])
+    encoding = np.flatnonzero(units["encodes_position"])
+    units.loc[encoding[0], "position_speed_gain"] = 2.5
+    units.loc[encoding[1], "position_speed_gain_se"] = 9.0
+    units.loc[encoding[2], ["position_speed_gain", "head_direction_speed_gain"]] = np.nan
+    units.loc[encoding[2], "speed_gain_status"] = "failed"
+    figure = draw_population_figure("speed_gains", units, *others, settings)
+    axes = next(a for a in figure.axes if a.get_title(loc="left") == "position: gain of each unit")
+    drawn = np.concatenate([line.get_ydata() for line in axes.lines if line.get_linestyle() == "None"])
+    low, high = axes.get_ylim()
+    assert len(drawn) == len(encoding) - 1
+    assert drawn.max() == high == 1.5 and low <= drawn.min()
+    ends = np.concatenate([path.vertices[:, 1] for c in axes.collections for path in c.get_paths()])
+    assert low <= ends.min() and ends.max() <= high
+    assert "1 beyond the edge" in axes.get_xlabel()
+    assert "1 fit failed" in words(figure)
+    assert misplaced(figure) == []
+
+
+def test_standard_errors_are_drawn(population, settings):
+    units, *others = population(STUDIES["one"])
+    figure = draw_population_figure("speed_gains", units, *others, settings)
+    axes = next(a for a in figure.axes if a.get_title(loc="left") == "position: gain of each unit")
+    chosen = units[units["encodes_position"]].sort_values("position_speed_gain")
+    below, above = (
+        np.array([path.vertices[:, 1] for path in lines.get_paths()]) for lines in axes.collections
+    )
+    np.testing.assert_allclose(below[:, 1], chosen["position_speed_gain"] - chosen["position_speed_gain_se"])
+    np.testing.assert_allclose(above[:, 1], chosen["position_speed_gain"] + chosen["position_speed_gain_se"])

@@ -49,11 +49,14 @@ CAPTIONS = {
     ),
     "speed_gains": Caption(
         "Speed gain of the tuning",
-        "Units that encode position or head direction, by the gain fitted to them: how much deeper the "
-        "tuning becomes with each standard deviation of the logarithm of running speed (0: not at all, "
-        "above 0: sharper when fast). Lines: standard errors. Filled marks pointing up or down: gains that "
-        "differ from 0 at the study's false discovery rate. At the right, information of the fitted tuning "
-        "at the 20th and the 80th percentile of running speed.",
+        "Units that encode position or head direction, by the gain fitted to them (units and animals: above "
+        "the panels). In the model a unit's log rate is a sum of smooth terms, of which the one for position "
+        "or direction is multiplied by 1 + g z, z being the standardised logarithm of 1 + v / 5 cm/s of the "
+        "speed v: a gain g of 0 leaves the tuning as it is, above 0 it is deeper and sharper at speed, "
+        "below 0 flatter. Lines: standard errors. Filled marks, pointing up or down: gains above or below "
+        "0 by a score test ranked among circular shifts of speed, at the study's false discovery rate over "
+        "the units that encode the variable. At the right, information of the fitted tuning at the 20th and "
+        "the 80th percentile of running speed; above the broken line it is more at speed.",
         "population/units.tsv",
     ),
     "held_out_scores": Caption(

@@ -58,8 +58,8 @@ def draw_card(
     Returns
     -------
     Figure
-        7.2 by 7 inches (5.5 for results without gains and without a judgement of the fit), taller where more
-        variables than the usual three were fitted. A unit that was not fitted gets a card too, which says why.
+        7.2 by 7 inches (5.5 where results say nothing of gains and of the fit), taller where more variables
+        than the usual three were fitted. A unit that was not fitted gets a card too, which says why.
     """
     with figure_style(settings):
         extent = place_extent(column(behaviour, "x_m"), column(behaviour, "y_m"), arena_corners_m)
