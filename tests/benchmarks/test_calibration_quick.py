@@ -39,7 +39,7 @@ def test_intervals_of_all_shares_meet_what_is_asked(table):
 
 
 def test_false_positives_of_all_tests_together(table):
-    """460 tests at 5 %: between 2 % and 9 % (beyond that, P < 0.1 % by the binomial distribution)."""
+    """380 tests at 5 %: between 2 % and 9 % (beyond that, P < 0.5 % by the binomial distribution)."""
     values = [line["value"] for line in lines(table, "false positives at 5 %")]
     assert len(values) == 19
     assert 0.02 <= sum(values) / len(values) <= 0.09
