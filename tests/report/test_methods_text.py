@@ -64,6 +64,24 @@ def test_a_study_without_speed_has_no_speed_gains(make_context):
     assert "(1 + g z) f" in written(make_context)[0]
 
 
+def test_speed_gains_are_told_in_full(make_context):
+    text, references = written(make_context, encoding={"running_above_cm_s": 2.5})
+    for part in (
+        "holds position or head direction, with a p of at most 0.05",
+        "log(1 + v / 5 cm/s)",
+        "above 0 the tuning is deeper and sharper at speed",
+        "the 20th and of the 80th percentile of running speed (above 2.5 cm/s)",
+        "information per second, which is that times the fitted mean rate",
+    ):
+        assert part in text
+    assert REFERENCES["corrected"] in references
+
+
+def test_gains_that_were_not_tested_claim_no_test(make_context):
+    text, _ = written(make_context, encoding={"tests": False})
+    assert "(1 + g z) f" in text and "efficient score" not in text
+
+
 def test_citations_point_to_references(make_context):
     pulses = {"frame_pulses_place": "acquisition/pulses"}
     text, references = written(make_context, intake=pulses, encoding={"history_s": 0.3})

@@ -226,3 +226,57 @@ def test_missing_values_are_dashes(make_context):
     text = build_page(context)
     assert "nan" not in Page(text).one("section", id="units")["text"].lower()
     assert "<NA>" not in text
+
+
+def speed_rows() -> pd.DataFrame:
+    """A speed table: one variable's gains of all units and of a region, beside the matched halves."""
+    rows = []
+    for level, name, n in (("all", "all", 40), ("animal", "heron", 25), ("region", "MEC <left>", 0)):
+        head = {"level": level, "name": name, "n": n, "animals": 3, "sessions": 5}
+        values = {
+            "mean gain": (7, 0.123, 0.05, 0.21),
+            "median gain": (7, 0.07, 0.01, 0.11),
+            "sharpens": (12, 0.3, 0.15, 0.45),
+            "blunts": (0, 0.0, float("nan"), float("nan")),
+            "failed": (3, 0.07, 0.02, 0.19),
+            "fitted information, fast minus slow": (30, 0.25, 0.2, 0.31),
+            "fitted information rate, fast minus slow": (30, 1.5, 1.25, 1.75),
+        }
+        for category, (k, value, low, high) in values.items():
+            rows.append(head | {"measure": "head_direction_speed_gain", "category": category, "k": k})
+            rows[-1] |= {"value": value, "low": low, "high": high}
+        rows.append(head | {"measure": "head_direction_information_change", "category": "fast minus slow"})
+        rows[-1] |= {"k": 22, "value": 0.09, "low": -0.04, "high": 0.17}
+    return pd.DataFrame(rows)
+
+
+def test_speed_gains_stand_beside_the_matched_halves(make_context):
+    page = Page(build_page(make_context(speed=speed_rows())))
+    (caption,) = [e for e in page.all("caption") if e["text"] == "Does tuning sharpen with running speed"]
+    assert caption["above"][-1] == "table"
+    whole, region = [e["text"] for e in page.all("tr") if e["text"].startswith("head direction")]
+    for part in (
+        "all",
+        "0.120.05 to 0.21",
+        "12 of 40: 30 %15 to 45 %",
+        "0 of 40: 0 %",
+        "3 of 40: 7 %2 to 19 %",
+        "0.250.20 to 0.31",
+        "1.501.25 to 1.75",
+        "0.09−0.04 to 0.17",
+    ):
+        assert part in whole
+    assert "region: MEC <left>" in region and "12 of 0" in region
+    assert page.all("a", href="population/speed.tsv")
+
+
+def test_the_fit_is_told_in_a_line(make_context):
+    line = "Goodness of fit on held-out time: 30 of 40 units & so on."
+    assert line in Page(build_page(make_context(fit_line=line))).one("section", id="population")["text"]
+
+
+@pytest.mark.parametrize(
+    "speed", [None, speed_rows().iloc[:0], speed_rows().query("category == 'fast minus slow'")]
+)
+def test_results_without_gains_have_no_table_of_them(speed, make_context):
+    assert "sharpen with running speed</caption>" not in build_page(make_context(speed=speed))

@@ -35,8 +35,15 @@ _UNIT_COLUMNS = {
     "selected_bits_per_spike": "float",
     "selected_deviance_explained": "float",
     "best_model": "str",
+    "rescaling_ks": "float",
+    "rescaling_ks_p": "float",
+    "rescaling_intervals": "int",
+    "residual_correlation_peak": "float",
+    "residual_correlation_peak_lag_s": "float",
     "speed_shape": "str",
     "speed_shape_probability": "float",
+    "speed_slope_one_sign_probability": "float",
+    "speed_gain_status": "str",
     "position_information_bits_per_spike": "float",
     "head_direction_information_bits_per_spike": "float",
     "position_information_slow_bits_per_spike": "float",
@@ -263,7 +270,9 @@ def _with_verdicts(units: pd.DataFrame, settings: PopulationSettings) -> pd.Data
     )
     if "speed_shape" in units and "speed" in variables:
         units.loc[fitted & ~units["encodes_speed"], "speed_shape"] = "not_tuned"
-        units.loc[~units["encodes_speed"], "speed_shape_probability"] = np.nan
+        for column in ("speed_shape_probability", "speed_slope_one_sign_probability"):
+            if column in units:
+                units.loc[~units["encodes_speed"], column] = np.nan
     return units
 
 

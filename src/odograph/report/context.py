@@ -63,6 +63,10 @@ class PageContext:
         Shown with the methods.
     results_folder : str
         The folder of the results as the user names it, for the commands that are shown.
+    speed : DataFrame or None
+        The table of `odograph.population.adaptivity.speed_table`.
+    fit_line : str
+        How many units' models agree with held-out time, as a sentence; empty where none was judged.
     """
 
     study: str
@@ -77,6 +81,8 @@ class PageContext:
     record_id: str = ""
     software: Mapping[str, str] = field(default_factory=dict)
     results_folder: str = "results"
+    speed: pd.DataFrame | None = None
+    fit_line: str = ""
 
     def value(self, path: str) -> Any:
         """The value of a setting by its dotted path.

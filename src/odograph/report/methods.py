@@ -24,6 +24,7 @@ REFERENCES = {
     "wilson": "Wilson 1927, Journal of the American Statistical Association 22:209",
     "signed_rank": "Wilcoxon 1945, Biometrics Bulletin 1:80",
     "rescaling": "Brown, Barbieri, Ventura, Kass & Frank 2002, Neural Computation 14:325",
+    "corrected": "Wood, Pya & Säfken 2016, Journal of the American Statistical Association 111:1548",
     "level": "Marra & Wood 2012, Scandinavian Journal of Statistics 39:53",
     "engine": "Mölder et al. 2021, Sustainable data analysis with Snakemake, F1000Research 10:33",
 }
@@ -179,15 +180,21 @@ def _gains(value: Callable[[str], Any], cite: Callable[..., str], terms: list[di
         if value("encoding.tests")
         else ""
     )
+    running = _plain(value("encoding.running_above_cm_s"))
     return [
         f"Whether tuning sharpens with running speed was asked of the units whose selected model holds "
-        f"{' or '.join(scaled)}, with a p of at most 0.05 where it was tested: that term's part f of the log "
-        "rate was replaced by (1 + g z) f, z being "
-        "log(1 + v / 5 cm/s) of the speed v, standardised over valid time. Gains g, tuning and all other "
-        "terms were fitted jointly; standard errors are from the full Hessian of the penalised likelihood. "
-        f"Above 0 a gain means tuning that is deeper and sharper at speed.{test} In plain units it is told "
-        f"as the information of the fitted tuning {cite('information')} at the 20th and the 80th percentile "
-        "of running speed."
+        f"{' or '.join(scaled)}, with a p of at most 0.05 where it was tested. Their log rate was modelled "
+        "as constant + s(v) + sum over these terms of (1 + g z) f + the other terms, f being a term's part of "
+        "the log rate, s that of speed, and z log(1 + v / 5 cm/s) of the speed v, standardised over valid time. "
+        "Gains g, tuning and all other terms were fitted jointly. Standard errors are from the full Hessian "
+        "of the penalised likelihood, with the uncertainty of the smoothing strengths added to first order "
+        f"{cite('corrected')}. "
+        "A gain of 0 is tuning that does not change with speed; above 0 the tuning is deeper and sharper at "
+        f"speed, below 0 flatter.{test} In plain units a gain is told as the information per spike "
+        f"{cite('information')} of the tuning exp((1 + g z) f), over the time spent in every place or "
+        "direction, at the z of the 20th and of the 80th percentile of running speed (above "
+        f"{running} cm/s), and as the information per second, which is that times the fitted mean rate at "
+        "that speed. Fits that did not converge are counted as failed and given no gain."
     ]
 
 
@@ -195,7 +202,8 @@ def _goodness(cite: Callable[..., str]) -> str:
     return (
         "How well the selected model describes time that it was not fitted to was judged by the "
         f"Kolmogorov-Smirnov statistic of intervals rescaled by the held-out rate {cite('rescaling')} and by "
-        "the autocorrelation of held-out residuals up to 1 s."
+        "the autocorrelation of held-out residuals up to 1 s. A fit counts as compatible with held-out time "
+        "when the p of that statistic is above 0.05."
     )
 
 

@@ -8,6 +8,7 @@ from typing import Any
 
 from odograph.figures.captions import CAPTIONS
 from odograph.report.context import PageContext
+from odograph.report.speed_gains import speed_gain_table
 from odograph.report.words import (
     cell,
     number,
@@ -143,7 +144,7 @@ def sessions_section(context: PageContext) -> str:
 
 
 def figures_section(context: PageContext) -> str:
-    """The population's figures with their captions."""
+    """The population's figures with their captions, and the table of speed gains with theirs."""
     parts = []
     for figure in context.figures:
         caption = CAPTIONS[figure.name]
@@ -156,7 +157,10 @@ def figures_section(context: PageContext) -> str:
             f'File: <a href="{text(figure.path)}">{text(figure.path)}</a>, '
             f"record {short_record(figure.record_id)}.</span></figcaption></figure>"
         )
-    return section("population", "The population", "".join(parts) or "<p>No figures were drawn.</p>")
+        if figure.name == "speed_gains":
+            parts.append(speed_gain_table(context.speed))
+    lead = f"<p>{text(context.fit_line)}</p>" if context.fit_line else ""
+    return section("population", "The population", lead + ("".join(parts) or "<p>No figures were drawn.</p>"))
 
 
 def settings_section(context: PageContext) -> str:

@@ -14,6 +14,7 @@ from odograph.provenance.step import Step, run_step
 def work(step: Step) -> None:
     """Gather what the page shows and write it."""
     from odograph.figures.captions import POPULATION_FIGURES
+    from odograph.population.summarise import fit_line
     from odograph.report.context import PageContext, PageFigure
     from odograph.report.page import build_page
     from odograph.settings.all import Settings
@@ -44,6 +45,8 @@ def work(step: Step) -> None:
         record_id=step.record_id,
         software=software_versions(),
         results_folder=layout.RESULTS.as_posix(),
+        speed=step.read_table("speed"),
+        fit_line=fit_line(summary),
     )
     with step.product(step.output("page")) as temporary:
         temporary.write_text(build_page(context), encoding="utf-8")
