@@ -184,8 +184,9 @@ def _gains(value: Callable[[str], Any], cite: Callable[..., str], terms: list[di
     return [
         f"Whether tuning sharpens with running speed was asked of the units whose selected model holds "
         f"{' or '.join(scaled)}, with a p of at most 0.05 where it was tested. Their log rate was modelled "
-        "as constant + s(v) + sum over these terms of (1 + g z) f + the other terms, f being a term's part of "
-        "the log rate, s that of speed, and z log(1 + v / 5 cm/s) of the speed v, standardised over valid time. "
+        "as constant + s(v) + sum over these terms of (1 + g z) f + the other terms, f being a term's part "
+        "of the log rate, s that of speed, and z log(1 + v / 5 cm/s) of the speed v, standardised over valid "
+        "time. "
         "Gains g, tuning and all other terms were fitted jointly. Standard errors are from the full Hessian "
         "of the penalised likelihood, with the uncertainty of the smoothing strengths added to first order "
         f"{cite('corrected')}. "
