@@ -10,12 +10,15 @@ import argparse
 import json
 import sys
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import asdict, dataclass
 from pathlib import Path
 
+import numpy as np
 import pandas as pd
+from simulate_tuning import sharpening
 from truth_table import TRUTH_COLUMNS, read_truth
 
+from odograph.encoding.speed_gain import modulation
 from odograph.population.intervals import wilson_interval
 
 VARIABLES = ("position", "head_direction", "speed")
@@ -123,13 +126,79 @@ def _sharpening(joined: pd.DataFrame, truly: pd.DataFrame) -> list[Share]:
         label = f"more {name.replace('_', ' ')} information when fast"
         shares.append(_count(f"{label}, sharpening", (fast > slow)[judged & sharpens]))
         shares.append(_count(f"{label}, others", (fast > slow)[judged & ~sharpens]))
-        # Gains are there for units that were found to encode the variable.
-        fitted = truly[name] & joined[f"encodes_{name}"].eq(True) & joined[f"{name}_speed_gain"].notna()
-        called = joined[f"{name}_sharpens"].eq(True)
-        label = f"{name.replace('_', ' ')} gain called sharpening"
-        shares.append(_count(f"{label}, sharpening", called[fitted & sharpens]))
-        shares.append(_count(f"{label}, others", called[fitted & ~sharpens]))
+        right, wrong = _gains_called(joined, name)
+        label = f"{name.replace('_', ' ')} gain says"
+        shares.append(_count(f"{label} sharpening, where it is", right))
+        shares.append(_count(f"{label} change, where there is none", wrong))
     return shares
+
+
+def _gains_called(joined: pd.DataFrame, name: str) -> tuple[pd.Series, pd.Series]:
+    """Of the tuned units that truly sharpen, which are said to; of the other gains, which are said to differ.
+
+    A unit that sharpens but was given no gain counts as missed.
+    """
+    truly = joined[f"true_{name}"].astype(bool) & joined["true_sharpens"].astype(bool)
+    sharpens, blunts = (joined[f"{name}_{verdict}"].eq(True) for verdict in ("sharpens", "blunts"))
+    judged = joined[f"encodes_{name}"].eq(True) & joined[f"{name}_speed_gain"].notna()
+    return sharpens[truly], (sharpens | blunts)[judged & ~truly]
+
+
+@dataclass(frozen=True)
+class GainError:
+    """How far fitted gains lie from the true ones, fitted less true, over `n` units."""
+
+    what: str
+    n: int
+    mean: float
+    standard_error: float
+    spread: float
+
+    def line(self) -> str:
+        """The error as a line of the printed table."""
+        if not self.n:
+            return f"{self.what:<52} none to judge"
+        within = f" +/- {self.standard_error:.3f}" if self.n > 1 else ""
+        return f"{self.what:<52} {self.mean:+.3f}{within}, s.d. {self.spread:.3f}, n {self.n}"
+
+
+def true_gain(speed_cm_s: np.ndarray) -> float:
+    """The gain of a unit that sharpens, in a session with these speeds, (n,).
+
+    Its tuning is raised to a power p of speed, so that its part of the log rate is p f. The model says
+    (1 + g z) f; the line over z that comes closest to p, divided by its mean, has the slope g.
+    """
+    power, z = sharpening(speed_cm_s), modulation(speed_cm_s)
+    return float(np.mean(power * z) / np.mean(power))
+
+
+def gain_errors(joined: pd.DataFrame, results: Path) -> list[GainError]:
+    """Bias of the gains of units that truly encode the variable, those that sharpen and the others."""
+    gains = {}
+    for session in sorted(joined["session"].unique()):
+        file = results / "sessions" / session / "behaviour" / "behaviour.parquet"
+        if file.is_file():
+            behaviour = pd.read_parquet(file, columns=["speed_cm_s", "valid"])
+            gains[session] = true_gain(behaviour.loc[behaviour["valid"], "speed_cm_s"].to_numpy(float))
+    sharpens = joined["true_sharpens"].astype(bool)
+    truth = joined["session"].map(gains).astype(float).where(sharpens, 0.0)
+    errors = []
+    for name in SHARPENING:
+        tuned = joined[f"true_{name}"].astype(bool) & joined[f"encodes_{name}"].eq(True)
+        for chosen, which in ((sharpens, "sharpening"), (~sharpens, "others")):
+            error = (joined[f"{name}_speed_gain"] - truth)[tuned & chosen].dropna().to_numpy(float)
+            n = len(error)
+            spread = float(error.std(ddof=1)) if n > 1 else 0.0
+            errors.append(
+                GainError(
+                    f"{name.replace('_', ' ')} gain less the true one, {which}",
+                    n,
+                    float(error.mean()) if n else 0.0,
+                    spread / n**0.5 if n else 0.0,
+                    spread,
+                )
+            )
+    return errors
 
 
 def score_clocks(results: Path, clocks_file: Path) -> list[Share]:
@@ -154,18 +223,26 @@ def score_clocks(results: Path, clocks_file: Path) -> list[Share]:
 
 
 def mistakes(joined: pd.DataFrame) -> list[str]:
-    """One line for each variable of a unit that was missed or found wrongly."""
+    """One line for each variable of a unit that was missed or found wrongly, and for each such gain."""
     lines, found = [], _found(joined)
+    gains = {name: _gains_called(joined, name) for name in SHARPENING}
     for row_number, row in enumerate(joined.to_dict("records")):
         for name in VARIABLES:
             truly = bool(row[f"true_{name}"])
             if truly != found.at[row_number, name]:
-                word = "missed" if truly else "false"
-                unit = f"{row['session']} unit {row['unit']}"
-                lines.append(
-                    f"{word:<7} {name:<15} {unit:<20} {row['true_kind']:<32} {row['n_spikes']:>6} spikes"
-                )
+                lines.append(_mistake("missed" if truly else "false", name, row))
+        for name, (right, wrong) in gains.items():
+            # A gain is missed only where its variable was found: else the line above has said it.
+            if not right.get(row_number, True) and found.at[row_number, name]:
+                lines.append(_mistake("missed", f"{name} gain", row))
+            if wrong.get(row_number, False):
+                lines.append(_mistake("false", f"{name} gain", row))
     return lines
+
+
+def _mistake(word: str, what: str, row: dict) -> str:
+    unit = f"{row['session']} unit {row['unit']}"
+    return f"{word:<7} {what:<20} {unit:<20} {row['true_kind']:<32} {row['n_spikes']:>6} spikes"
 
 
 def read_tables(results: Path, truth_file: Path) -> tuple[pd.DataFrame, pd.DataFrame]:
@@ -188,7 +265,7 @@ def read_tables(results: Path, truth_file: Path) -> tuple[pd.DataFrame, pd.DataF
     needed += [
         f"{name}_information_{pace}_bits_per_spike" for name in SHARPENING for pace in ("slow", "fast")
     ]
-    needed += [f"{name}_{column}" for name in SHARPENING for column in ("speed_gain", "sharpens")]
+    needed += [f"{name}_{column}" for name in SHARPENING for column in ("speed_gain", "sharpens", "blunts")]
     for path, table, columns in ((units_file, units, needed), (truth_file, truth, TRUTH_COLUMNS)):
         missing = [name for name in columns if name not in table]
         if missing:
@@ -230,19 +307,22 @@ def main(arguments: Sequence[str] | None = None) -> int:
             file=sys.stderr,
         )
         return 66
+    errors = gain_errors(joined, options.results)
     if options.json:
-        print(json.dumps(_document(joined, shares), indent=2))
+        print(json.dumps(_document(joined, shares, errors), indent=2))
     else:
         sessions = joined["session"].nunique()
         judged = f"{len(joined)} units of {sessions} sessions with {options.fewest_spikes} spikes or more"
         print(f"{judged}; 95 % intervals by Wilson")
-        print("\n".join(share.line() for share in shares))
+        print("\n".join(entry.line() for entry in (*shares, *errors)))
         if options.mistakes:
             print("\n".join(mistakes(joined)) or "no mistakes")
     return 1 if any(share.holds is False for share in shares) else 0
 
 
-def _document(joined: pd.DataFrame, shares: Sequence[Share]) -> dict[str, object]:
+def _document(
+    joined: pd.DataFrame, shares: Sequence[Share], errors: Sequence[GainError]
+) -> dict[str, object]:
     rows = []
     for share in shares:
         low, high = share.interval or (None, None)
@@ -258,7 +338,12 @@ def _document(joined: pd.DataFrame, shares: Sequence[Share]) -> dict[str, object
                 "holds": share.holds,
             }
         )
-    return {"units": len(joined), "scores": rows, "mistakes": mistakes(joined)}
+    return {
+        "units": len(joined),
+        "scores": rows,
+        "gain_errors": [asdict(error) for error in errors],
+        "mistakes": mistakes(joined),
+    }
 
 
 def _parser() -> argparse.ArgumentParser:

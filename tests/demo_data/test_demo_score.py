@@ -7,7 +7,8 @@ import json
 import numpy as np
 import pandas as pd
 import pytest
-from score_against_truth import join_truth, main, mistakes, score, score_clocks
+from score_against_truth import gain_errors, join_truth, main, mistakes, score, score_clocks, true_gain
+from simulate_tuning import sharpening
 from simulate_units import unit_truths
 from study_plan import STUDY
 
@@ -37,6 +38,7 @@ def perfect(truth) -> pd.DataFrame:
     for name in ("position", "head_direction"):
         units[f"{name}_speed_gain"] = (0.4 * sharper).where(units[f"encodes_{name}"])
         units[f"{name}_sharpens"] = truth["sharpens"].astype(bool) & units[f"encodes_{name}"]
+        units[f"{name}_blunts"] = False
     return units
 
 
@@ -71,10 +73,67 @@ def test_counts_are_variables_of_units(perfect, truth):
     sharpening = scores["more position information when fast, sharpening"]
     assert sharpening.k == sharpening.n == (truth["position"] & truth["sharpens"]).sum() > 0
     assert scores["more position information when fast, others"].k == 0
-    gains = scores["position gain called sharpening, sharpening"]
+    gains = scores["position gain says sharpening, where it is"]
     assert gains.k == gains.n == sharpening.n
-    others = scores["position gain called sharpening, others"]
-    assert others.k == 0 and others.n == (truth["position"] & ~truth["sharpens"]).sum()
+    others = scores["position gain says change, where there is none"]
+    assert others.k == 0 and others.n == (truth["position"] & ~truth["sharpens"].astype(bool)).sum()
+
+
+def test_gains_that_are_missed_or_false_are_told(perfect, truth):
+    sharpens = np.flatnonzero(truth["head_direction"] & truth["sharpens"])
+    steady = np.flatnonzero(truth["head_direction"] & ~truth["sharpens"].astype(bool))
+    perfect.loc[sharpens[0], "head_direction_sharpens"] = False  # not called
+    perfect.loc[sharpens[1], "head_direction_speed_gain"] = np.nan  # its fit failed
+    perfect.loc[sharpens[1], "head_direction_sharpens"] = False
+    perfect.loc[steady[0], "head_direction_sharpens"] = True
+    perfect.loc[steady[1], "head_direction_blunts"] = True
+    perfect.loc[steady[2], "head_direction_speed_gain"] = np.nan  # nothing to judge
+    joined = join_truth(perfect, truth, 300)
+    scores = {share.what.strip(): share for share in score(joined)}
+    right = scores["head direction gain says sharpening, where it is"]
+    assert (right.k, right.n) == (len(sharpens) - 2, len(sharpens))
+    wrong = scores["head direction gain says change, where there is none"]
+    assert (wrong.k, wrong.n) == (2, len(steady) - 1)
+    told = [line.split()[:3] for line in mistakes(joined)]
+    assert (
+        sorted(told) == [["false", "head_direction", "gain"]] * 2 + [["missed", "head_direction", "gain"]] * 2
+    )
+
+
+@pytest.mark.parametrize("speed_cm_s", [np.linspace(0, 60, 5001), np.random.default_rng(3).gamma(2, 6, 5000)])
+def test_true_gain_is_the_closest_line_over_z(speed_cm_s):
+    """numpy's least squares: the power as a (1 + g z), z standardised log(1 + v / 5 cm/s)."""
+    z = np.log1p(speed_cm_s / 5)
+    z = (z - z.mean()) / z.std()
+    slope, level = np.polyfit(z, sharpening(speed_cm_s), 1)
+    assert true_gain(speed_cm_s) == pytest.approx(slope / level)
+    assert 0.2 < true_gain(speed_cm_s) < 0.6
+
+
+def test_bias_of_gains_by_hand(tmp_path, perfect, truth):
+    """Gains of units that sharpen 0.05 too high, of the others 0.02 too low, in the sessions with results."""
+    speed_cm_s = np.random.default_rng(1).gamma(2, 6, 3000)
+    table = pd.DataFrame({"speed_cm_s": speed_cm_s, "valid": True})
+    # What is not valid does not count.
+    table = pd.concat([table, table.assign(speed_cm_s=500.0, valid=False)], ignore_index=True)
+    sessions = sorted(truth["session"].unique())
+    for session in sessions[1:]:
+        folder = tmp_path / "sessions" / session / "behaviour"
+        folder.mkdir(parents=True)
+        table.to_parquet(folder / "behaviour.parquet")
+    sharpens = truth["sharpens"].astype(bool)
+    off = np.where(sharpens, true_gain(speed_cm_s) + 0.05, -0.02)
+    perfect["position_speed_gain"] = pd.Series(off).where(truth["position"] == 1)
+    errors = {error.what: error for error in gain_errors(join_truth(perfect, truth, 300), tmp_path)}
+    biased = errors["position gain less the true one, sharpening"]
+    there = truth["session"] != sessions[0]
+    assert biased.n == (truth["position"] & sharpens & there).sum() > 1
+    assert biased.mean == pytest.approx(0.05) and biased.spread == pytest.approx(0, abs=1e-12)
+    others = errors["position gain less the true one, others"]
+    assert others.mean == pytest.approx(-0.02) and others.n == (truth["position"] & ~sharpens).sum()
+    assert "+0.050 +/- 0.000" in biased.line()
+    nothing = gain_errors(join_truth(perfect, truth, 300), tmp_path / "nowhere")
+    assert nothing[0].n == 0 and nothing[0].line().endswith("none to judge")
 
 
 def test_interval_is_wilsons(perfect, truth):
@@ -139,6 +198,8 @@ def test_json_says_the_same(run, perfect, capsys):
     document = json.loads(capsys.readouterr().out)
     assert document["scores"][0]["holds"] is True
     assert document["mistakes"] == []
+    assert [entry["n"] for entry in document["gain_errors"][0::2]] == [0, 0]
+    assert document["gain_errors"][1]["mean"] == 0 and document["gain_errors"][1]["n"] > 0
 
 
 def test_what_is_missing_is_said(run, perfect, tmp_path, capsys):
