@@ -13,6 +13,7 @@ rule all:
     default_target: True
     input:
         "results/report.html",
+        "results/root.json",
         all_cards,
         all_session_figures,
     message:
@@ -26,3 +27,4 @@ include: "workflow/rules/encoding.smk"
 include: "workflow/rules/population.smk"
 include: "workflow/rules/figures.smk"
 include: "workflow/rules/report.smk"
+include: "workflow/rules/root.smk"

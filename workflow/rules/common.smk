@@ -76,3 +76,19 @@ def documents_of_session(wildcards):
             "audit": f"{folder}/behaviour/audit.json",
         }
     return found
+
+
+def all_records(wildcards):
+    """The records of all jobs."""
+    folder = "results/sessions/{session}"
+    return [
+        *expand(f"{folder}/intake/record.json", session=PLAN.sessions),
+        *expand(f"{folder}/session_quality.record.json", session=PLAN.sessions),
+        *of_sessions(f"{folder}/sync/record.json"),
+        *of_sessions(f"{folder}/behaviour/record.json"),
+        *of_shards(f"{folder}/encoding/shard-{{shard}}/record.json"),
+        *of_shards(f"{folder}/cards/shard-{{shard}}.record.json"),
+        "results/population/record.json",
+        "results/figures/record.json",
+        "results/report.record.json",
+    ]

@@ -35,6 +35,7 @@ STEPS = (
     "population",
     "population_figures",
     "report",
+    "root",
 )
 #: The settings that each step reads.
 STAGES_READ = {
@@ -46,6 +47,7 @@ STAGES_READ = {
     "session_quality": ("figures",),
     "population": ("population",),
     "population_figures": ("figures",),
+    "root": (),
     "report": ("study", "intake", "sync", "behaviour", "encoding", "population", "figures"),
 }
 _CACHE_FORMAT = 1

@@ -1,0 +1,15 @@
+rule root:
+    input:
+        all_records,
+    output:
+        "results/root.json",
+    log:
+        "logs/root.log",
+    conda:
+        "../../environment.yml"
+    params:
+        code=PLAN.code["root"],
+    message:
+        "the run root"
+    shell:
+        "python -m odograph.steps.root --code {params.code} > {log} 2>&1"
