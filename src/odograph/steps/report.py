@@ -23,7 +23,7 @@ def work(step: Step) -> None:
     members = step.plan["sessions"]
     step.record.add_table_input("sessions", members)
     settings = Settings.model_validate(step.settings)
-    units, sessions = step.read_table("units"), step.read_table("sessions")
+    units, speed, sessions = (step.read_table(name) for name in ("units", "speed", "sessions"))
     summary = step.read_json("summary")
     documents = _documents(step, members)
     miniatures = _miniatures(step, members, settings.figures)
@@ -45,7 +45,7 @@ def work(step: Step) -> None:
         record_id=step.record_id,
         software=software_versions(),
         results_folder=layout.RESULTS.as_posix(),
-        speed=step.read_table("speed"),
+        speed=speed,
         fit_line=fit_line(summary),
     )
     with step.product(step.output("page")) as temporary:
