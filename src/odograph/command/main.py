@@ -13,17 +13,19 @@ from pathlib import Path
 from typing import NoReturn
 
 from odograph import __version__
-from odograph.command import look, summary, trace
+from odograph.command import look, store, summary, trace, verify
 from odograph.errors import OdographError, SettingsError
 
 EXIT_USAGE, EXIT_DATA, EXIT_INTERNAL, EXIT_SETTINGS, EXIT_STOPPED = 64, 65, 70, 78, 130
-COMMANDS = (look, summary, trace)
+COMMANDS = (look, summary, trace, verify, store)
 
 _EXAMPLES = """\
 examples:
   odograph look recording.nwb                      what a recording holds, and the settings that read it
   odograph summary                                 what the last run found
   odograph trace results/figures/composition.png   what stands behind a figure
+  odograph verify                                  is everything still what the records say
+  odograph store                                   how much the kept fits take
 
 The run itself is snakemake's: snakemake --profile workflow/profiles/local
 

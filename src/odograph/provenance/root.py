@@ -2,8 +2,9 @@
 
 ``results/root.json`` lists every record with its identifier and the digest of what it says of its products.
 The root is the digest of that list. Whoever knows the root can tell whether any record, and through the
-records any product, is still what it was: a record that was edited to go with an edited product has another content.
-Time, host and the place of files have no part in it, so that the same work has the same root anywhere.
+records any product, is still what it was: a record that was edited to go with an edited product has another
+content. Time, host and the place of files have no part in it, so that the same work has the same root
+anywhere.
 
 The file also keeps what binds a study to this machine's files: the digests of the records' own bytes, of the
 user's two files and of the recordings as they lie there.

@@ -87,17 +87,27 @@ class FitStore:
         if not path.exists():
             return None
         try:
-            arrays = read_arrays(path)
-            if bytes(arrays.pop("key")).decode() != key or bytes(arrays.pop("digest")).hex() != _digest(
-                arrays
-            ):
-                raise InputError("its content does not match its key", file=str(path))
-            facts = json.loads(bytes(arrays.pop("facts")))
-            return StoredFit(facts["row"], facts["scores"], arrays)
+            return self._read(key)
         except (InputError, KeyError, ValueError) as error:
             logger.warning("a damaged fit in the store is dropped and made again: %s", error)
             path.unlink(missing_ok=True)
             return None
+
+    def is_whole(self, key: str) -> bool:
+        """Whether a fit can be read and is what was written."""
+        try:
+            self._read(key)
+        except (InputError, KeyError, ValueError):
+            return False
+        return True
+
+    def _read(self, key: str) -> StoredFit:
+        path = self.path(key)
+        arrays = read_arrays(path)
+        if bytes(arrays.pop("key")).decode() != key or bytes(arrays.pop("digest")).hex() != _digest(arrays):
+            raise InputError("its content does not match its key", file=str(path))
+        facts = json.loads(bytes(arrays.pop("facts")))
+        return StoredFit(facts["row"], facts["scores"], arrays)
 
     def save(self, key: str, fit: StoredFit) -> StoredFit:
         """Write a fit and give it back as it will be read, so that fresh and restored fits are the same."""
