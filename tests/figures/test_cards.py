@@ -246,7 +246,7 @@ def test_gains_and_fit_have_a_row(
         "  slow 0.41, fast 0.88 bits per spike",
         "head direction −0.05 ± 0.06, p = 0.440",
         "KS 0.021 of 1,571 rescaled intervals,",
-        "p = 0.310: compatible with the model at 5 %",
+        "p = 0.310: compatible at 5 %",
         "largest residual correlation +0.03 at 40 ms",
     ):
         assert line in told
@@ -275,8 +275,11 @@ def test_stamp_of_the_record_has_its_place(
     "change, line",
     [
         ({"speed_gain_status": "failed", "position_speed_gain": np.nan}, "The fit failed."),
-        ({"position_speed_gain": np.nan, "head_direction_speed_gain": np.nan}, "no tuning that can sharpen."),
-        ({"rescaling_ks_p": 0.04}, "p = 0.040: not compatible with the model at 5 %"),
+        (
+            {"position_speed_gain": np.nan, "head_direction_speed_gain": np.nan},
+            "was selected and passed its test.",
+        ),
+        ({"rescaling_ks_p": 0.04}, "p = 0.040: not compatible at 5 %"),
         ({"rescaling_ks": np.nan, "rescaling_ks_p": np.nan}, "It was not judged for this unit."),
         ({"position_speed_gain_p": np.nan}, "position +0.21 ± 0.04"),
     ],

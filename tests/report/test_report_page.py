@@ -139,6 +139,18 @@ def test_every_session_has_a_row(make_context):
     assert page.all("a", href="sessions/ibis_02/session_quality.png")
 
 
+def test_a_session_without_a_reason_gives_none(make_context):
+    """As read back from its file, where what is missing is NaN."""
+    verdicts = make_context().verdicts
+    verdicts.loc[0, ["stage", "reason"]] = float("nan")
+    (row,) = [
+        e["text"]
+        for e in Page(build_page(make_context(verdicts=verdicts))).all("tr")
+        if e["text"].startswith("heron_01warn")
+    ]
+    assert row.startswith("heron_01warn–heron")
+
+
 def test_every_unit_has_a_row_and_a_card(make_context):
     page = Page(build_page(make_context(n_units=8)))
     rows = [e for e in page.all("tr") if e.get("data-session")]
@@ -256,7 +268,7 @@ def test_speed_gains_stand_beside_the_matched_halves(make_context):
     assert caption["above"][-1] == "table"
     whole, region = [e["text"] for e in page.all("tr") if e["text"].startswith("head direction")]
     for part in (
-        "all",
+        "all403 animals, 5 sessions",
         "0.120.05 to 0.21",
         "12 of 40: 30 %15 to 45 %",
         "0 of 40: 0 %",

@@ -80,7 +80,7 @@ def fit_lines(row: Mapping[str, Any]) -> list[tuple[str, str]]:
     verdict = "compatible" if float(p) > LEVEL_OF_FIT else "not compatible"
     lines = [
         f"KS {number(ks, 3)} of {number(row.get('rescaling_intervals'), 0)} rescaled intervals,",
-        f"{_p_text(p)}: {verdict} with the model at 5 %",
+        f"{_p_text(p)}: {verdict} at 5 %",
     ]
     peak, lag_s = row.get("residual_correlation_peak"), row.get("residual_correlation_peak_lag_s")
     if number(peak) != "–":
@@ -99,7 +99,10 @@ def gain_lines(row: Mapping[str, Any]) -> list[tuple[str, str]]:
     ]
     gained.sort(key=lambda term: (_STANDARD.index(term) if term in _STANDARD else len(_STANDARD), term))
     if not gained:
-        return [("Not fitted: the selected model holds", SOFT_INK), ("no tuning that can sharpen.", SOFT_INK)]
+        return [
+            ("Not fitted: no tuning that can sharpen", SOFT_INK),
+            ("was selected and passed its test.", SOFT_INK),
+        ]
     lines = []
     for term in gained[:_MOST_TERMS]:
         gain, error, p = (row.get(f"{term}_speed_gain{suffix}") for suffix in ("", "_se", "_p"))

@@ -103,7 +103,8 @@ def sessions_section(context: PageContext) -> str:
         minutes = None
         if audit.get("valid_bins") is not None and audit.get("bin_s") is not None:
             minutes = audit["valid_bins"] * audit["bin_s"] / 60
-        reason = f"{facts['stage']}: {facts['reason']}" if facts.get("reason") else None
+        # A reason that is missing comes from the table's file as NaN, which is true.
+        reason = f"{facts['stage']}: {facts['reason']}" if isinstance(facts.get("reason"), str) else None
         valid = f"{number(minutes, 1)} min" + (f" ({100 * share:.1f} %)" if share is not None else "")
         rows.append(
             row(

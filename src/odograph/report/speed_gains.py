@@ -6,20 +6,19 @@ from typing import Any
 
 import pandas as pd
 
+from odograph.population.intervals import counted
 from odograph.report.words import cell, number, row, table, text
 
 COLUMNS = (
     "variable",
     "of",
     "units#",
-    "animals#",
-    "sessions#",
     "mean gain#",
     "sharpen#",
     "blunt#",
     "fits failed#",
-    "fitted information, fast minus slow (bits per spike)#",
-    "the same (bits per s)#",
+    "fitted, fast minus slow (bits per spike)#",
+    "fitted, fast minus slow (bits per s)#",
     "matched halves, fast minus slow (bits per spike)#",
 )
 _SUFFIX = "_speed_gain"
@@ -63,7 +62,13 @@ def _row(speed: pd.DataFrame, measure: str, level: str, name: str) -> str:
         text(variable.replace("_", " ")),
         [
             cell("all" if level == "all" else f"{text(level)}: {text(name)}"),
-            *(cell(number(mean[key], 0), kind="n", sort=mean[key]) for key in ("n", "animals", "sessions")),
+            cell(
+                f"{number(mean['n'], 0)}<br>"
+                f'<span class="place">{counted(int(mean["animals"]), "animal")}, '
+                f"{counted(int(mean['sessions']), 'session')}</span>",
+                kind="n",
+                sort=mean["n"],
+            ),
             _value(mean),
             *(_share(gains.loc[verdict]) for verdict in ("sharpens", "blunts", "failed")),
             *(_value(change) for change in changes),
