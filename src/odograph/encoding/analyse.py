@@ -30,6 +30,7 @@ from odograph.encoding.speed_gain import fit_gains, modulation
 from odograph.encoding.spikes import UnitSpikes, bin_spikes
 from odograph.encoding.term_tests import term_tests
 from odograph.encoding.terms import Term
+from odograph.errors import InputError
 from odograph.settings.encoding import EncodingSettings
 
 GAIN_P = 0.05  # a term whose test has a larger p gets no gain
@@ -89,15 +90,23 @@ def analyse_unit(
     UnitResult
         A unit that cannot be fitted comes back with `status` and `status_reason`, and without curves.
     """
-    design = _observed_design(design, observed_s)
-    if settings.history_s > 0:
-        design = with_history(design, spike_times_s)
-    unit = bin_spikes(design, np.asarray(spike_times_s, dtype=float))
+    spike_times_s = np.asarray(spike_times_s, dtype=float)
+    observed = _observed_bins(design, observed_s)
+    try:
+        design = _observed_design(design, observed)
+    except InputError as problem:  # too little of the session is left to hold anything out
+        unit = bin_spikes(design, spike_times_s)
+        reason = f"where the unit was observed: {' '.join(str(problem).split())}"
+        row = _empty_row(design, unit) | {"status": "failed", "status_reason": reason}
+        return UnitResult(row, [], {"spike_bins": unit.all_bins.astype(np.int32)})
+    unit = bin_spikes(design, spike_times_s)
     row = _empty_row(design, unit)
     curves = {"spike_bins": unit.all_bins.astype(np.int32)}
     if unit.n_spikes < settings.minimum_spikes:
         reason = f"{unit.n_spikes} spikes in valid time, fewer than encoding.minimum_spikes"
         return UnitResult(row | {"status": "too_few_spikes", "status_reason": reason}, [], curves)
+    if settings.history_s > 0:
+        design = with_history(design, spike_times_s, observed)
     try:
         scores = _all_scores(design, unit)
     except FloatingPointError as problem:
@@ -126,14 +135,19 @@ def analyse_unit(
     return UnitResult(row | {"status": "fitted", "status_reason": ""}, rows, curves)
 
 
-def _observed_design(design: SessionDesign, observed_s: np.ndarray | None) -> SessionDesign:
-    """The session's design, or one restricted to the bins in which the unit was observed."""
+def _observed_bins(design: SessionDesign, observed_s: np.ndarray | None) -> np.ndarray | None:
+    """Which analysis bins lie within what was observed, (n_all_bins,) of bool; None: all of them."""
     if observed_s is None or not len(observed_s):
-        return design
+        return None
     keep = np.zeros(len(design.valid), dtype=bool)
     for start, stop in np.asarray(observed_s, dtype=float):
         keep |= (design.edges_s[:-1] >= start - 1e-9) & (design.edges_s[1:] <= stop + 1e-9)
-    if not np.any(design.valid & ~keep):
+    return keep
+
+
+def _observed_design(design: SessionDesign, keep: np.ndarray | None) -> SessionDesign:
+    """The session's design, or one restricted to the bins in which the unit was observed."""
+    if keep is None or not np.any(design.valid & ~keep):
         return design
     key = ("observed", np.packbits(keep).tobytes())
     if key not in design.kept:

@@ -14,14 +14,14 @@ from itertools import combinations
 import numpy as np
 
 from odograph.encoding.folds import Folds, make_folds
-from odograph.encoding.terms import Term, make_drift, make_term
+from odograph.encoding.terms import HISTORY, Term, make_drift, make_term
 from odograph.errors import InputError
 from odograph.settings.encoding import EncodingSettings
 
 
 @dataclass(frozen=True)
 class RowTable:
-    """The collapsed rows of one model; planes first, then terms in the order of falling cell number.
+    """The collapsed rows of one model; planes first, then terms of falling cell number, the history last.
 
     Attributes
     ----------
@@ -62,6 +62,8 @@ class SessionDesign:
         Functions of the spike history, see `odograph.encoding.history`.
     kept : dict
         What is worked out once and used for every unit (row tables, workspaces, restricted designs).
+    of_covariates : dict
+        The same for what depends on covariates alone, which a unit's design with its history shares.
     """
 
     bin_s: float
@@ -75,6 +77,7 @@ class SessionDesign:
     settings: EncodingSettings
     history: np.ndarray | None = None
     kept: dict = field(default_factory=dict, repr=False, compare=False)
+    of_covariates: dict = field(default_factory=dict, repr=False, compare=False)
 
     @property
     def n_bins(self) -> int:
@@ -99,17 +102,54 @@ def model_name(model: tuple[str, ...]) -> str:
 
 
 def collapse(terms: list[Term], folds: Folds, bin_s: float) -> RowTable:
-    """Merge bins with equal cells and group into rows; planes come first, then terms by falling cells."""
-    ordered = sorted(terms, key=lambda term: (term.kind != "plane", -term.n_cells, term.name))
-    key, size = np.zeros(len(folds.group), dtype=np.int64), 1
-    for n_cells, cell in [(t.n_cells, t.cell) for t in ordered] + [(folds.n_groups, folds.group)]:
-        if size > np.iinfo(np.int64).max // n_cells:
-            key = np.unique(key, return_inverse=True)[1].astype(np.int64)
-            size = len(key)
-        key, size = key * n_cells + cell, size * n_cells
+    """Merge bins with equal cells and group into rows, in the order that `RowTable` says."""
+    ordered = sorted(
+        terms, key=lambda term: (term.kind != "plane", term.kind == HISTORY, -term.n_cells, term.name)
+    )
+    key = joint_key([*((t.n_cells, t.cell) for t in ordered), (folds.n_groups, folds.group)])
     _, first, counts = np.unique(key, return_index=True, return_counts=True)
     cells = np.array([term.cell[first] for term in ordered], dtype=np.int32).reshape(len(ordered), len(first))
     return RowTable(tuple(ordered), cells, counts * bin_s, folds.group[first])
+
+
+def joint_key(parts: list[tuple[int, np.ndarray]]) -> np.ndarray:
+    """One number for every combination of whole numbers, ordered by the first, then the second, and so on.
+
+    Parameters
+    ----------
+    parts : list of (size, values)
+        Values, (n,), from 0 to below their size.
+
+    Returns
+    -------
+    ndarray of int64, (n,)
+    """
+    key, size = np.zeros(len(parts[0][1]), dtype=np.int64), 1
+    for n, values in parts:
+        if size > np.iinfo(np.int64).max // n:  # the product would not fit: count only what occurs
+            key = np.unique(key, return_inverse=True)[1].astype(np.int64)
+            size = len(key)
+        key, size = key * n + values, size * n
+    return key
+
+
+def history_bins(settings: EncodingSettings, bin_s: float) -> int:
+    """Bins that the spike history reaches back.
+
+    Raises
+    ------
+    InputError
+        There are fewer of them than functions.
+    """
+    n = int(np.floor(settings.history_s / bin_s + 1e-6))
+    if n < settings.history_functions:
+        raise InputError(
+            f"a spike history of {settings.history_s:g} s holds {n} bins of {bin_s:g} s",
+            place="encoding.history_s",
+            expected=f"at least {settings.history_functions} bins, as encoding.history_functions asks",
+            remedy="lengthen encoding.history_s or take fewer functions",
+        )
+    return n
 
 
 def prepare_session(behaviour: dict[str, np.ndarray], settings: EncodingSettings) -> SessionDesign:
@@ -125,7 +165,8 @@ def prepare_session(behaviour: dict[str, np.ndarray], settings: EncodingSettings
     Raises
     ------
     InputError
-        A term names a column that the table does not have, or a covariate is constant or has no value.
+        A term names a column that the table does not have, or a covariate is constant or has no value; the
+        spike history does not fit the bins or the held-out blocks.
     """
     time_s = np.asarray(behaviour["time_s"], dtype=float)
     valid = np.asarray(behaviour["valid"], dtype=bool).copy()
@@ -165,6 +206,8 @@ def _discretise(behaviour, time_s, valid, bin_s, settings) -> SessionDesign:
             expected=f"at least {100 * settings.folds}, to hold out {settings.folds} folds",
             remedy="look at the audit of the behaviour stage: too much was dropped",
         )
+    if settings.history_s > 0:
+        history_bins(settings, bin_s)
     columns = {name: np.asarray(behaviour[name]) for term in settings.terms for name in term.columns}
     terms = tuple(make_term(term, [columns[name][valid] for name in term.columns]) for term in settings.terms)
     speed = np.asarray(behaviour.get("speed_cm_s", np.empty(0)), dtype=float)

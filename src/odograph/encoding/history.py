@@ -6,11 +6,13 @@ each. The filter is made of raised cosines that are narrow and dense soon after 
 
     h_j(t) = (1 + cos(max(-pi, min(pi, a log(t + c) - phi_j)))) / 2,
 
-with peaks phi_j half of pi apart, the first one at the first bin after a spike. A ridge penalty shrinks their
-coefficients, which are log factors of the rate.
+with peaks phi_j half of pi apart, the first one at the first bin after a spike. Spikes of masked bins count:
+they happened. Every function peaks at 1, so its coefficient is the log factor of the rate by one spike at the
+peak's lag, and a ridge penalty with one strength for all shrinks them alike.
 
-A unit's history is a term like any other: bins with equal sums share a cell. Where a unit has more different
-sums than LARGEST_CELLS, near ones share a cell and its mean.
+A unit's history is a term like any other: bins with equal sums, rounded to 1/1024 of one spike's peak, share
+a cell. A bin's cell says what its own past was and nothing of other bins, so held-out spikes reach nothing
+that trains. Units that fire much have nearly as many cells as bins.
 """
 
 from __future__ import annotations
@@ -20,15 +22,12 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from odograph.encoding.bases import SparseBasis, level_coordinates
-from odograph.encoding.design import SessionDesign
+from odograph.encoding.design import SessionDesign, history_bins, joint_key
 from odograph.encoding.fit import Fit
 from odograph.encoding.layout import Layout
-from odograph.encoding.terms import Term
-from odograph.errors import InputError
+from odograph.encoding.terms import HISTORY, Term
 
-HISTORY = "history"
-LARGEST_CELLS = 4096
-LEVELS = (4095, 511, 127, 63, 31, 23, 15, 11, 7)  # 8^4 cells are the most that the coarsest leaves
+GRID = 1024  # steps to which sums are rounded, per spike
 BAND = 1.959964
 
 
@@ -38,8 +37,8 @@ class Filter:
 
     lag_s: np.ndarray
     gain: np.ndarray
-    low: np.ndarray
-    high: np.ndarray
+    gain_low: np.ndarray
+    gain_high: np.ndarray
 
 
 def raised_cosines(n_lags: int, n_functions: int) -> np.ndarray:
@@ -68,52 +67,42 @@ def recent_spikes(counts: np.ndarray, functions: np.ndarray) -> np.ndarray:
     return out
 
 
-def with_history(design: SessionDesign, spike_times_s: np.ndarray) -> SessionDesign:
-    """The session's design with one more nuisance term, the unit's own history.
+def with_history(
+    design: SessionDesign, spike_times_s: np.ndarray, observed: np.ndarray | None = None
+) -> SessionDesign:
+    """The session's design with one more nuisance term, the unit's own history; to be dropped with the unit.
 
     Parameters
     ----------
     design : SessionDesign
     spike_times_s : ndarray, (n_spikes,)
+    observed : ndarray of bool, (n_all_bins,), optional
+        Bins in which the unit was observed, masked ones too; spikes elsewhere count as none.
 
     Raises
     ------
     InputError
         The reach holds fewer bins than there are functions.
     """
-    settings = design.settings
-    n_lags = round(settings.history_s / design.bin_s)
-    if n_lags < settings.history_functions:
-        raise InputError(
-            f"a spike history of {settings.history_s:g} s holds {n_lags} bins of {design.bin_s:g} s",
-            place="encoding.history_s",
-            expected=f"at least {settings.history_functions} bins, as encoding.history_functions asks",
-            remedy="lengthen encoding.history_s or take fewer functions",
-        )
     counts, _ = np.histogram(spike_times_s, design.edges_s)
-    functions = raised_cosines(n_lags, settings.history_functions)
-    sums = recent_spikes(counts.astype(float), functions)[design.valid]
-    cell, values = _cells(sums)
+    if observed is not None:
+        counts = counts * observed
+    functions = raised_cosines(history_bins(design.settings, design.bin_s), design.settings.history_functions)
+    cell, values = _cells(recent_spikes(counts.astype(float), functions)[design.valid])
     n, k = values.shape
     basis = SparseBasis(np.tile(np.arange(k, dtype=np.int32), (n, 1)), values, k)
-    lags = design.bin_s * np.arange(1, n_lags + 1)
+    lags = design.bin_s * np.arange(1, len(functions) + 1)
     span = (float(lags[0]), float(lags[-1]))
     term = Term(HISTORY, HISTORY, (), basis, level_coordinates(k), cell, (lags,), (span,))
-    shared = {key: value for key, value in design.kept.items() if key == "shifts" or key[0] == "spectrum"}
-    return replace(design, nuisance=(*design.nuisance, term), history=functions, kept=shared)
+    return replace(design, nuisance=(*design.nuisance, term), history=functions, kept={})
 
 
 def _cells(sums: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-    """The cell of every bin, (n_bins,) of int32, and the mean sums of every cell, (n_cells, n_functions)."""
-    top = np.maximum(sums.max(axis=0), 1e-12)
-    for levels in LEVELS:
-        codes = np.rint(sums / top * levels).astype(np.int64)
-        key = codes @ ((levels + 1) ** np.arange(codes.shape[1]))
-        unique, cell, bins = np.unique(key, return_inverse=True, return_counts=True)
-        if len(unique) <= LARGEST_CELLS:
-            break
-    means = [np.bincount(cell, column) / bins for column in sums.T]
-    return cell.astype(np.int32), np.column_stack(means)
+    """The cell of every bin, (n_bins,) of int32, and the sums of every cell, (n_cells, n_functions)."""
+    codes = np.rint(sums * GRID).astype(np.int64)
+    key = joint_key([(int(column.max()) + 1, column) for column in codes.T])
+    _, first, cell = np.unique(key, return_index=True, return_inverse=True)
+    return cell.astype(np.int32), codes[first] / GRID
 
 
 def fitted_filter(design: SessionDesign, layout: Layout, fit: Fit) -> Filter:

@@ -335,6 +335,50 @@ def small_blocks(
 
 
 @njit(cache=True, nogil=True)
+def dense_blocks(cells, mu, dense, cell_start, cell_end, columns, weights, supports, offsets, sizes, hessian):
+    """Blocks of X'WX of a last term all of whose columns are filled, with itself and with all others.
+
+    dense (n_rows, k) are its columns' values in every row, with columns of 0 up to the next multiple of four,
+    which lets the innermost loops be of fixed length; other arguments as for `information`.
+    """
+    last, k = len(cell_start) - 1, dense.shape[1]
+    joint = np.zeros((cell_start[last], k))
+    own, total = np.zeros((k, k)), np.zeros(k)
+    for g in range(0, k, 4):
+        for r in range(len(mu)):
+            w0, w1 = mu[r] * dense[r, g], mu[r] * dense[r, g + 1]
+            w2, w3 = mu[r] * dense[r, g + 2], mu[r] * dense[r, g + 3]
+            total[g] += w0
+            total[g + 1] += w1
+            total[g + 2] += w2
+            total[g + 3] += w3
+            for j in range(g + 4):
+                v = dense[r, j]
+                own[j, g] += v * w0
+                own[j, g + 1] += v * w1
+                own[j, g + 2] += v * w2
+                own[j, g + 3] += v * w3
+            for t in range(last):
+                a = np.uint64(cell_start[t] + cells[t, r])
+                joint[a, g] += w0
+                joint[a, g + 1] += w1
+                joint[a, g + 2] += w2
+                joint[a, g + 3] += w3
+    first = offsets[last]
+    for i in range(sizes[last]):
+        hessian[first + i, 0] = total[i]
+        for j in range(i + 1):
+            hessian[first + i, first + j] = own[j, i]
+    for t in range(last):
+        for a in range(cell_start[t], cell_end[t]):
+            for s in range(supports[t]):
+                row, w = offsets[t] + columns[a, s], weights[a, s]
+                for i in range(sizes[last]):
+                    hessian[first + i, row] += w * joint[a, i]
+    fill_symmetric(hessian)
+
+
+@njit(cache=True, nogil=True)
 def fill_symmetric(hessian):
     """Complete a matrix of which each pair of mirrored entries has one filled, or both alike."""
     n = hessian.shape[0]

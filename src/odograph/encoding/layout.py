@@ -9,7 +9,7 @@ import numpy as np
 from odograph.encoding import kernels
 from odograph.encoding.bases import SUPPORT, Coordinates
 from odograph.encoding.design import RowTable
-from odograph.encoding.terms import Term
+from odograph.encoding.terms import HISTORY, Term
 
 
 @dataclass(frozen=True)
@@ -124,8 +124,8 @@ def _joint_places(n_cells: list[int]) -> tuple[np.ndarray, int]:
     return start, size
 
 
-def pad_bases(layout: Layout) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-    """The bases of all terms but the first as four adjacent columns a cell; cyclic ones repeat their start.
+def pad_bases(layout: Layout, n_terms: int) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """The bases of terms 1 to `n_terms` - 1 as four adjacent columns a cell; cyclic ones repeat their start.
 
     Returns
     -------
@@ -139,7 +139,7 @@ def pad_bases(layout: Layout) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
     weights = np.zeros((len(layout.columns), 4))
     column: list[int] = []
     base = 0
-    for t in range(1, len(layout.cell_start)):
+    for t in range(1, n_terms):
         cells, size = slice(layout.cell_start[t], layout.cell_end[t]), int(layout.spline_count[t])
         start[cells] = len(column) + layout.columns[cells, 0]
         weights[cells, : layout.support[t]] = layout.weights[cells, : layout.support[t]]
@@ -168,16 +168,23 @@ class Workspace:
             layout.support,
             layout.spline_start,
         )
+        # A history fills all its columns and has nearly as many cells as bins: it is last, with its own pass.
+        self._dense_last = bool(self.terms) and self.terms[-1].kind == HISTORY
+        if self._dense_last:
+            values = self.terms[-1].basis.dense()
+            self._dense = np.pad(values, [(0, 0), (0, -values.shape[1] % 4)])[layout.table.cells[-1]]
+        self._few = len(self.terms) - self._dense_last
+        few = self.terms[: self._few]
         # The plane's way asks that all other terms have few splines at a point; a second plane has not.
         self._plane_first = bool(
-            self.terms and self.terms[0].kind == "plane" and np.all(layout.support[1:] <= SUPPORT)
+            few and few[0].kind == "plane" and np.all(layout.support[1 : len(few)] <= SUPPORT)
         )
         if self._plane_first:
             first = layout.table.cells[0]
-            self._row_start = np.searchsorted(first, np.arange(self.terms[0].n_cells + 1))
-            self._joint_start, size = _joint_places([term.n_cells for term in self.terms])
+            self._row_start = np.searchsorted(first, np.arange(few[0].n_cells + 1))
+            self._joint_start, size = _joint_places([term.n_cells for term in few])
             self._joint = np.empty(size)
-            self._padded = pad_bases(layout)
+            self._padded = pad_bases(layout, len(few))
 
     def expected(self, coefficients: np.ndarray, use: np.ndarray) -> float:
         """Fill `mu` (expected count per row) and `eta` (per cell); returns the expected number of spikes.
@@ -223,18 +230,26 @@ class Workspace:
         lay = self.layout
         if not self.terms:
             return np.array([total]), np.array([[total]])
+        few = self._few
+        cells, start, end = lay.table.cells[:few], lay.cell_start[:few], lay.cell_end[:few]
         if self._plane_first:
-            self._plane_information()
+            self._plane_information(cells, start, end)
         else:
-            kernels.cell_sums(lay.table.cells, self.mu, lay.cell_start, self._sums)
+            kernels.cell_sums(cells, self.mu, start, self._sums)
             kernels.information(
-                lay.table.cells,
+                cells,
                 self.mu,
                 total,
                 self._sums,
-                *self.flat,
+                start,
+                end,
+                *self.flat[2:],
                 lay.spline_count,
                 self._information,
+            )
+        if self._dense_last:
+            kernels.dense_blocks(
+                lay.table.cells, self.mu, self._dense, *self.flat, lay.spline_count, self._information
             )
         information = self.reduce(self._information)
         return information[:, 0].copy(), information  # the intercept's column is X'W1
@@ -243,11 +258,12 @@ class Workspace:
         """X'WX in coordinates, (n_coordinates, n_coordinates), from splines, (n_splines, n_splines)."""
         return self.reduce_rows(np.ascontiguousarray(self.reduce_rows(information).T))
 
-    def _plane_information(self) -> None:
+    def _plane_information(self, cells: np.ndarray, start: np.ndarray, end: np.ndarray) -> None:
+        """Blocks among the terms whose cells begin and end as given, the first of them a plane."""
         lay = self.layout
         x, y = self.terms[0].margins
         kernels.plane_information(
-            lay.table.cells,
+            cells,
             self.mu,
             self._row_start,
             x.columns,
@@ -257,17 +273,22 @@ class Workspace:
             x.size,
             y.size,
             *self._padded,
-            lay.cell_start,
-            lay.cell_end,
+            start,
+            end,
             lay.spline_start,
             lay.spline_count,
             self._information,
         )
-        kernels.joint_histograms(
-            lay.table.cells, self.mu, lay.cell_start, lay.cell_end, self._joint_start, self._joint, self._sums
-        )
+        kernels.joint_histograms(cells, self.mu, start, end, self._joint_start, self._joint, self._sums)
         kernels.small_blocks(
-            self._joint, self._joint_start, self._sums, *self.flat, lay.spline_count, self._information
+            self._joint,
+            self._joint_start,
+            self._sums,
+            start,
+            end,
+            *self.flat[2:],
+            lay.spline_count,
+            self._information,
         )
 
     def reduce_rows(self, array: np.ndarray) -> np.ndarray:

@@ -12,15 +12,17 @@ from odograph.encoding.shifts import ShiftPlan, plan_shifts, transform_covariate
 def workspace(design: SessionDesign, model: tuple[str, ...]) -> Workspace:
     """The buffers of a model; one process uses them for one unit after another."""
     if ("space", model) not in design.kept:
+        if design.history is not None:
+            design.kept.clear()  # rows that serve one unit only: those of one model at a time are in memory
         design.kept["space", model] = Workspace(make_layout(design.table(model)))
     return design.kept["space", model]
 
 
 def shift_plan(design: SessionDesign) -> ShiftPlan:
     """The session's admissible shifts."""
-    if "shifts" not in design.kept:
+    if "shifts" not in design.of_covariates:
         settings = design.settings
-        design.kept["shifts"] = plan_shifts(
+        design.of_covariates["shifts"] = plan_shifts(
             design.n_bins,
             design.bin_s,
             step_s=settings.test_step_s,
@@ -28,12 +30,12 @@ def shift_plan(design: SessionDesign) -> ShiftPlan:
             draws=settings.test_draws,
             seed=settings.seed,
         )
-    return design.kept["shifts"]
+    return design.of_covariates["shifts"]
 
 
 def covariate_spectrum(design: SessionDesign, name: str) -> np.ndarray | None:
     """The transform of a term's covariate for the test of all shifts, see `transform_covariate`."""
-    if ("spectrum", name) not in design.kept:
+    if ("spectrum", name) not in design.of_covariates:
         (term,) = (term for term in design.terms if term.name == name)
-        design.kept["spectrum", name] = transform_covariate(term, shift_plan(design))
-    return design.kept["spectrum", name]
+        design.of_covariates["spectrum", name] = transform_covariate(term, shift_plan(design))
+    return design.of_covariates["spectrum", name]

@@ -6,6 +6,10 @@
 | line     | one coordinate           | cubic B-splines                 | straight lines, or none |
 | circle   | an angle of period 2 pi  | cyclic cubic B-splines          | the constant            |
 | category | levels of a state        | one column a level              | nothing (ridge)         |
+| history  | a unit's recent spikes   | sums of raised cosines          | nothing (ridge)         |
+
+Lines may be penalised by their second derivative, which leaves straight lines free, or by their first, which
+shrinks to a constant. The history is not configured as a term, see `odograph.encoding.history`.
 """
 
 from __future__ import annotations
@@ -29,6 +33,7 @@ from odograph.errors import InputError
 from odograph.settings.encoding import EncodingSettings, TermSettings
 
 DRIFT = "drift"
+HISTORY = "history"
 
 
 @dataclass(frozen=True)

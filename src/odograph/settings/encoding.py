@@ -66,7 +66,9 @@ class EncodingSettings(StageSettings):
         ge=0,
         le=2,
     )
-    history_functions: int = setting(4, "raised cosines that make up the spike history", ge=2, le=4)
+    history_functions: int = setting(
+        4, "raised cosines that make up the spike history; more than 4 are slower", ge=2, le=8
+    )
     folds: int = setting(10, "held-out folds, each made of interleaved contiguous blocks", ge=3, le=30)
     blocks_per_fold: int = setting(5, "blocks per fold", ge=1, le=50)
     guard_s: float = setting(
@@ -106,4 +108,6 @@ class EncodingSettings(StageSettings):
         names = [term.name for term in self.terms]
         if len(set(names)) != len(names):
             raise ValueError(f"two terms share a name: {', '.join(names)}")
+        if taken := sorted({"drift", "history"} & set(names)):
+            raise ValueError(f"a term must not be called {taken[0]}, which every model may have; rename it")
         return self
