@@ -96,7 +96,7 @@ def analyse_unit(
         design = _observed_design(design, observed)
     except InputError as problem:  # too little of the session is left to hold anything out
         unit = bin_spikes(design, spike_times_s)
-        reason = f"where the unit was observed: {' '.join(str(problem).split())}"
+        reason = f"where the unit was observed, {problem.found}; expected {problem.expected}"
         row = _empty_row(design, unit) | {"status": "failed", "status_reason": reason}
         return UnitResult(row, [], {"spike_bins": unit.all_bins.astype(np.int32)})
     unit = bin_spikes(design, spike_times_s)
