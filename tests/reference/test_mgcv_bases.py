@@ -126,7 +126,7 @@ def cyclic_direction():
 
 
 def test_a_surface_and_a_direction_are_mgcvs(solve):
-    # mgcv: te(x, y, bs="ps") + s(hd, bs="cc") + offset, three strengths, two of them on the same coefficients.
+    # mgcv: te(x, y, bs="ps") + s(hd, bs="cc") + offset, three strengths, two on the same coefficients.
     plane, eigenvalues = surface()
     terms = [cyclic_direction(), plane]
     compare_model(solve, terms, ARENA["occ"], ARENA["count"], "surface", np.array([*eigenvalues, 1.0]))

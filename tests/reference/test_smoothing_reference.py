@@ -85,3 +85,24 @@ def test_restricted_likelihood_is_mgcvs_score(space):
     log_s = np.log(np.exp(rho[0]) * spectrum[spectrum > 0]).sum()
     score = -loglik + np.exp(rho[0]) * (spectrum @ fit.coefficients**2) / 2 + log_a / 2 - log_s / 2
     assert score - 2 * np.log(2 * np.pi) / 2 == pytest.approx(171.326757666, abs=1e-5)
+
+
+def test_fit_and_score_away_from_the_optimum(space, solve):
+    """mgcv's `gam` and glum at the strength 10 of mgcv's basis; scores of two bases differ by a constant."""
+    found, best = (
+        solve(space.terms, np.ones(112), COUNTS, np.log([strength / 16])) for strength in (10, 253.207661573)
+    )
+    assert found.fit.edf == pytest.approx(10.7381990786, abs=1e-6)
+    assert found.deviance == pytest.approx(111.191120806, abs=1e-6)
+    assert found.score - best.score == pytest.approx(177.693466396 - 172.824623802, abs=1e-6)
+    # Score of gam at its optimum in a basis whose intercept is the sum of the 20 splines.
+    assert best.score - np.log(SIZE) / 2 == pytest.approx(171.326757666, abs=1e-5)
+
+
+def test_gams_optimum_is_where_the_score_is_least(space, solve):
+    # gam's REML, which the engine's choice approximates: log strength 5.53420994879 in mgcv's basis.
+    rho = 5.53420994879 - np.log(16) + np.array([-0.01, 0.0, 0.01])
+    below, least, above = (solve(space.terms, np.ones(112), COUNTS, [r]).score for r in rho)
+    curvature = (below + above - 2 * least) / 0.01**2
+    assert curvature > 0.1
+    assert (above - below) / 0.02 == pytest.approx(0, abs=1e-4 * curvature)
