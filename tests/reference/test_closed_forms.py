@@ -118,5 +118,5 @@ def test_restricted_score_is_the_marginal_likelihood(solve):
     offset = 0.0
     offset = -np.log(density(centre[1], centre[0]))
     (low, lower), (high, higher) = centre - width, centre + width
-    integral, _ = dblquad(density, low, high, lower, higher, epsabs=0, epsrel=1e-8)
+    integral, _ = dblquad(density, low, high, lower, higher, epsabs=0, epsrel=1e-6)
     assert found.score == pytest.approx(offset - np.log(integral), abs=2e-5)
