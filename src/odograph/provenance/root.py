@@ -29,6 +29,7 @@ ROOT_FORMAT = 1
 ROOT = RESULTS / "root.json"
 KNOWN_FILES = PLAN / "recordings.json"
 USER_FILES = ("config/config.yaml",)
+_KEYS = {"format", "root", "records", "user_files", "recordings", "code"}
 
 
 def record_content(record: Mapping[str, Any]) -> str:
@@ -117,6 +118,7 @@ def write_root(folder: str | Path = ".") -> str:
         "recordings": _recordings(folder, sessions),
         "code": code_state(folder),
     }
+    document["own_digest"] = digest_value(document)
     write_if_changed(folder / ROOT, readable_json(document))
     return document["root"]
 
@@ -134,11 +136,12 @@ def read_root(folder: str | Path) -> dict[str, Any]:
     path = Path(folder) / ROOT
     document = read_json(path)
     try:
+        rest = {key: value for key, value in document.items() if key != "own_digest"}
         whole = document["format"] == ROOT_FORMAT and document["root"] == identify_root(document["records"])
-        keys = {"format", "root", "records", "user_files", "recordings", "code"} == document.keys()
+        whole = whole and document["own_digest"] == digest_value(rest) and rest.keys() == _KEYS
     except (KeyError, TypeError, AttributeError):
-        whole = keys = False
-    if not (whole and keys) or path.read_text(encoding="utf-8") != readable_json(document):
+        whole = False
+    if not whole or path.read_bytes() != readable_json(document).encode():
         raise RecordError(
             "the run root was changed after it was written",
             file=str(path),
