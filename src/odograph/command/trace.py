@@ -9,7 +9,7 @@ from collections.abc import Iterator
 from pathlib import Path
 from typing import Any
 
-from odograph.errors import OdographError
+from odograph.errors import InputError, OdographError
 
 EXIT_OK, EXIT_DATA, EXIT_NO_INPUT = 0, 65, 66
 _MOST_UNITS = 12
@@ -20,6 +20,8 @@ examples:
   odograph trace results/population/units.tsv          a table
   odograph trace 3f9c20a1b7de                          the digits in the margin of a figure
   odograph trace paper/figure2.pdf --results results   a figure that was copied elsewhere
+  odograph trace results/figures/speed_gains.png --row bracken_1 12   one point of it: a unit of a session
+  odograph trace results/report.html --format prov     as W3C PROV-JSON, for other programs
 
 exit codes: 0 traced, 65 traced with problems (something changed since), 66 no such product or record
 """
@@ -41,35 +43,57 @@ def add_parser(subparsers: argparse._SubParsersAction[argparse.ArgumentParser]) 
     parser.add_argument(
         "--results", type=Path, default=Path("results"), help="folder of the results (results)"
     )
+    parser.add_argument(
+        "--row", nargs=2, metavar=("SESSION", "UNIT"), help="only what leads to one unit: a point, a row"
+    )
+    parser.add_argument(
+        "--format",
+        choices=("text", "json", "prov"),
+        default="text",
+        help="text, JSON or W3C PROV-JSON (text)",
+    )
     parser.add_argument("--all", action="store_true", help="show every setting, not only those of your own")
-    parser.add_argument("--json", action="store_true", help="write one JSON document instead of text")
+    parser.add_argument("--json", action="store_true", help="the same as --format json")
     parser.set_defaults(run=run)
 
 
 def run(args: argparse.Namespace) -> int:
     """Trace the product named by `args.target`; returns the exit code."""
     from odograph.command.setting_places import with_places
-    from odograph.provenance.trace import find_start, trace
+    from odograph.provenance.trace import find_start, of_row, trace
 
+    form = "json" if args.json else args.format
     try:
         found = trace(find_start(args.target, args.results), args.results)
+        if args.row:
+            found = of_row(found, args.row[0], _unit(args.row[1]))
     except OdographError as error:
-        if args.json:
+        if form == "json":
             print(json.dumps({"schema_version": 1, "problems": [error.message()]}, indent=1))
         print(error.message(), file=sys.stderr)
         return EXIT_NO_INPUT
     settings = with_places(found.settings(), args.results.resolve().parent)
-    if args.json:
+    if form == "prov":
+        from odograph.provenance.prov_export import prov_json
+
+        print(prov_json(found), end="")
+    elif form == "json":
         print(json.dumps(found.document() | {"settings": settings}, indent=1, sort_keys=True))
     else:
         print("\n".join(text_lines(found, settings, everything=args.all)))
     return EXIT_DATA if found.problems else EXIT_OK
 
 
+def _unit(text: str) -> int:
+    if not text.isdecimal():
+        raise InputError(f"{text!r} is no unit", place="--row", expected="SESSION UNIT, the unit a number")
+    return int(text)
+
+
 def text_lines(found: Any, settings: list[dict[str, Any]], *, everything: bool = False) -> Iterator[str]:
     """The trace in words."""
     start = found.start
-    yield str(start.path or start.file)
+    yield str(start.path or start.file) + (f", unit {found.row[1]} of {found.row[0]}" if found.row else "")
     record = start.record
     yield f"  record {_short(record['record_id'])}, rule {record['rule']}{_keys(record['keys'])}"
     yield f"  made {record['run']['started'][:19].replace('T', ' ')} UTC on {record['run']['host']}"

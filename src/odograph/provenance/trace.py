@@ -55,17 +55,20 @@ class Trace:
         Where each record lies.
     problems : list of str
         Whatever does not fit: products that changed, records that are gone.
+    row : tuple of (session, unit) or None
+        The one unit whose course is asked for.
     """
 
     start: Start
     records: dict[str, dict[str, Any]] = field(default_factory=dict)
     files: dict[str, Path] = field(default_factory=dict)
     problems: list[str] = field(default_factory=list)
+    row: tuple[str, int] | None = None
 
     @property
     def unit(self) -> int | None:
-        """The unit that the product shows, when it shows one."""
-        return (self.start.product or {}).get("unit")
+        """The unit that was asked for, or that the product shows, when it shows one."""
+        return self.row[1] if self.row else (self.start.product or {}).get("unit")
 
     def sources(self) -> dict[str, dict[str, Any]]:
         """By session: the recording's file, the signals and the units that were read."""
@@ -201,6 +204,43 @@ def trace(start: Start, results: Path) -> Trace:
                 if before is not None:
                     waiting.append(before)
     return found
+
+
+def of_row(found: Trace, session: str, unit: int) -> Trace:
+    """The part of a trace that leads to one unit: a point of a figure, a row of a table.
+
+    Parameters
+    ----------
+    found : Trace
+        From `trace`.
+    session : str
+    unit : int
+
+    Raises
+    ------
+    InputError
+        Nothing on the way read this unit.
+    """
+
+    def reads(record: Mapping[str, Any]) -> bool:
+        return any(entry["kind"] == "unit" and entry["unit"] == unit for entry in record["inputs"])
+
+    kept = {}
+    for name, record in found.records.items():
+        own = record["keys"].get("session")
+        if own is None or (own == session and (record["rule"] != "encoding" or reads(record))):
+            kept[name] = record
+    if not any(reads(record) for record in kept.values() if record["keys"].get("session") == session):
+        known = {record["keys"].get("session") for record in found.records.values()} - {None}
+        raise InputError(
+            f"unit {unit} of session {session} was not read on the way to it",
+            file=str(found.start.path or found.start.file),
+            expected="a unit of a session that stands behind it"
+            if session in known
+            else f"one of the sessions {', '.join(sorted(known))}",
+            remedy="look the unit up in results/population/units.tsv",
+        )
+    return Trace(found.start, kept, found.files, found.problems, (session, unit))
 
 
 def _start_from_file(path: Path, results: Path) -> Start:
