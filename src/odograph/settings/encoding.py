@@ -19,7 +19,9 @@ class TermSettings(StageSettings):
     columns: list[str] = setting(..., "columns of the behaviour table: two for a plane, else one")
     basis_size: int = setting(10, "B-splines per axis (ignored for a category)", ge=4, le=40)
     penalty_order: Literal[1, 2] = setting(
-        2, "derivative a line's penalty is on: 2 leaves straight lines free, 1 shrinks to a constant"
+        2,
+        "derivative a line's penalty is on: 2 leaves straight lines free; 1 shrinks to a constant, so that a "
+        "line without effect costs next to no degree of freedom and a straight one costs more",
     )
     cells: int = setting(40, "grid cells per axis on which the covariate is discretised", ge=8, le=200)
     low: float | None = setting(None, "lower end of the range; null takes it from the data")
@@ -61,7 +63,8 @@ class EncodingSettings(StageSettings):
     drift_knot_s: float = setting(300.0, "spacing of the drift's knots", unit="s", ge=30)
     history_s: float = setting(
         0.0,
-        "reach of the spike history that every model has (never tested); 0 for none",
+        "reach of the spike history that every model has (never tested), guard_s at most; 0 for none; with it "
+        "a unit takes two to five times as long",
         unit="s",
         ge=0,
         le=2,
