@@ -8,6 +8,7 @@ import sys
 
 import pytest
 from PIL import Image
+from prov.model import ProvActivity, ProvDocument, ProvEntity, ProvGeneration, ProvUsage
 
 from odograph.command.main import main
 
@@ -115,3 +116,41 @@ def test_the_command_is_installed_and_helps():
     )
     assert done.returncode == 64
     assert "did you mean trace?" in done.stderr
+
+
+def test_a_point_of_a_figure_leads_to_its_unit(at, capsys):
+    unit = at.record("sessions/alpha/intake/inventory.json")["units"][0]
+    row = ("--row", "alpha", str(unit["unit"]))
+    document = json.loads(traced(capsys, "results/figures/composition.png", *row, "--json").out)
+    (source,) = document["sources"]
+    assert source["session"] == "alpha" and source["units"] == {str(unit["unit"]): unit["digest"]}
+    shards = [record for record in document["records"] if record["rule"] == "encoding"]
+    assert len(shards) == 1 and shards[0]["keys"]["session"] == "alpha"
+    text = traced(capsys, "results/figures/composition.png", *row).out
+    assert f"unit {unit['unit']} of alpha" in text and "beta" not in text
+
+
+@pytest.mark.parametrize("row", [("alpha", "99999"), ("nosuch", "1"), ("alpha", "one")])
+def test_a_unit_that_nothing_read_is_refused(at, capsys, row):
+    told = traced(capsys, "results/figures/composition.png", "--row", *row, status=66).err
+    assert row[1] in told
+
+
+def test_a_trace_is_a_prov_document(at, capsys):
+    """Read back by the prov library; the statements follow PROV-DM (W3C 2013), section 5."""
+    text = traced(capsys, "results/figures/composition.png", "--format", "prov").out
+    assert text == traced(capsys, "results/figures/composition.png", "--format", "prov").out
+    document = ProvDocument.deserialize(content=text, format="json")
+    trace = json.loads(traced(capsys, "results/figures/composition.png", "--json").out)
+    activities = {str(record.identifier) for record in document.get_records(ProvActivity)}
+    expected = {record["record_id"].replace(":", "-") for record in trace["records"]}
+    assert {name.removeprefix("odograph:") for name in activities} == expected
+    entities = {str(record.identifier) for record in document.get_records(ProvEntity)}
+    made = [statement.args[:2] for statement in document.get_records(ProvGeneration)]
+    assert len(made) == sum(len(record["products"]) for record in trace["records"])
+    used = [statement.args[:2] for statement in document.get_records(ProvUsage)]
+    assert len(used) == sum(len(r["inputs"]) + len(r["settings"]) for r in trace["records"])
+    assert {str(entity) for entity, _ in made} | {str(entity) for _, entity in used} == entities
+    assert {str(activity) for _, activity in made} == activities
+    # What one job made and another used is one and the same entity, which is what ties the chain.
+    assert len({str(entity) for entity, _ in made} & {str(entity) for _, entity in used}) > 5
