@@ -63,8 +63,8 @@ class EncodingSettings(StageSettings):
     drift_knot_s: float = setting(300.0, "spacing of the drift's knots", unit="s", ge=30)
     history_s: float = setting(
         0.0,
-        "reach of the spike history that every model has (never tested), guard_s at most; 0 for none; with it "
-        "a unit takes two to five times as long",
+        "reach of the spike history that every model has (never tested), guard_s at most; 0 for none. "
+        "With it a unit takes 2 to 5 times as long",
         unit="s",
         ge=0,
         le=2,
