@@ -6,11 +6,14 @@ import pytest
 from odograph.encoding.bases import curve_coordinates, surface_coordinates
 from odograph.encoding.smoothing import (
     LARGEST_LOG_STRENGTH,
+    SMALLEST_CURVATURE,
+    SMALLEST_LOG_STRENGTH,
     Quadratic,
     _Solved,
     descent,
     factorise,
     neutral_strengths,
+    strength_covariance,
     tune,
 )
 
@@ -101,3 +104,55 @@ def test_factorise_inverts_and_survives_a_direction_without_data():
     assert np.all(np.isfinite(inverse))
     with pytest.raises(FloatingPointError, match="not positive definite"):
         factorise(-np.eye(3))
+
+
+@pytest.mark.parametrize(
+    "target, bound",
+    [([5.0, 0, 0, 0, 0], LARGEST_LOG_STRENGTH), ([0, 1e9, 1e9, -1e9, 1e9], SMALLEST_LOG_STRENGTH)],
+)
+def test_strengths_stop_at_their_bounds(target, bound):
+    """Without roughness the strength wants to be infinite, with roughness beyond measure 0."""
+    problem = Quadratic(np.eye(5) * 1e6, np.array(target), np.array([[0.0, 1, 1, 1, 1]]))
+    rho = neutral_strengths(problem.information, problem.spectra)
+    for _ in range(100):
+        state = tune(problem, rho, choose=True, tolerance=1e-15)
+        assert SMALLEST_LOG_STRENGTH <= state.log_strengths[0] <= LARGEST_LOG_STRENGTH
+        rho = state.log_strengths
+    assert rho[0] == bound and state.settled
+
+
+def test_strengths_that_start_at_a_bound_leave_it(problem):
+    free = neutral_strengths(problem.information, problem.spectra)
+    ends = []
+    for start in (free, np.full(3, SMALLEST_LOG_STRENGTH), np.full(3, LARGEST_LOG_STRENGTH - 1)):
+        rho = start
+        for _ in range(60):
+            rho = tune(problem, rho, choose=True, tolerance=1e-12).log_strengths
+        ends.append(_Solved(problem, rho).value)
+    np.testing.assert_allclose(ends, ends[0], atol=1e-3)  # nats; V is as good as flat towards the bound
+
+
+def test_strength_of_a_ridge_in_closed_form():
+    """Exact: orthonormal columns, z = w ~ N(0, 1 + 1 / lam): the maximum is 1 / lam = mean z^2 - 1."""
+    z = np.array([1.5, -2.0, 0.3, 2.5, -1.1, 0.7])
+    problem = Quadratic(np.eye(6), z, np.ones((1, 6)))
+    rho = np.zeros(1)
+    for _ in range(20):
+        rho = tune(problem, rho, choose=True, tolerance=1e-14).log_strengths
+    variance = np.mean(z**2)
+    assert rho[0] == pytest.approx(-np.log(variance - 1), abs=1e-6)
+    # The likelihood of 1 + 1 / lam = v has curvature n / (2 v^2) there, and dv / d log lam = -(v - 1).
+    curvature = 6 / (2 * variance**2) * (variance - 1) ** 2
+    assert _Solved(problem, rho).hessian()[0, 0] == pytest.approx(curvature, rel=1e-5)
+    assert strength_covariance(problem, rho)[0, 0] == pytest.approx(1 / curvature, rel=1e-5)
+
+
+def test_the_variance_of_a_strength_that_may_be_anything_is_bounded():
+    problem = Quadratic(np.eye(5) * 100, np.array([5.0, 0, 0, 0, 0]), np.array([[0.0, 1, 1, 1, 1]]))
+    assert strength_covariance(problem, np.array([15.0]))[0, 0] == pytest.approx(1 / SMALLEST_CURVATURE)
+
+
+def test_neutral_strengths_by_hand():
+    # Data 2 + 4 over roughness 1 + 3 on the first penalty's coordinates; 9 over 0.5 on the second's.
+    information, spectra = np.diag([7.0, 2.0, 4.0, 9.0]), np.array([[0, 1.0, 3.0, 0], [0, 0, 0, 0.5]])
+    np.testing.assert_allclose(neutral_strengths(information, spectra), np.log([6 / 4, 18.0]))
