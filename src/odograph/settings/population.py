@@ -10,7 +10,8 @@ class PopulationSettings(StageSettings):
 
     false_discovery_rate: float = setting(
         0.05,
-        "a unit encodes a variable when its selected model holds it and its adjusted p is at most this",
+        "a unit encodes a variable when its selected model holds it and its adjusted p is at most this; "
+        "speed gains are judged at the same rate",
         unit="share",
         gt=0,
         le=0.5,
