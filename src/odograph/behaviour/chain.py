@@ -2,14 +2,15 @@
 
 from __future__ import annotations
 
-import numba
 import numpy as np
+
+from odograph.compiled import compiled
 
 # Runs looked back over for the run that came before; reflections in between are far fewer.
 _LOOK_BACK = 60
 
 
-@numba.njit(cache=True)
+@compiled
 def _best_chain(first, last, length, time_s, xy_m, max_speed, slack):
     n = len(first)
     score = np.empty(n)

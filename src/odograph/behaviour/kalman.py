@@ -15,8 +15,9 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
-import numba
 import numpy as np
+
+from odograph.compiled import compiled
 
 _LOG_2PI = float(np.log(2 * np.pi))
 
@@ -56,7 +57,7 @@ def white_acceleration(step_s: np.ndarray, intensity: float) -> np.ndarray:
     return intensity * np.column_stack([step_s**3 / 3, step_s**2 / 2, step_s])
 
 
-@numba.njit(cache=True)
+@compiled
 def _filter(measured, step, process, starts, prior_xy, prior_cov, noise, gate, patience):
     n = len(step)
     predicted, updated = np.empty((n, 4)), np.empty((n, 4))
@@ -159,7 +160,7 @@ def kalman_filter(
     )
 
 
-@numba.njit(cache=True)
+@compiled
 def _smooth(predicted, updated, predicted_cov, updated_cov, step, starts):
     n = len(step)
     state, cov = updated.copy(), updated_cov.copy()

@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
-import numba
 import numpy as np
+
+from odograph.compiled import compiled
 
 _NOISE_M = 0.002
 _TYPICAL_SPEED_M_S = 0.5
@@ -16,7 +17,7 @@ _FACING_SPEED_M_S = 0.08
 _FACING_STEPS = 5
 
 
-@numba.njit(cache=True)
+@compiled
 def _most_probable(time_s, front, back, facing):
     n = len(time_s)
     came_from = np.zeros((n, 2), np.int8)

@@ -8,10 +8,11 @@ matrix.
 from __future__ import annotations
 
 import numpy as np
-from numba import njit
+
+from odograph.compiled import compiled
 
 
-@njit(cache=True, nogil=True)
+@compiled
 def expected_counts(cells, seconds, group, use, factor, cell_start, mu):
     """Expected count of every row under the term factors; rows of groups not in `use` get 0. Returns the sum.
 
@@ -31,7 +32,7 @@ def expected_counts(cells, seconds, group, use, factor, cell_start, mu):
     return total
 
 
-@njit(cache=True, nogil=True)
+@compiled
 def group_sums(group, mu, out):
     """Sum of `mu` over the rows of every group; out (n_groups,) is overwritten."""
     out[:] = 0.0
@@ -39,7 +40,7 @@ def group_sums(group, mu, out):
         out[np.uint64(group[r])] += mu[r]
 
 
-@njit(cache=True, nogil=True)
+@compiled
 def cell_sums(cells, mu, cell_start, out):
     """Sum of `mu` over the rows of every cell of every term; out (all cells,) is overwritten."""
     out[:] = 0.0
@@ -50,7 +51,7 @@ def cell_sums(cells, mu, cell_start, out):
             out[np.uint64(start + cells[t, r])] += mu[r]
 
 
-@njit(cache=True, nogil=True)
+@compiled
 def _diagonal_block(h, columns, weights, offset, hessian):
     n_cells, support = columns.shape
     for c in range(n_cells):
@@ -64,7 +65,7 @@ def _diagonal_block(h, columns, weights, offset, hessian):
                 hessian[row, offset + columns[c, j]] += wi * weights[c, j]
 
 
-@njit(cache=True, nogil=True)
+@compiled
 def _cross_block(
     cells_a, cells_b, mu, columns_a, weights_a, columns_b, weights_b, n_b, off_a, off_b, hessian
 ):
@@ -96,7 +97,7 @@ def _cross_block(
                 hessian[row, off_b + k] += weight * joint[a, k]
 
 
-@njit(cache=True, nogil=True)
+@compiled
 def information(
     cells, mu, total, h, cell_start, cell_end, columns, weights, supports, offsets, sizes, hessian
 ):
@@ -131,7 +132,7 @@ def information(
     fill_symmetric(hessian)
 
 
-@njit(cache=True, nogil=True)
+@compiled
 def scaled_counts(cells, seconds, gains, z, effects, cell_start, constant, mu):
     """Expected count of every row when rows scale the terms' effects; fills mu (n_rows,), returns its sum.
 
@@ -149,7 +150,7 @@ def scaled_counts(cells, seconds, gains, z, effects, cell_start, constant, mu):
     return total
 
 
-@njit(cache=True, nogil=True)
+@compiled
 def scaled_sums(cells, value, gains, z, cell_start, out):
     """Sums of value (n_rows,) times each term's scale over its cells; out (all cells,) is overwritten."""
     out[:] = 0.0
@@ -158,7 +159,7 @@ def scaled_sums(cells, value, gains, z, cell_start, out):
             out[np.uint64(cell_start[t] + cells[t, r])] += value[r] * (1 + gains[t] * z[r])
 
 
-@njit(cache=True, nogil=True)
+@compiled
 def scaled_information(
     cells, mu, gains, z, cell_start, cell_end, columns, weights, supports, offsets, sizes, hessian
 ):
@@ -198,7 +199,7 @@ def scaled_information(
     fill_symmetric(hessian)
 
 
-@njit(cache=True, nogil=True)
+@compiled
 def plane_information(
     cells,
     mu,
@@ -280,7 +281,7 @@ def plane_information(
                         hessian[row, column + d * n_y] += v * band[a, d]
 
 
-@njit(cache=True, nogil=True)
+@compiled
 def joint_histograms(cells, mu, cell_start, cell_end, start, joint, sums):
     """Sums of `mu` over the cells of every term but the first, and jointly over those of every pair of them.
 
@@ -308,7 +309,7 @@ def joint_histograms(cells, mu, cell_start, cell_end, start, joint, sums):
                     sums[cell_start[u] + d] += joint[base + c * width + d]
 
 
-@njit(cache=True, nogil=True)
+@compiled
 def small_blocks(
     histograms, start, sums, cell_start, cell_end, columns, weights, supports, offsets, sizes, hessian
 ):
@@ -334,7 +335,7 @@ def small_blocks(
     fill_symmetric(hessian)
 
 
-@njit(cache=True, nogil=True)
+@compiled
 def dense_blocks(cells, mu, dense, cell_start, cell_end, columns, weights, supports, offsets, sizes, hessian):
     """Blocks of X'WX of a last term all of whose columns are filled, with itself and with all others.
 
@@ -378,7 +379,7 @@ def dense_blocks(cells, mu, dense, cell_start, cell_end, columns, weights, suppo
     fill_symmetric(hessian)
 
 
-@njit(cache=True, nogil=True)
+@compiled
 def fill_symmetric(hessian):
     """Complete a matrix of which each pair of mirrored entries has one filled, or both alike."""
     n = hessian.shape[0]
@@ -390,7 +391,7 @@ def fill_symmetric(hessian):
                 hessian[i, j] = hessian[j, i]
 
 
-@njit(cache=True, nogil=True)
+@compiled
 def cell_values(coefficients, cell_start, cell_end, columns, weights, supports, offsets, out):
     """Each term's contribution to eta at every cell; out (all cells,)."""
     for t in range(len(cell_start)):
@@ -401,7 +402,7 @@ def cell_values(coefficients, cell_start, cell_end, columns, weights, supports, 
             out[c] = value
 
 
-@njit(cache=True, nogil=True)
+@compiled
 def column_sums(h, cell_start, cell_end, columns, weights, supports, offsets, out):
     """B_t' h for every term, into the term's columns of `out` (n_columns,); the intercept's is left alone."""
     out[1:] = 0.0
@@ -411,7 +412,7 @@ def column_sums(h, cell_start, cell_end, columns, weights, supports, offsets, ou
                 out[offsets[t] + columns[c, j]] += h[c] * weights[c, j]
 
 
-@njit(cache=True, nogil=True)
+@compiled
 def mirror(matrix):
     """Copy the lower triangle of a square matrix onto its upper one."""
     n = matrix.shape[0]

@@ -26,9 +26,9 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-from numba import njit
 from scipy import fft, linalg
 
+from odograph.compiled import compiled
 from odograph.encoding.design import SessionDesign
 from odograph.encoding.fit import Fit
 from odograph.encoding.layout import Workspace
@@ -91,7 +91,7 @@ def plan_shifts(
     return ShiftPlan(bins, n_steps, shifts, drawn)
 
 
-@njit(cache=True, nogil=True)
+@compiled
 def shifted_cell_sums(cell, residual, shift, out):
     """out[c] = sum of residual[i] over steps whose covariate, turned by `shift`, lies in cell c."""
     out[:] = 0.0
@@ -102,7 +102,7 @@ def shifted_cell_sums(cell, residual, shift, out):
         out[cell[i + shift - n]] += residual[i]
 
 
-@njit(cache=True, nogil=True)
+@compiled
 def shifted_products(cells, starts, columns, weights, supports, offsets, value, cell, shift, out):
     """out[c] = sum of value[i] X[i] over steps whose tested covariate, turned by `shift`, lies in cell c.
 

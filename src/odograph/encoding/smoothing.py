@@ -16,9 +16,9 @@ from dataclasses import dataclass
 from functools import cached_property
 
 import numpy as np
-from numba import njit
 from scipy.linalg import lapack
 
+from odograph.compiled import compiled
 from odograph.encoding import kernels
 
 LARGEST_LOG_STRENGTH = 20.0
@@ -66,15 +66,17 @@ def neutral_strengths(information: np.ndarray, spectra: np.ndarray) -> np.ndarra
 def factorise(matrix: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     """Lower Cholesky factor and inverse of a symmetric positive definite matrix.
 
-    A coordinate that no data inform and no penalty holds is held by a relative ridge of 1e-12, or as much
-    more as the factorisation needs.
+    Every coordinate gets a ridge of 1e-12 of its own diagonal, or as much more as the factorisation needs (of
+    the mean diagonal, where no data inform it and no penalty holds it). A ridge of one size for all would
+    weigh on what goes unpenalised as soon as another coordinate is held stiffly.
 
     Raises
     ------
     FloatingPointError
         The matrix is not positive definite even with a thousandth of its mean diagonal added.
     """
-    scale = np.trace(matrix) / len(matrix)
+    diagonal = np.diag(matrix)
+    scale = np.where(diagonal > 0, diagonal, max(diagonal.mean(), 0.0))
     for ridge in (1e-12, 1e-9, 1e-6, 1e-3):
         lifted = matrix.copy()
         lifted.flat[:: len(matrix) + 1] += ridge * scale
@@ -87,7 +89,7 @@ def factorise(matrix: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     raise FloatingPointError("the penalised information matrix is not positive definite")
 
 
-@njit(cache=True, nogil=True)
+@compiled
 def strength_derivatives(covariance, coefficients, spectra, strengths):
     """What V's derivatives by the log strengths are made of.
 
@@ -123,7 +125,7 @@ def strength_derivatives(covariance, coefficients, spectra, strengths):
     return rough, ratio, trace, hessian
 
 
-@njit(cache=True, nogil=True)
+@compiled
 def descent(hessian, gradient, free):
     """Newton's move, (n,), among the `free` entries, for a function that need not be convex."""
     places = np.flatnonzero(free)

@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
-import numba
 import numpy as np
+
+from odograph.compiled import compiled
 
 # Frames compared at once when a stretch of the camera's frames is looked for in the pulses: enough for the
 # jitter pattern to be unmistakable, few enough that the clock stays straight within the stretch.
@@ -12,7 +13,7 @@ _SMALLEST_MATCHED_SHARE = 0.7
 _CLEARLY_BETTER = 0.6
 
 
-@numba.njit(cache=True)
+@compiled
 def _spread(frame_s, pulse_s, shift, reach_s, times, residuals):
     n_pulses = len(pulse_s)
     k = min(np.searchsorted(pulse_s, frame_s[0] + shift), n_pulses - 1)
@@ -40,7 +41,7 @@ def _spread(frame_s, pulse_s, shift, reach_s, times, residuals):
     return total / n
 
 
-@numba.njit(cache=True)
+@compiled
 def alignment_spreads(
     frame_s: np.ndarray, pulse_s: np.ndarray, shift_s: np.ndarray, reach_s: float
 ) -> np.ndarray:
@@ -70,7 +71,7 @@ def alignment_spreads(
     return spreads
 
 
-@numba.njit(cache=True)
+@compiled
 def pair_frames(
     frame_s: np.ndarray, pulse_s: np.ndarray, slope: float, intercept_s: float, reach_s: float
 ) -> np.ndarray:
