@@ -1,8 +1,7 @@
 """Compiled inner loops: one pass over a model's rows gives the expected counts and what Newton's step needs.
 
 With the covariates on grids, exp(eta) of a row is a product of one factor per term, so a pass needs no
-exponential per row, and X'WX is assembled from weighted histograms and small sandwiches instead of a design
-matrix.
+exponential per row, and X'WX is assembled from weighted histograms and small sandwiches, not a design matrix.
 """
 
 from __future__ import annotations
