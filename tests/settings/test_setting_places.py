@@ -59,3 +59,22 @@ def test_defaults_and_settings_that_are_written_nowhere(folder):
 
 def test_a_study_without_its_files_is_still_told(tmp_path):
     assert place(tmp_path, "encoding.folds", 8) == (None, 8)
+
+
+def test_a_cell_that_is_not_allowed_hides_no_other_place(folder):
+    (folder / "config/sessions.tsv").write_text(TABLE.replace("a.nwb\t", "a.nwb\tlong"))
+    assert place(folder, "behaviour.max_gap_s", 0.4, ["a"]) == ("config/sessions.tsv:2", 0.4)
+    assert place(folder, "behaviour.max_gap_s", 0.7, ["b"]) == ("config/sessions.tsv:4", 0.9)
+
+
+def test_without_the_sessions_table_nothing_is_claimed_of_a_session(folder):
+    (folder / "config/sessions.tsv").unlink()
+    assert place(folder, "behaviour.max_gap_s", 0.9, ["b"]) == (None, 0.9)
+    assert place(folder, "encoding.folds", 8) == ("config/config.yaml:4", 8)
+
+
+def test_the_table_is_named_as_it_is_configured(folder):
+    (folder / "config/config.yaml").write_text(CONFIG.replace("config/sessions.tsv", "tables/all.tsv"))
+    (folder / "tables").mkdir()
+    (folder / "config/sessions.tsv").rename(folder / "tables/all.tsv")
+    assert place(folder, "behaviour.max_gap_s", 0.9, ["b"]) == ("tables/all.tsv:4", 0.9)

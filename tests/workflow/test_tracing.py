@@ -54,6 +54,22 @@ def test_a_figure_leads_to_the_lines_of_the_configuration(at, capsys):
     assert rows["figures.dpi"]["value"] == 72
 
 
+def test_a_setting_of_one_session_leads_to_the_sessions_table(study, capsys, monkeypatch):
+    """The table is changed after the run: the trace names the line, and what it says now."""
+    monkeypatch.chdir(study.folder)
+    study.sessions["beta"]["behaviour.max_gap_s"] = 0.125
+    study.write_tables()
+    document = json.loads(traced(capsys, "results/figures/composition.png", "--json").out)
+    (row,) = [row for row in document["settings"] if row["setting"] == "behaviour.max_gap_s"]
+    file, _, line = row["line"].partition(":")
+    assert file == "config/sessions.tsv"
+    assert (study.folder / file).read_text().splitlines()[int(line) - 1].startswith("beta\t")
+    assert (row["value"], row["now"]) == (row["default"], 0.125)
+    text = traced(capsys, "results/figures/composition.png").out
+    (said,) = [said for said in text.splitlines() if said.strip().startswith("behaviour.max_gap_s")]
+    assert "now says 0.125" in said and said.endswith(row["line"])
+
+
 def test_the_digits_in_the_margin_and_the_identifier_in_the_file_lead_to_the_same(at, capsys):
     inside = Image.open("results/figures/composition.png").text["odograph-record"]
     assert inside == at.record("figures/record.json")["record_id"]

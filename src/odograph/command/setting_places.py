@@ -3,9 +3,13 @@
 from __future__ import annotations
 
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from odograph.errors import OdographError
+
+if TYPE_CHECKING:
+    from odograph.settings.all import Settings
+    from odograph.settings.sessions import SessionRow
 
 
 def with_places(rows: list[dict[str, Any]], folder: Path) -> list[dict[str, Any]]:
@@ -22,7 +26,8 @@ def with_places(rows: list[dict[str, Any]], folder: Path) -> list[dict[str, Any]
     -------
     list of dict
         The same with `line` (FILE:LINE of the configuration, or of the sessions table where a session has a
-        value of its own; None where neither can be read), `default` and `now`.
+        value of its own; None where neither can be read), `default` and `now`: the first value that now holds
+        for one of the sessions and is another; else `value`, also where what holds now cannot be told.
     """
     from odograph.settings.all import Settings
     from odograph.settings.load import settings_table
@@ -34,7 +39,9 @@ def with_places(rows: list[dict[str, Any]], folder: Path) -> list[dict[str, Any]
         name, sessions = row["setting"], row["sessions"] or [None]
         places, values = [], []
         for session in sessions:
-            overrides, line, resolved = own.get(session, ({}, 0, study))
+            if session is not None and own is None:
+                continue
+            overrides, line, resolved = (own or {}).get(session, ((), 0, study))
             places.append(f"{table}:{line}" if name in overrides else lines.get(name))
             values.append(_value(resolved, name, row["value"]))
         now = next((value for value in values if value != row["value"]), row["value"])
@@ -43,9 +50,13 @@ def with_places(rows: list[dict[str, Any]], folder: Path) -> list[dict[str, Any]
     return placed
 
 
-def _written(folder: Path) -> tuple[dict[str, str], str, dict[str, Any] | None, dict[str, tuple]]:
-    """The configuration's places, the table's name, the study's values, what each session sets itself."""
-    from odograph.settings.load import key_lines, load_settings, read_sessions, resolve_session
+def _written(folder: Path) -> tuple[dict[str, str], str, dict | None, dict[str, tuple] | None]:
+    """The configuration's places, the table's name, the study's values, what each session sets itself.
+
+    Of a session: the names it sets, its line, all values that hold for it (None where a cell is not allowed).
+    None for all sessions when the table cannot be read.
+    """
+    from odograph.settings.load import key_lines, load_settings, read_sessions
 
     config = folder / "config" / "config.yaml"
     try:
@@ -55,18 +66,20 @@ def _written(folder: Path) -> tuple[dict[str, str], str, dict[str, Any] | None, 
         return {}, "", None, {}
     table, study = str(settings.study.sessions_table), settings.model_dump(mode="json")
     try:
-        sessions = read_sessions(folder / table)
-        own = {
-            row.session: (
-                {name for name, text in row.overrides.items() if text.strip()},
-                row.line,
-                resolve_session(settings, row.overrides).model_dump(mode="json"),
-            )
-            for row in sessions
-        }
+        own = {row.session: _of_session(settings, row) for row in read_sessions(folder / table)}
     except OdographError:
-        own = {}
+        own = None
     return lines, table, study, own
+
+
+def _of_session(settings: Settings, row: SessionRow) -> tuple[set[str], int, dict[str, Any] | None]:
+    from odograph.settings.load import resolve_session
+
+    names = {name for name, text in row.overrides.items() if text.strip()}
+    try:
+        return names, row.line, resolve_session(settings, row.overrides).model_dump(mode="json")
+    except OdographError:
+        return names, row.line, None
 
 
 def _pairs(lines: dict[tuple, int]) -> list[tuple[tuple[str, str], int]]:

@@ -52,7 +52,11 @@ def add_parser(subparsers: argparse._SubParsersAction[argparse.ArgumentParser]) 
         default="text",
         help="text, JSON or W3C PROV-JSON (text)",
     )
-    parser.add_argument("--all", action="store_true", help="show every setting, not only those of your own")
+    parser.add_argument(
+        "--all",
+        action="store_true",
+        help="show every setting, not only those that are not the default or changed since",
+    )
     parser.add_argument("--json", action="store_true", help="the same as --format json")
     parser.set_defaults(run=run)
 
@@ -150,7 +154,8 @@ def _sources(found: Any) -> Iterator[str]:
 
 def _settings(settings: list[dict[str, Any]], everything: bool) -> Iterator[str]:
     own = [row for row in settings if row["value"] != row["default"]]
-    shown = settings if everything else own
+    telling = [row for row in settings if row["value"] != row["default"] or row["now"] != row["value"]]
+    shown = settings if everything else telling
     yield f"with {len(settings)} settings read, {len(own)} of them not the default" + (
         "" if everything else " (--all shows every one)"
     )
