@@ -207,8 +207,8 @@ def test_blocks_shorter_than_the_history_asks_are_refused(table):
         prepare_session(short, EncodingSettings(history_s=0.4))
 
 
-def test_a_unit_does_not_depend_on_those_analysed_before(long_design, simulate):
-    alone = analyse_unit(prepare_session(table_of(long_design), WITH), simulate("speed", 6), None, WITH)
+def test_a_unit_does_not_depend_on_those_analysed_before(table, long_design, simulate):
+    alone = analyse_unit(prepare_session(table, WITH), simulate("speed", 6), None, WITH)
     analyse_unit(long_design, simulate("position", 7), None, WITH)
     after = analyse_unit(long_design, simulate("speed", 6), None, WITH)
     assert repr(alone.row) == repr(after.row) and repr(alone.scores) == repr(after.scores)
@@ -216,11 +216,11 @@ def test_a_unit_does_not_depend_on_those_analysed_before(long_design, simulate):
         np.testing.assert_array_equal(curve, after.curves[name])
 
 
-def test_without_a_history_nothing_of_it_is_there(design, simulate, settings):
+def test_without_a_history_nothing_of_it_is_there(table, design, simulate, settings):
     times = simulate("head_direction", 3)
     other = EncodingSettings(history_functions=6)
     found = analyse_unit(design, times, None, settings)
-    same = analyse_unit(prepare_session(table_of(design), other), times, None, other)
+    same = analyse_unit(prepare_session(table, other), times, None, other)
     assert repr(found.row) == repr(same.row)
     assert [term.name for term in design.nuisance] == ["drift"]
     assert not [name for name in found.curves if name.startswith("history")]

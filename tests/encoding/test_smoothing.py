@@ -102,6 +102,8 @@ def test_factorise_inverts_and_survives_a_direction_without_data():
     X[:, 5] = 0
     _, inverse = factorise(X.T @ X)
     assert np.all(np.isfinite(inverse))
+    stiff = np.diag([100.0, 50.0, 4e8 * 800])  # a stiff coordinate must not weigh on the others
+    np.testing.assert_allclose(1 / np.diag(factorise(stiff)[1]), np.diag(stiff), rtol=1e-9)
     with pytest.raises(FloatingPointError, match="not positive definite"):
         factorise(-np.eye(3))
 

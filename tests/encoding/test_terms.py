@@ -111,9 +111,9 @@ def test_centred_functions_have_no_mean_over_occupancy(kind):
     np.testing.assert_allclose(term.functions[term.cell].mean(axis=0), term.mean_functions, atol=1e-12)
 
 
-@pytest.mark.parametrize("kind", ["line", "plane"])
+@pytest.mark.parametrize("kind", ["line", "plane", "circle"])
 def test_a_constant_covariate_is_one_clear_error(kind):
-    values = [np.full(50, 3.25)] if kind == "line" else [np.arange(50.0), np.full(50, 3.25)]
+    values = [np.arange(50.0), np.full(50, 3.25)] if kind == "plane" else [np.full(50, 3.25)]
     with pytest.raises(InputError) as error:
         term_of(kind, values)
     message = str(error.value)

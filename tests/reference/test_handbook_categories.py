@@ -82,7 +82,7 @@ def test_damage_to_ships(solve):
     assert found.deviance == pytest.approx(38.69505, abs=1e-5)  # printed: 38.70 on 25 degrees of freedom
     assert found.fit.edf == pytest.approx(34 - 25, abs=1e-4)
     dispersion = np.sum((counts - found.expected) ** 2 / found.expected) / 25
-    assert dispersion == pytest.approx(1.691010, abs=1e-6)  # printed: 1.69
+    assert dispersion == pytest.approx(1.691010, abs=5e-6)  # printed: 1.69
     theirs = sm.GLM(counts, dummies(*factors), family=sm.families.Poisson(), offset=np.log(months)).fit(
         tol=1e-13
     )

@@ -94,13 +94,17 @@ def _span(values: np.ndarray, term: TermSettings) -> tuple[float, float]:
     low = float(low) if term.low is None else term.low
     high = float(high) if term.high is None else term.high
     if not high > low:
-        raise InputError(
-            f"the covariate of the term '{term.name}' is constant ({low:g})",
-            place=", ".join(term.columns),
-            expected="a covariate that varies",
-            remedy="leave the term out, or check the column",
-        )
+        raise _constant(term, low)
     return low, high
+
+
+def _constant(term: TermSettings, value: float) -> InputError:
+    return InputError(
+        f"the covariate of the term '{term.name}' is constant ({value:g})",
+        place=", ".join(term.columns),
+        expected="a covariate that varies",
+        remedy="leave the term out, or check the column",
+    )
 
 
 def _axis(values: np.ndarray, low: float, high: float, cells: int) -> tuple[np.ndarray, np.ndarray]:
@@ -164,6 +168,8 @@ def _line(term, values):
 def _circle(term, values):
     period = 2 * np.pi
     cell, centres = _axis(np.mod(values[0], period), 0.0, period, term.cells)
+    if not np.ptp(cell):
+        raise _constant(term, float(values[0][0]))
     coordinates = curve_coordinates(term.basis_size, cyclic=True)
     return cyclic_basis(centres, term.basis_size), coordinates, cell, (centres,), ((0.0, period),)
 
