@@ -13,7 +13,7 @@ from odograph.errors import InputError, RecordError
 from odograph.provenance import records
 from odograph.provenance.files import write_json, write_text
 from odograph.provenance.identifier import read_record_id
-from odograph.provenance.records import RecordDraft, identify, producer_of, read_record
+from odograph.provenance.records import RecordDraft, identify, producer_of, read_record, told_path
 from odograph.provenance.trace import find_start, trace
 
 IDENTIFIER = "record:" + "0123456789abcdef" * 4
@@ -209,3 +209,15 @@ def test_no_record_holds_a_path_of_this_machine(here):
     text = Path("results/figures/record.json").read_text()
     assert os.sep + "tmp" not in text
     assert str(here) not in text
+
+
+def test_a_recording_elsewhere_is_told_by_its_name_only(tmp_path, monkeypatch):
+    """Absolute paths hold names of people and machines, and have no part in a result."""
+    monkeypatch.chdir(tmp_path)
+    assert told_path("recordings/one.nwb") == "recordings/one.nwb"
+    assert told_path(tmp_path / "recordings" / "one.nwb") == "recordings/one.nwb"
+    assert told_path("/home/somebody/data/one.nwb") == "one.nwb"
+    draft = RecordDraft("intake", keys={}, settings={}, code={})
+    draft.add_unit_input(1, "sha256:1", file="/home/somebody/data/one.nwb")
+    draft.add_signal_input("tracking", "sha256:2", file="/home/somebody/data/one.nwb", place="p")
+    assert {entry["file"] for entry in draft.inputs} == {"one.nwb"}

@@ -1,7 +1,9 @@
 """A finished study is verified: any changed byte is found and named, and so is a change that was hidden."""
 
 import json
+import os
 import shutil
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -181,3 +183,16 @@ def test_the_store_is_surveyed_checked_and_dropped_from(study, monkeypatch, caps
     assert "1 of them" in capsys.readouterr().out
     assert main(["store", "--drop"]) == 0
     assert not spare.exists() and fit.exists()
+
+
+def test_results_hold_no_absolute_path_and_no_name_of_a_user(finished):
+    """Neither the folder that the study was run in, nor anybody's home, nor who ran it."""
+    wanted = {str(finished.folder).encode(), str(Path.home()).encode() + b"/", b"/home/", b"/Users/"}
+    user = os.environ.get("USER") or os.environ.get("LOGNAME") or ""
+    if len(user) > 4:
+        wanted.add(f'"{user}"'.encode())
+    apart = [finished.results / "plan", finished.results / "store"]
+    for path in sorted(finished.results.rglob("*")):
+        if path.is_file() and not any(path.is_relative_to(folder) for folder in apart):
+            content = path.read_bytes()
+            assert not [text for text in wanted if text in content], path

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import argparse
+import contextlib
 import json
 import sys
 from collections.abc import Iterator
@@ -84,7 +85,7 @@ def run(args: argparse.Namespace) -> int:
     elif form == "json":
         print(json.dumps(found.document() | {"settings": settings}, indent=1, sort_keys=True))
     else:
-        print("\n".join(text_lines(found, settings, everything=args.all)))
+        print("\n".join(text_lines(found, settings, args.results, everything=args.all)))
     return EXIT_DATA if found.problems else EXIT_OK
 
 
@@ -94,7 +95,9 @@ def _unit(text: str) -> int:
     return int(text)
 
 
-def text_lines(found: Any, settings: list[dict[str, Any]], *, everything: bool = False) -> Iterator[str]:
+def text_lines(
+    found: Any, settings: list[dict[str, Any]], results: Path, *, everything: bool = False
+) -> Iterator[str]:
     """The trace in words."""
     start = found.start
     yield str(start.path or start.file) + (f", unit {found.row[1]} of {found.row[0]}" if found.row else "")
@@ -106,7 +109,7 @@ def text_lines(found: Any, settings: list[dict[str, Any]], *, everything: bool =
     yield from _chain(found)
     yield ""
     yield "from the recordings"
-    yield from _sources(found)
+    yield from _sources(found, results)
     yield ""
     yield from _settings(settings, everything)
     yield ""
@@ -136,9 +139,18 @@ def _chain(found: Any) -> Iterator[str]:
         yield f"  {rule:<19} {number}; code {', '.join(code)}"
 
 
-def _sources(found: Any) -> Iterator[str]:
+def _is_there(session: str, file: str, results: Path) -> bool:
+    """Whether a recording is where the workflow last found it; records tell only names of files elsewhere."""
+    from odograph.provenance.files import read_json
+
+    with contextlib.suppress(OdographError, KeyError):
+        file = read_json(results / "plan" / "sessions" / session / "source.json")["nwb"]
+    return (results.resolve().parent / file).is_file()
+
+
+def _sources(found: Any, results: Path) -> Iterator[str]:
     for session, facts in found.sources().items():
-        missing = "" if Path(facts["file"]).is_file() else "   (not there now)"
+        missing = "" if _is_there(session, facts["file"], results) else "   (not there now)"
         yield f"  session {session}: {facts['file']}{missing}"
         for name, signal in sorted(facts["signals"].items()):
             yield f"    {name:<18} {_short(signal['digest'])}  {signal['place'] or ''}".rstrip()

@@ -72,11 +72,12 @@ class RecordDraft:
 
     def add_signal_input(self, signal: str, digest: str, *, file: str, place: str | None) -> None:
         """Note a signal of the recording as an input."""
-        self._add_input({"kind": "signal", "signal": signal, "digest": digest, "file": file, "place": place})
+        told = told_path(file)
+        self._add_input({"kind": "signal", "signal": signal, "digest": digest, "file": told, "place": place})
 
     def add_unit_input(self, unit: int, digest: str, *, file: str) -> None:
         """Note a unit's spike train as an input."""
-        self._add_input({"kind": "unit", "unit": unit, "digest": digest, "file": file})
+        self._add_input({"kind": "unit", "unit": unit, "digest": digest, "file": told_path(file)})
 
     def add_table_input(self, name: str, rows: Any) -> None:
         """Note the rows of a user's table as an input."""
@@ -124,6 +125,18 @@ class RecordDraft:
             "run": self.run | {"ended": _now()},
         }
         write_json(path, document)
+
+
+def told_path(file: str | Path) -> str:
+    """A path as records tell it: of a file outside the study's folder its name only.
+
+    Where somebody keeps their recordings, and under which user's name, is nobody's business.
+    """
+    path = Path(file)
+    if not path.is_absolute():
+        return path.as_posix()
+    here = Path.cwd()
+    return path.relative_to(here).as_posix() if path.is_relative_to(here) else path.name
 
 
 def identify(record: Mapping[str, Any]) -> str:

@@ -23,7 +23,7 @@ from odograph.errors import InputError, RecordError
 from odograph.provenance.canonical import digest_value, readable_json
 from odograph.provenance.files import file_digest, read_json, write_if_changed
 from odograph.provenance.layout import PLAN, RESULTS, STORE
-from odograph.provenance.records import read_record
+from odograph.provenance.records import read_record, told_path
 
 ROOT_FORMAT = 1
 ROOT = RESULTS / "root.json"
@@ -170,14 +170,14 @@ def _recordings(folder: Path, sessions: list[str]) -> list[dict[str, Any]]:
         known = read_json(folder / KNOWN_FILES)
     except InputError:
         known = {}
-    found = []
+    found, sources = [], {}
     for session in sessions:
-        source = read_json(folder / PLAN / "sessions" / session / "source.json")
-        for name in (source["nwb"], *cache[session]["links"]):
+        sources[session] = read_json(folder / PLAN / "sessions" / session / "source.json")["nwb"]
+        for name in (sources[session], *cache[session]["links"]):
             path = folder / name
             if path.is_file():
                 stat = path.stat()
-                found.append((session, name, path, [stat.st_size, stat.st_mtime_ns, stat.st_ino]))
+                found.append((session, str(name), path, [stat.st_size, stat.st_mtime_ns, stat.st_ino]))
     fresh = [row for row in found if known.get(row[1], {}).get("stamp") != row[3]]
     digests = dict(zip((row[1] for row in fresh), digests_of(row[2] for row in fresh), strict=True))
     now = {
@@ -186,7 +186,13 @@ def _recordings(folder: Path, sessions: list[str]) -> list[dict[str, Any]]:
     }
     write_if_changed(folder / KNOWN_FILES, readable_json(now))
     return [
-        {"session": session, "file": name, "bytes": stamp[0], "digest": now[name]["digest"]}
+        {
+            "session": session,
+            "file": told_path(name),
+            "linked": name != sources[session],
+            "bytes": stamp[0],
+            "digest": now[name]["digest"],
+        }
         for session, name, _, stamp in found
     ]
 

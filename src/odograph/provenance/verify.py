@@ -308,8 +308,8 @@ def _check_recordings(folder: Path, found: Verification) -> None:
         rows = read_root(folder)["recordings"]
     except OdographError:
         return
-    digests = digests_of(folder / row["file"] for row in rows)
-    for row, digest in zip(rows, digests, strict=True):
+    paths = [folder / name for name in _present_places(folder, rows)]
+    for row, path, digest in zip(rows, paths, digests_of(paths), strict=True):
         found.recordings += 1
         if digest is None:
             found.add(
@@ -319,10 +319,22 @@ def _check_recordings(folder: Path, found: Verification) -> None:
                 "(nothing is computed again when its content is the same)",
             )
             continue
-        found.bytes_read += (folder / row["file"]).stat().st_size
+        found.bytes_read += path.stat().st_size
         if digest != row["digest"]:
             found.add(
                 row["file"],
                 f"the recording of session {row['session']} is not the file that was read",
                 "run snakemake: what was read from it and differs is computed again, and nothing else",
             )
+
+
+def _present_places(folder: Path, rows: list[dict[str, Any]]) -> list[str]:
+    """Where the recordings lie now: a session's own where the sessions table says."""
+    from odograph.settings.load import load_settings, read_sessions
+
+    try:
+        table = load_settings(folder / "config" / "config.yaml").study.sessions_table
+        now = {row.session: row.nwb for row in read_sessions(folder / table)}
+    except OdographError:
+        now = {}
+    return [row["file"] if row["linked"] else now.get(row["session"], row["file"]) for row in rows]
