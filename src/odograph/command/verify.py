@@ -76,6 +76,9 @@ def _text(found) -> str:
     lines = [f"{found.root or 'no run root'}"]
     checked = f"{found.records} records, {found.products} products, {found.recordings} files of recordings"
     lines.append(f"checked: {checked}, {found.bytes_read / 1e6:,.1f} MB")
+    if found.code and found.code["commit"]:
+        changed = ", with changes that were not committed" if found.code["modified"] else ""
+        lines.append(f"made at commit {found.code['commit'][:12]}{changed}")
     if not found.breaches:
         return "\n".join([*lines, "everything is what the records say"])
     number = len(found.breaches)

@@ -69,9 +69,12 @@ class Verification:
         How many were checked.
     bytes_read : int
         Bytes digested.
+    code : dict or None
+        The commit that the run was made at, and whether files that git knows were changed (`modified`).
     """
 
     root: str | None = None
+    code: dict[str, Any] | None = None
     breaches: list[Breach] = field(default_factory=list)
     records: int = 0
     products: int = 0
@@ -160,7 +163,7 @@ def _listed_records(folder: Path, found: Verification) -> dict[str, dict[str, An
     except OdographError as error:
         found.add(ROOT, error.found, error.remedy or "run snakemake again")
         return {}
-    found.root = document["root"]
+    found.root, found.code = document["root"], document["code"]
     for row, digest in zip(
         document["user_files"],
         digests_of(folder / row["file"] for row in document["user_files"]),
