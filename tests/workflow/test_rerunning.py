@@ -170,3 +170,11 @@ def test_a_changed_fit_in_the_store_is_noticed_and_made_again(study):
     assert [row["unit"] for row in made if row["made"] == "fitted"] == [unit]
     assert pq.read_table(study.results / "sessions/beta/encoding/shard-0/units.parquet").to_pylist() == table
     assert study.tables() == before
+
+
+def test_another_name_of_the_animal_draws_its_cards_and_counts_again(study):
+    """No fit depends on it, nor the cards of other sessions."""
+    study.sessions["alpha"]["animal"] = "renamed"
+    outcome = study.run()
+    assert outcome.jobs == of_shards("cards", "alpha") | ENDS
+    assert study.refitted() == {}

@@ -42,6 +42,11 @@ def settings(step):
     return lambda wildcards: PLAN.settings_of(step, wildcards.session)
 
 
+def origin(wildcards):
+    """The animal of a session and the regions of a shard's units, as text."""
+    return PLAN.origin_of(wildcards.session, int(wildcards.shard))
+
+
 def of_shards(pattern):
     """A file of every shard of every session that can be read."""
     return expand(pattern, session=PLAN.readable, shard=SHARDS)

@@ -16,13 +16,14 @@ rule cards:
         settings=settings("cards"),
         code=PLAN.code["cards"],
         shards=PLAN.shards,
+        origin=origin,
     message:
         "{wildcards.session}: cards of shard {wildcards.shard}"
     shell:
         """
         python -m odograph.steps.cards --session {wildcards.session} \
             --shard {wildcards.shard} --shards {params.shards} \
-            --settings {params.settings:q} --code {params.code} \
+            --settings {params.settings:q} --code {params.code} --origin {params.origin:q} \
             --inputs units={input.units} scores={input.scores} curves={input.curves} \
             behaviour={input.behaviour} audit={input.audit} \
             --outputs index={output.index} record={output.record} \

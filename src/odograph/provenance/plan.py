@@ -50,7 +50,7 @@ STAGES_READ = {
     "root": (),
     "report": ("study", "intake", "sync", "behaviour", "encoding", "population", "figures"),
 }
-_CACHE_FORMAT = 1
+_CACHE_FORMAT = 2
 _READER = "odograph.steps.survey_recordings"
 
 
@@ -72,6 +72,8 @@ class Plan:
         Settings of every step as canonical JSON, by ``session/step`` or ``step``.
     code : mapping of str to str
         Code fingerprint of every step.
+    origins : mapping of str to dict
+        By session: ``animal`` and ``regions`` of its units.
     """
 
     sessions: tuple[str, ...]
@@ -81,11 +83,22 @@ class Plan:
     settings: Mapping[str, str]
     code: Mapping[str, str]
     figure_formats: tuple[str, ...] = field(default=("png",))
+    origins: Mapping[str, Mapping[str, Any]] = field(default_factory=dict)
 
     @property
     def readable(self) -> tuple[str, ...]:
         """The sessions whose recording can be used."""
         return tuple(session for session in self.sessions if session not in self.unreadable)
+
+    def origin_of(self, session: str, shard: int) -> str:
+        """The animal of a session and the regions of a shard's units, as canonical JSON."""
+        origin = self.origins[session]
+        regions = {
+            unit: region
+            for unit, region in origin["regions"].items()
+            if shard_of(session, int(unit), self.shards) == shard
+        }
+        return canonical_json({"animal": origin["animal"], "regions": regions})
 
     def settings_of(self, step: str, session: str | None = None) -> str:
         """The settings a step reads, as canonical JSON."""
@@ -144,6 +157,13 @@ def make_plan(
         settings=_settings_texts(settings, own),
         code=code,
         figure_formats=tuple(settings.figures.formats),
+        origins={
+            row.session: {
+                "animal": row.animal or sessions.get(row.session, {}).get("animal"),
+                "regions": sessions.get(row.session, {}).get("regions", {}),
+            }
+            for row in rows
+        },
     )
 
 
@@ -210,6 +230,7 @@ def _refresh(
         if session in answers:
             answer = answers[session]
             entry = {"error": answer.get("error"), "links": answer.get("links", []), "shards": None}
+            entry |= {"animal": answer.get("animal"), "regions": answer.get("regions", {})}
             entry["key"] = _key(request, reader, entry) if answer.get("settled", True) else None
         else:
             answer, entry = None, dict(known[session])

@@ -67,6 +67,7 @@ class Step:
         self.shard: int | None = arguments.shard
         self.shards: int | None = arguments.shards
         self.settings: dict[str, Any] = json.loads(arguments.settings)
+        self._origin: dict[str, Any] = json.loads(arguments.origin)
         self._inputs = _paths(arguments.inputs)
         self._outputs = _paths(arguments.outputs)
         self.plan = _checked_plan(arguments.plan, arguments.planned)
@@ -117,6 +118,12 @@ class Step:
     def input(self, name: str) -> Path:
         """The path of an input that the rule names; it goes into the record."""
         return self.use(self._inputs[name])
+
+    @property
+    def origin(self) -> dict[str, Any]:
+        """`animal` of the session and `regions` of its units; they go into the record."""
+        self.record.add_table_input("origin", self._origin)
+        return self._origin
 
     def use(self, path: str | Path) -> Path:
         """Put a product of another job into the record as an input."""
@@ -347,6 +354,7 @@ def _parser(rule: str) -> argparse.ArgumentParser:
     parser.add_argument("--code", required=True, help="fingerprint that the code must have")
     parser.add_argument("--inputs", nargs="*", default=[], metavar="NAME=PATH", help="the files read")
     parser.add_argument("--outputs", nargs="+", default=[], metavar="NAME=PATH", help="the files written")
+    parser.add_argument("--origin", default="{}", help="the animal, and the regions of the units, as JSON")
     parser.add_argument("--log", help="the log file")
     return parser
 

@@ -29,10 +29,11 @@ def _draw(step, units, scores, curves, behaviour, corners) -> list[Path]:
     from odograph.figures.style import figure_bytes
     from odograph.settings.figures import FiguresSettings
 
-    settings = step.stage_settings(FiguresSettings)
+    settings, origin = step.stage_settings(FiguresSettings), step.origin
     drawn = []
     for row in units.to_dict("records"):
         unit = int(row["unit"])
+        row |= {"animal": origin["animal"], "region": origin["regions"].get(str(unit))}
         own = {
             name.partition("/")[2]: values
             for name, values in curves.items()

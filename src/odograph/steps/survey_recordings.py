@@ -35,7 +35,8 @@ def survey_recording(session: str, nwb: str, settings: IntakeSettings) -> dict[s
     -------
     dict
         ``inventory`` (digest), ``signals`` and ``units`` (digests by name), ``links`` (paths of other files
-        that it links to); or ``error`` (a finding) and ``settled``, whether reading again would end the same.
+        that it links to), ``animal`` and ``regions`` (by unit) as the file names them; or ``error`` (a
+        finding) and ``settled``, whether reading again would end the same.
     """
     try:
         recording = read_recording(nwb, settings)
@@ -49,6 +50,8 @@ def survey_recording(session: str, nwb: str, settings: IntakeSettings) -> dict[s
         "signals": signal_digests(recording),
         "units": {str(unit): digest for unit, digest in unit_digests(recording).items()},
         "links": linked_files(nwb),
+        "animal": document["subject"]["subject_id"],
+        "regions": {str(unit["unit"]): unit["region"] for unit in document["units"] if unit["region"]},
     }
 
 
