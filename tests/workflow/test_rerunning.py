@@ -177,4 +177,3 @@ def test_another_name_of_the_animal_draws_its_cards_and_counts_again(study):
     study.sessions["alpha"]["animal"] = "renamed"
     outcome = study.run()
     assert outcome.jobs == of_shards("cards", "alpha") | ENDS
-    assert study.refitted() == {}
