@@ -58,8 +58,8 @@ With the program installed (`documentation/README.md` tells how; Python 3.11 or 
     odograph replay PACKAGE --data FOLDER-OF-RECORDINGS
 
 builds the environment that `constraints.txt` names, runs the analysis anew and compares every table and
-figure. Without it, in this folder: install `src` with the libraries of `constraints.txt`, put the recordings where
-`config/sessions.tsv` says, and run `snakemake --profile workflow/profiles/local`.
+figure. Without it, in this folder: install `src` with the libraries of `constraints.txt`, put the recordings
+where `config/sessions.tsv` says, and run `snakemake --profile workflow/profiles/local`.
 
 For research, not for diagnosis or treatment.
 """
