@@ -121,7 +121,7 @@ def _text(found, software, roots, relative) -> list[str]:
         lines.append(
             "libraries differ: the differences may come from them"
             if software
-            else "the libraries are the same: what differs comes from the processor, the recordings or the code"
+            else "the libraries are the same: what differs comes from the processor, recordings or code"
         )
     else:
         lines.append("every table and figure agrees")

@@ -90,9 +90,9 @@ class _Graph:
     def __init__(self) -> None:
         self._entities: dict[str, dict[str, Any]] = {}
 
-    def add(self, identifier: str, kind: str | list[str], **facts: Any) -> dict[str, Any]:
+    def add(self, name: str, kind: str | list[str], /, **facts: Any) -> dict[str, Any]:
         known = {key: value for key, value in facts.items() if value not in (None, [], "")}
-        return self._entities.setdefault(identifier, {"@id": identifier, "@type": kind} | known)
+        return self._entities.setdefault(name, {"@id": name, "@type": kind} | known)
 
     def get(self, identifier: str) -> dict[str, Any]:
         return self._entities[identifier]
