@@ -128,7 +128,9 @@ def make_archive(
         facts |= {path: _facts(Path(scratch) / "text", text) for path, text in texts.items()}
         engine = metadata.version("snakemake")
         texts[METADATA] = crate_text(name, facts, records, parameters, recordings, root, engine)
-        bag = Path(scratch) / target.name.removesuffix(".zip")
+        # In a zip file the folder is named after the root: its bytes do not depend on the file's name.
+        name_of_bag = f"odograph-{root['root'][5:17]}" if target.suffix == ".zip" else target.name
+        bag = Path(scratch) / name_of_bag
         info = {
             "Bag-Software-Agent": f"odograph {metadata.version('odograph')}",
             "Bagging-Date": max(record["run"]["ended"] for record in records)[:10],
