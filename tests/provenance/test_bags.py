@@ -26,7 +26,7 @@ def test_a_bag_is_valid_by_bagit_and_by_coreutils(bag):
     """RFC 8493: version 1.0, SHA-256 and SHA-512, checked by the bagit library and by sha256sum -c."""
     assert (bag / "bagit.txt").read_text() == "BagIt-Version: 1.0\nTag-File-Character-Encoding: UTF-8\n"
     assert bagit.Bag(str(bag)).validate()
-    assert "Payload-Oxum: 256018.3\n" in (bag / "bag-info.txt").read_text()
+    assert "Payload-Oxum: 256016.3\n" in (bag / "bag-info.txt").read_text()
     assert bag_problems(bag) == []
     for manifest in ("manifest-sha256.txt", "tagmanifest-sha256.txt"):
         assert subprocess.run(["sha256sum", "--quiet", "-c", manifest], cwd=bag, check=False).returncode == 0
