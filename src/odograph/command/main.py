@@ -13,11 +13,11 @@ from pathlib import Path
 from typing import NoReturn
 
 from odograph import __version__
-from odograph.command import archive, look, replay, store, summary, trace, verify
+from odograph.command import archive, compare, look, replay, store, summary, trace, verify
 from odograph.errors import OdographError, SettingsError
 
 EXIT_USAGE, EXIT_DATA, EXIT_INTERNAL, EXIT_SETTINGS, EXIT_STOPPED = 64, 65, 70, 78, 130
-COMMANDS = (look, summary, trace, verify, archive, replay, store)
+COMMANDS = (look, summary, trace, verify, compare, archive, replay, store)
 
 _EXAMPLES = """\
 examples:

@@ -1,0 +1,1 @@
+"""What changed between two runs of a study, and which conclusions followed."""
