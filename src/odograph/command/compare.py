@@ -25,7 +25,7 @@ examples:
 Units are matched across sortings by their spikes, which are read from the recordings. Where those of a run
 cannot be read any more, units are matched by number and digest, and the page says so.
 
-exit codes: 0 the same conclusions, 1 a conclusion changed, 66 no results
+exit codes: 0 the same units with the same conclusions, 1 not so, 66 no results
 """
 
 
@@ -61,6 +61,12 @@ class Comparison:
     changes: list[Any]
     composition: list[dict[str, Any]]
 
+    @property
+    def regrouped(self) -> list[Any]:
+        """Units that are not one to one, about which one run says what the other cannot."""
+        one_to_one = ("same", "changed")
+        return [one for some in self.relations.values() for one in some if one.kind not in one_to_one]
+
 
 def run(args: argparse.Namespace) -> int:
     """Compare two runs; returns the exit code."""
@@ -80,7 +86,7 @@ def run(args: argparse.Namespace) -> int:
         print(json.dumps({"schema_version": 1, **_plain(asdict(found))}, indent=1, sort_keys=True))
     else:
         print("\n".join(_text(found)))
-    return EXIT_DIFFERENT if found.changes else EXIT_SAME
+    return EXIT_DIFFERENT if found.changes or found.regrouped else EXIT_SAME
 
 
 def compare(old: Path, new: Path, old_data: Path | None = None, new_data: Path | None = None) -> Comparison:
@@ -138,7 +144,12 @@ def _counts(relations: Mapping[str, list[Any]]) -> dict[str, int]:
 
 def _text(found: Comparison) -> Iterator[str]:
     units = len({(one.session, one.after) for one in found.changes})
-    yield f"{units} units have another conclusion" if found.changes else "every conclusion is the same"
+    if found.changes:
+        yield f"{units} {'unit has' if units == 1 else 'units have'} another conclusion"
+    elif found.regrouped:
+        yield "no unit that both runs have has another conclusion"
+    else:
+        yield "every conclusion is the same"
     for one in found.changes[:_MOST_LINES]:
         number = f"unit {one.before}" + (f" (now {one.after})" if one.after != one.before else "")
         yield f"  {one.session} {number}: {one.what} {one.was or 'none'} -> {one.now or 'none'}"
