@@ -8,6 +8,7 @@ import pytest
 from matplotlib.text import Text
 
 from odograph.figures.captions import CAPTIONS, POPULATION_FIGURES
+from odograph.figures.compare import draw_comparison
 from odograph.figures.gains import draw_speed_gains
 from odograph.figures.population import draw_population_figure
 from odograph.figures.style import figure_bytes
@@ -193,3 +194,18 @@ def test_standard_errors_are_drawn(population, settings):
     )
     np.testing.assert_allclose(below[:, 1], chosen["position_speed_gain"] - chosen["position_speed_gain_se"])
     np.testing.assert_allclose(above[:, 1], chosen["position_speed_gain"] + chosen["position_speed_gain_se"])
+
+
+def test_two_runs_are_drawn_side_by_side(settings, misplaced):
+    row = {"kind": "includes", "category": "position, whatever else"}
+    before = {f"before_{key}": value for key, value in {"share": 0.4, "low": 0.3, "high": 0.5}.items()}
+    after = {f"after_{key}": value for key, value in {"share": 0.6, "low": None, "high": None}.items()}
+    missing = {f"{side}_{key}": None for side in ("before", "after") for key in ("share", "low", "high")}
+    rows = [row | before | after, row | missing | {"category": "speed, whatever else"}]
+    figure = draw_comparison(rows, {"same": 3, "merged": 1, "split": 0}, 1, settings)
+    shares, kinds = figure.axes
+    marks = {line.get_marker(): line.get_xdata()[0] for line in shares.lines if line.get_marker() in "oD"}
+    assert marks == {"o": 0.4, "D": 0.6}
+    assert [bar.get_width() for bar in kinds.patches] == [1, 3]
+    assert any("1 unit with another conclusion" in text.get_text() for text in figure.texts)
+    assert not misplaced(figure)

@@ -6,7 +6,8 @@ valid time. Two questions are asked of it:
 - Time rescaling: with time measured in expected spikes, the intervals between spikes are exponential with
   mean 1 if the model is right (Brown, Barbieri, Ventura, Kass & Frank 2002, Neural Comput. 14:325). The
   expected rate is constant within a bin, so an interval is exact whatever the width of bins. Masked time
-  stands still.
+  stands still. A fitted rate follows the spikes more closely than the true one, also on held-out time that
+  is interleaved with what was fitted, so p errs to the side of a fit that holds.
 - Residuals: counts less their expectation have no memory under the model. The product of two Poisson
   residuals has mean 0 and variance mu_i mu_j, which gives the band around an autocorrelation of 0.
 """
@@ -16,6 +17,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+from scipy import fft
 from scipy.special import kolmogorov, ndtri
 
 from odograph.encoding.design import SessionDesign
@@ -25,6 +27,7 @@ from odograph.encoding.spikes import UnitSpikes
 
 LONGEST_LAG_S = 1.0
 BAND = float(ndtri(0.975))
+STRETCH = 8192  # bins transformed at once: they stay in the processor's cache
 
 
 @dataclass(frozen=True)
@@ -46,8 +49,8 @@ class Residuals:
 
     @property
     def peak(self) -> tuple[float, float]:
-        """The correlation that is largest in units of its band, and its lag in s."""
-        k = int(np.argmax(np.abs(self.correlation) / self.band))
+        """The correlation of the largest absolute value, and its lag in s."""
+        k = int(np.argmax(np.abs(self.correlation)))
         return float(self.correlation[k]), float(self.lag_s[k])
 
 
@@ -84,7 +87,8 @@ def rescaled_intervals(mu: np.ndarray, bins: np.ndarray, within: np.ndarray) -> 
 def rescaling_test(intervals: np.ndarray) -> Rescaling:
     """Kolmogorov-Smirnov test of intervals, (n,), against an exponential of mean 1.
 
-    p from the limiting distribution with the small-sample factor of Stephens 1970, J. R. Stat. Soc. B 32:115.
+    p from the limiting distribution, corrected for n (Vrbik 2018, Pioneer J. Theor. Appl. Stat. 15:15); within
+    0.001 of the exact one for n of 20 and more.
     """
     n = len(intervals)
     if n == 0:
@@ -92,14 +96,38 @@ def rescaling_test(intervals: np.ndarray) -> Rescaling:
     uniform = np.sort(-np.expm1(-intervals))
     steps = np.arange(n + 1) / n
     statistic = float(max(np.max(steps[1:] - uniform), np.max(uniform - steps[:-1])))
-    root = np.sqrt(n)
-    return Rescaling(statistic, float(kolmogorov(statistic * (root + 0.12 + 0.11 / root))), n)
+    x = statistic * np.sqrt(n)
+    return Rescaling(statistic, float(kolmogorov(x + 1 / (6 * np.sqrt(n)) + (x - 1) / (4 * n))), n)
+
+
+def lagged_products(signals: np.ndarray, pairs: list[tuple[int, int]], n_lags: int) -> np.ndarray:
+    """Sums over i of a[i] b[i + lag] for lags of 1 to `n_lags`, (n_pairs, n_lags), by FFT.
+
+    Parameters
+    ----------
+    signals : ndarray, (n_signals, n)
+    pairs : list of (int, int)
+        Which signals are a and b.
+    n_lags : int
+    """
+    size = fft.next_fast_len(min(STRETCH, signals.shape[1]) + 2 * n_lags, real=True)
+    own = size - n_lags  # a stretch of its own bins, followed by those that it reaches
+    spectra = np.zeros((len(pairs), size // 2 + 1), dtype=complex)
+    for first in range(0, signals.shape[1], own):
+        earlier = np.conj(fft.rfft(signals[:, first : first + own], size))
+        later = fft.rfft(signals[:, first : first + size], size)
+        for spectrum, (a, b) in zip(spectra, pairs, strict=True):
+            spectrum += earlier[a] * later[b]
+    return fft.irfft(spectra, size)[:, 1 : n_lags + 1]
 
 
 def residual_autocorrelation(
     counts: np.ndarray, mu: np.ndarray, valid: np.ndarray, bin_s: float
 ) -> Residuals:
     """Autocorrelation of residuals up to a lag of 1 s; pairs with a masked bin take no part.
+
+    The sum of r_i r_j over pairs of bins at a lag, and the standard deviation of it under the model, are
+    divided by (sum mu_i sum mu_j)^1/2 over the same pairs. A lag without pairs has a correlation and a band of 0.
 
     Parameters
     ----------
@@ -108,18 +136,16 @@ def residual_autocorrelation(
     valid : ndarray of bool, (n_all_bins,)
     bin_s : float
     """
-    residual, expected = np.zeros(len(valid)), np.zeros(len(valid))
-    residual[valid], expected[valid] = counts - mu, mu
-    lags = np.arange(1, min(max(1, round(LONGEST_LAG_S / bin_s)), len(valid) - 1) + 1)
-    correlation, band = np.empty(len(lags)), np.empty(len(lags))
-    weight = valid.astype(float)
-    for i, lag in enumerate(lags):
-        earlier, later = slice(None, -lag), slice(lag, None)
-        spread = np.sqrt((expected[earlier] @ weight[later]) * (weight[earlier] @ expected[later]))
-        spread = max(spread, 1e-300)
-        correlation[i] = residual[earlier] @ residual[later] / spread
-        band[i] = BAND * np.sqrt(expected[earlier] @ expected[later]) / spread
-    return Residuals(lags * bin_s, correlation, np.maximum(band, 1e-300))
+    signals = np.zeros((3, len(valid)))
+    signals[:, valid] = counts - mu, mu, np.ones_like(mu)
+    n_lags = min(max(1, round(LONGEST_LAG_S / bin_s)), len(valid) - 1)
+    pairs = [(0, 0), (1, 1), (1, 2), (2, 1)]
+    products, variance, before, after = lagged_products(signals, pairs, n_lags)
+    # By FFT a sum of nothing is 0 up to rounding, of either sign.
+    held = np.minimum(before, after) > 1e-9 * mu.sum()
+    scale = np.where(held, 1 / np.sqrt(np.where(held, before * after, 1.0)), 0.0)
+    lag_s = bin_s * np.arange(1, n_lags + 1)
+    return Residuals(lag_s, products * scale, BAND * np.sqrt(np.maximum(variance, 0.0)) * scale)
 
 
 def judge(

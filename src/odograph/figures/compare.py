@@ -41,9 +41,8 @@ def draw_comparison(
     with figure_style(settings):
         figure = new_figure(WIDTH_IN, 1.45 + height, settings)
         number = sum(relations.values())
-        headline(
-            figure, "two runs compared", f"{number} groups of units, {changed} units with another conclusion"
-        )
+        units = "1 unit" if changed == 1 else f"{changed} units"
+        headline(figure, "two runs compared", f"{number} groups of units, {units} with another conclusion")
         shares, kinds = axes_at(figure, 2.2, 0.75, 2.5, height), axes_at(figure, 5.75, 0.75, 1.25, height)
         _draw_shares(shares, rows)
         _draw_relations(kinds, relations)
