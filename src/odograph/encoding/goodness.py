@@ -6,10 +6,11 @@ valid time. Two questions are asked of it:
 - Time rescaling: with time measured in expected spikes, the intervals between spikes are exponential with
   mean 1 if the model is right (Brown, Barbieri, Ventura, Kass & Frank 2002, Neural Comput. 14:325). The
   expected rate is constant within a bin, so an interval is exact whatever the width of bins. Masked time
-  stands still. The rate is fitted, not known, and its mean follows the spikes of the whole
-  session: for simulated units that the model describes, p is rarely small (below 0.05 in under 5 % of them).
+  stands still. The rate is fitted, not known, and its mean follows the spikes of the whole session: for
+  simulated units that the model describes, p is rarely small (below 0.05 in under 5 % of them).
 - Residuals: counts less their expectation have no memory under the model. The product of two Poisson
-  residuals has mean 0 and variance mu_i mu_j, which gives the band around an autocorrelation of 0.
+  residuals has mean 0 and variance mu_i mu_j, which gives the band around an autocorrelation of 0 (serial
+  correlation of counts: Cameron & Trivedi 1998, Regression Analysis of Count Data, chapter 7).
 """
 
 from __future__ import annotations
@@ -138,7 +139,8 @@ def residual_autocorrelation(
     bin_s : float
     """
     signals = np.zeros((3, len(valid)))
-    signals[:, valid] = counts - mu, mu, np.ones_like(mu)
+    for signal, values in zip(signals, (counts - mu, mu, 1.0), strict=True):
+        signal[valid] = values
     n_lags = min(max(1, round(LONGEST_LAG_S / bin_s)), len(valid) - 1)
     pairs = [(0, 0), (1, 1), (1, 2), (2, 1)]
     products, variance, before, after = lagged_products(signals, pairs, n_lags)
