@@ -1,8 +1,10 @@
 """Held-out evaluation: what a model predicts of time that played no part in fitting it.
 
-Every fold is fitted anew, smoothing strengths included, on its training groups; the fit to all data only
-lends a place to start the iteration, which runs to the same convergence. Scores are gains over the constant
-rate of the same training part.
+Every fold is fitted anew, smoothing strengths included, on its training groups; the fit to all data lends a
+place to start the iteration. At given strengths the fit has one maximum, wherever it starts. The restricted
+likelihood of the strengths may have two, or be as good as flat where a term has no effect, and then the start
+decides at which of them a fold ends: held-out spikes reach a fold in this way only. Scores are gains over the
+constant rate of the same training part.
 """
 
 from __future__ import annotations
