@@ -204,7 +204,8 @@ def _goodness(cite: Callable[..., str]) -> str:
         "How well the selected model describes time that it was not fitted to was judged by the "
         f"Kolmogorov-Smirnov statistic of intervals rescaled by the held-out rate {cite('rescaling')} and by "
         "the autocorrelation of held-out residuals up to 1 s. A fit counts as compatible with held-out time "
-        "when the p of that statistic is above 0.05."
+        "when the p of that statistic is above 0.05, which is lenient, since the rate was fitted to the same "
+        "session."
     )
 
 
