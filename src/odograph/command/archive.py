@@ -55,7 +55,7 @@ def run(args: argparse.Namespace) -> int:
                 print(f"  {breach.file}: {breach.found}", file=sys.stderr)
             print("  what to do: run snakemake, then `odograph verify`", file=sys.stderr)
             return EXIT_BREACH
-        name, parameters, statement = _words(args.study, found.root, args.recordings_at)
+        name, parameters, statement = _words(args)
         made = make_archive(
             args.study, args.target, name=name, parameters=parameters, statement=statement,
             with_recordings=args.with_recordings, recordings_at=args.recordings_at,
@@ -63,6 +63,8 @@ def run(args: argparse.Namespace) -> int:
     except OdographError as error:
         print(error.message(), file=sys.stderr)
         return EXIT_NO_INPUT
+    for file, word in made.naming:
+        print(f"{file} holds {word}, a place on this machine; look whether to leave it in", file=sys.stderr)
     if args.json:
         document = {
             "schema_version": 1, "path": made.path.as_posix(), "root": made.root, "files": made.files,
@@ -77,14 +79,19 @@ def run(args: argparse.Namespace) -> int:
     return EXIT_OK
 
 
-def _words(study: Path, root: str | None, recordings_at: str | None) -> tuple[str, dict[str, Any], str]:
+def _words(args: argparse.Namespace) -> tuple[str, dict[str, Any], str]:
     """The study's name, its settings that are not the default, and METHODS.md."""
-    from odograph.provenance.records import software_versions
+    from odograph.provenance.files import read_json
+    from odograph.provenance.root import read_root
     from odograph.report.methods import methods
     from odograph.settings.load import load_settings, settings_table
 
-    settings = load_settings(study / "config" / "config.yaml")
+    settings = load_settings(args.study / "config" / "config.yaml")
     values = settings.model_dump(mode="json")
+    root = read_root(args.study)
+    software: dict[str, str] = {}
+    for row in root["records"]:
+        software |= read_json(args.study / row["file"])["software"]
 
     def value(path: str) -> Any:
         found: Any = values
@@ -92,18 +99,29 @@ def _words(study: Path, root: str | None, recordings_at: str | None) -> tuple[st
             found = found[part]
         return found
 
-    paragraphs, references = methods(value, software_versions())
+    paragraphs, references = methods(value, software)
     table = settings_table(settings)
     parameters = {row["path"]: row["value"] for row in table if row["value"] != row["default"]}
-    place = f"They can be fetched from {recordings_at}." if recordings_at else "Where they are: (fill in)."
+    commit, modified = root["code"]["commit"], root["code"]["modified"]
+    code = (
+        f" at commit {commit}{', with changes that were not committed' if modified else ''}" if commit else ""
+    )
+    if args.with_recordings:
+        place = "The recordings are enclosed."
+    elif args.recordings_at:
+        place = f"The recordings can be fetched from {args.recordings_at}."
+    else:
+        place = "The recordings are available from: (say where)."
     lines = [
         "# Methods", "", *(f"{paragraph}\n" for paragraph in paragraphs), "## References", "",
         *(f"{number}. {reference}" for number, reference in enumerate(references, 1)),
         "", "# Data and code availability", "",
-        "Results, records of provenance, settings, workflow and library are in this archive; its run root "
-        f"is {root}. The recordings are listed in recordings.tsv with their SHA-256 digests. {place} Every "
-        "figure carries the identifier of its record, from which `odograph trace` follows it back to the "
-        "recordings and settings; `odograph verify` checks that nothing was changed since, and `odograph "
-        "replay` runs the analysis again and compares.", "",
+        f"{place} They are listed in recordings.tsv, {len(root['recordings'])} files with their SHA-256 "
+        "digests. Results, records of provenance, settings, workflow, library and the versions of all "
+        f"software are in this archive. The analysis was made with odograph {software['odograph']}{code}; its "
+        f"run root, one identifier over all {len(root['records'])} records, is {root['root']}. Every figure "
+        "carries the identifier of its record, from which `odograph trace` follows it back to the recordings "
+        "and settings; `odograph verify` checks that nothing was changed since, and `odograph replay` runs the "
+        "analysis again and compares.", "",
     ]  # fmt: skip
     return settings.study.name, parameters, "\n".join(lines)

@@ -10,8 +10,11 @@ from __future__ import annotations
 import mimetypes
 from collections import defaultdict
 from collections.abc import Iterable, Mapping
+from datetime import datetime
 from typing import Any
+from urllib.parse import quote
 
+from odograph.provenance.archive.payload import Recording
 from odograph.provenance.canonical import readable_json
 
 CRATE = "https://w3id.org/ro/crate/1.1"
@@ -41,7 +44,7 @@ def crate_text(
     files: Mapping[str, tuple[int, str]],
     records: Iterable[Mapping[str, Any]],
     parameters: Mapping[str, Any],
-    recordings: Iterable[Any],
+    recordings: Iterable[Recording],
     root: Mapping[str, Any],
     engine: str,
 ) -> str:
@@ -57,7 +60,7 @@ def crate_text(
         All records of the run.
     parameters : mapping of str to Any
         Settings that are not the default, by dotted path.
-    recordings : iterable of odograph.provenance.archive.payload.Recording
+    recordings : iterable of Recording
         Those that are not among the files become entities of their own, with digest and size.
     root : dict
         The run root's document.
@@ -75,7 +78,8 @@ def crate_text(
         _add_recording(graph, one)
     _add_workflow(graph, files, records, root, engine)
     _add_parameters(graph, parameters)
-    _add_actions(graph, files, records, parameters, recordings)
+    settings = [row["file"] for row in root["user_files"]]
+    _add_actions(graph, files, records, parameters, recordings, settings)
     graph.get("./")["hasPart"] = _references([*sorted(files), *(_recording_id(one) for one in recordings)])
     context = [
         f"{CRATE}/context",
@@ -109,7 +113,7 @@ def _references(identifiers: Iterable[str]) -> list[dict[str, str]]:
 
 
 def _quoted(name: str) -> str:
-    return name.replace("%", "%25").replace(" ", "%20") if not name.startswith(("http", "#")) else name
+    return name if name.startswith(("https://", "#")) else quote(name)
 
 
 def _add_descriptor(graph: _Graph, name: str, ended: str, root: str) -> None:
@@ -142,18 +146,18 @@ def _add_file(graph: _Graph, path: str, size: int, digest: str) -> None:
     )  # fmt: skip
 
 
-def _recording_id(one: Any) -> str:
-    return one.file if one.source is not None else f"#recording-{one.session}-{one.digest[-12:]}"
+def _recording_id(one: Recording) -> str:
+    return one.file if one.enclosed else f"#recording-{one.session}-{one.digest[-12:]}"
 
 
-def _add_recording(graph: _Graph, one: Any) -> None:
-    if one.source is None:
+def _add_recording(graph: _Graph, one: Recording) -> None:
+    if not one.enclosed:
         graph.add(
             _recording_id(one), "CreativeWork",
             name=one.file.rpartition("/")[2],
             description=f"Recording of session {one.session}, not enclosed.",
             contentSize=str(one.size), sha256=one.digest.removeprefix("sha256:"), identifier=one.identifier,
-            encodingFormat=_FORMATS[".nwb"],
+            url=one.fetch_from, encodingFormat=_FORMATS[".nwb"],
         )  # fmt: skip
 
 
@@ -235,12 +239,12 @@ def _add_actions(
     files: Mapping[str, Any],
     records: list[Mapping[str, Any]],
     parameters: Mapping[str, Any],
-    recordings: list[Any],
+    recordings: list[Recording],
+    settings: list[str],
 ) -> None:
     by_step: dict[tuple[str, str], list[Mapping[str, Any]]] = defaultdict(list)
     for record in records:
         by_step[record["rule"], record["keys"].get("session", "")].append(record)
-    settings = [path for path in sorted(files) if path.startswith("config/")]
     used = [
         *settings,
         *(_recording_id(one) for one in recordings),
@@ -261,7 +265,10 @@ def _add_actions(
         results = sorted(
             {product["path"] for record in some for product in record["products"]} & files.keys()
         )
-        objects = [*sorted(inputs & files.keys()), *(of_session[session] if reads else []), *settings]
+        stages = {stage for record in some for stage in record["settings"]}
+        read = [f"#value-{path}" for path in sorted(parameters) if path.split(".")[0] in stages]
+        of_recording = of_session[session] if reads else []
+        objects = [*sorted(inputs & files.keys()), *of_recording, *settings, *read]
         title = f"{rule} of session {session}" if session else rule
         _add_action(graph, actions[-1], title, f"#step-{rule}", objects, results, some)
     graph.get("./")["mentions"] = _references(actions)
@@ -293,7 +300,5 @@ def _add_action(
 
 
 def _seconds(record: Mapping[str, Any]) -> float:
-    from datetime import datetime
-
     start, end = (datetime.fromisoformat(record["run"][name]) for name in ("started", "ended"))
     return (end - start).total_seconds()
