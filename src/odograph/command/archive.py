@@ -103,9 +103,9 @@ def _words(args: argparse.Namespace) -> tuple[str, dict[str, Any], str]:
     table = settings_table(settings)
     parameters = {row["path"]: row["value"] for row in table if row["value"] != row["default"]}
     commit, modified = root["code"]["commit"], root["code"]["modified"]
-    code = (
-        f" at commit {commit}{', with changes that were not committed' if modified else ''}" if commit else ""
-    )
+    code = f" at commit {commit}" if commit else ""
+    if modified:
+        code += ", with changes that were not committed"
     if args.with_recordings:
         place = "The recordings are enclosed."
     elif args.recordings_at:
@@ -118,10 +118,10 @@ def _words(args: argparse.Namespace) -> tuple[str, dict[str, Any], str]:
         "", "# Data and code availability", "",
         f"{place} They are listed in recordings.tsv, {len(root['recordings'])} files with their SHA-256 "
         "digests. Results, records of provenance, settings, workflow, library and the versions of all "
-        f"software are in this archive. The analysis was made with odograph {software['odograph']}{code}; its "
-        f"run root, one identifier over all {len(root['records'])} records, is {root['root']}. Every figure "
-        "carries the identifier of its record, from which `odograph trace` follows it back to the recordings "
-        "and settings; `odograph verify` checks that nothing was changed since, and `odograph replay` runs the "
-        "analysis again and compares.", "",
+        f"software are in this archive. The analysis was made with odograph {software['odograph']}{code}; "
+        f"its run root, one identifier over all {len(root['records'])} records, is {root['root']}. Every "
+        "figure carries the identifier of its record, from which `odograph trace` follows it back to the "
+        "recordings and settings; `odograph verify` checks that nothing was changed since, and `odograph "
+        "replay` runs the analysis again and compares.", "",
     ]  # fmt: skip
     return settings.study.name, parameters, "\n".join(lines)

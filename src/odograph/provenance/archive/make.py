@@ -188,7 +188,7 @@ def _write_private_copies(
     files: dict[str, Path],
     scratch: Path,
 ) -> list[dict[str, Any]]:
-    """Put what must not leave this machine as it is in place of the study's own files; returns the records."""
+    """Put copies in place of files that must not leave this machine as they are; returns the records."""
     from odograph.settings.load import load_settings
 
     records = []

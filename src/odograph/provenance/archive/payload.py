@@ -182,19 +182,10 @@ def _recordings(
                 expected="every recording, to take them along",
                 remedy="put it there, or archive without --with-recordings: it is then named by its digest",
             )
-        place_to_fetch = f"{recordings_at.rstrip('/')}/{posixpath.basename(place)}" if recordings_at else None
-        found.append(
-            Recording(
-                session,
-                named,
-                place,
-                row["digest"],
-                row["bytes"],
-                None if row["linked"] else _identifier(folder, session),
-                source if with_recordings else None,
-                None if with_recordings else place_to_fetch,
-            )  # fmt: skip
-        )
+        identifier = None if row["linked"] else _identifier(folder, session)
+        address = f"{recordings_at.rstrip('/')}/{posixpath.basename(place)}" if recordings_at else None
+        where = (source, None) if with_recordings else (None, address)
+        found.append(Recording(session, named, place, row["digest"], row["bytes"], identifier, *where))
     return found
 
 

@@ -76,6 +76,6 @@ def archived_sessions(text: str, places: Mapping[str, str]) -> str:
 
 
 def files_that_name(texts: Mapping[str, str], folders: Iterable[Path]) -> list[tuple[str, str]]:
-    """Which of some texts hold the path of a folder of this machine: pairs of the text's name and the path."""
+    """Texts that hold the path of a folder of this machine: pairs of the text's name and the path."""
     words = {str(folder) for folder in folders if len(folder.parts) > 1}
     return [(name, word) for name, text in sorted(texts.items()) for word in sorted(words) if word in text]
