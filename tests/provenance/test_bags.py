@@ -112,3 +112,60 @@ def test_what_is_no_zip_file_or_damaged_is_said(tmp_path):
     with pytest.raises(InputError):
         unpack(tmp_path / "cut.zip", tmp_path / "target")
     assert not (tmp_path / "target").exists()
+
+
+def test_a_bag_with_a_link_is_named(bag, tmp_path):
+    (tmp_path / "elsewhere").mkdir()
+    (bag / "data/folder").symlink_to(tmp_path / "elsewhere")
+    (bag / "data/README.md").unlink()
+    (bag / "data/README.md").symlink_to(tmp_path / "source.bin")
+    problems = bag_problems(bag)
+    assert "data/folder is a link" in problems and "data/README.md is a link" in problems
+
+
+@pytest.mark.parametrize("content", [b"nodigest\n", b"\xff\xfe\n"])
+def test_a_manifest_that_is_none_is_named(bag, content):
+    (bag / "manifest-sha512.txt").write_bytes(content)
+    assert "manifest-sha512.txt cannot be read" in bag_problems(bag)
+
+
+def test_a_manifest_that_leads_outside_is_named(bag):
+    with (bag / "manifest-sha256.txt").open("a") as manifest:
+        manifest.write(f"{'0' * 64}  ../source.bin\n")
+    assert any("outside the bag: ../source.bin" in problem for problem in bag_problems(bag))
+
+
+def test_names_that_a_disk_may_take_for_one_are_refused(tmp_path):
+    """An accented letter in one character and in two (Unicode normal forms C and D)."""
+    with pytest.raises(InputError, match="twice"):
+        unpack(zipped(tmp_path / "same.zip", ("\u00e9.txt", "x"), ("e\u0301.txt", "y")), tmp_path / "target")
+
+
+def test_many_members_that_swell_together_are_refused(tmp_path):
+    # Each stays below the size from which one alone is a bomb.
+    members = [(f"{number}.bin", b"\0" * 900_000) for number in range(40)]
+    with pytest.raises(InputError, match="more than so few"):
+        unpack(zipped(tmp_path / "swell.zip", *members), tmp_path / "target")
+    assert not (tmp_path / "target").exists()
+
+
+def test_a_member_whose_packed_bytes_are_damaged_is_said(tmp_path):
+    source = zipped(tmp_path / "whole.zip", ("a.txt", "".join(map(str, range(5000)))))
+    content = bytearray(source.read_bytes())
+    content[40:60] = b"\xff" * 20
+    source.write_bytes(content)
+    with pytest.raises(InputError, match="cannot be unpacked"):
+        unpack(source, tmp_path / "target")
+
+
+def test_a_member_that_is_larger_than_it_says_is_refused(tmp_path):
+    source = zipped(tmp_path / "liar.zip", ("a.txt", "x" * 1000))
+    content = bytearray(source.read_bytes())
+    entry = content.index(b"PK\x01\x02")
+    # The size before packing, in the central directory (APPNOTE.TXT, section 4.3.12).
+    assert int.from_bytes(content[entry + 24 : entry + 28], "little") == 1000
+    content[entry + 24 : entry + 28] = (10).to_bytes(4, "little")
+    source.write_bytes(content)
+    with pytest.raises(InputError):
+        unpack(source, tmp_path / "target")
+    assert not (tmp_path / "target").exists()

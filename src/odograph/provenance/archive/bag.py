@@ -83,6 +83,8 @@ def _decoded(name: str) -> str:
 def bag_problems(bag: Path) -> list[str]:
     """What is wrong with a bag: files missing, added or changed; empty when it is complete and valid.
 
+    Links are named as a problem and never followed, and no manifest leads outside the bag.
+
     Raises
     ------
     InputError
@@ -95,37 +97,55 @@ def bag_problems(bag: Path) -> list[str]:
             expected="a folder with bagit.txt and manifest-sha256.txt",
             remedy="name the folder that was unpacked, or the zip file",
         )
-    problems = []
+    present, links = _walk(bag)
+    problems = [f"{name} is a link" for name in links]
+    payload = {name for name in present if name.startswith("data/")}
     for kind in ("manifest", "tagmanifest"):
         for algorithm in ALGORITHMS:
-            listed = _read_manifest(bag / f"{kind}-{algorithm}.txt")
+            manifest = f"{kind}-{algorithm}.txt"
+            if manifest not in present:
+                continue
+            listed = _read_manifest(bag / manifest)
             if listed is None:
+                problems.append(f"{manifest} cannot be read")
                 continue
             for name, digest in sorted(listed.items()):
-                place = bag / name
                 if ".." in Path(name).parts or Path(name).is_absolute():
-                    problems.append(f"{kind}-{algorithm}.txt names a file outside the bag: {name}")
-                elif not place.is_file():
+                    problems.append(f"{manifest} names a file outside the bag: {name}")
+                elif name not in present:
                     problems.append(f"{name} is missing")
-                elif _digest(place, algorithm) != digest:
+                elif _digest(bag / name, algorithm) != digest:
                     problems.append(f"{name} was changed ({algorithm})")
             if kind == "manifest":
-                problems += [f"{name} was added" for name in sorted(_payload(bag) - set(listed))]
+                problems += [f"{name} was added" for name in sorted(payload - set(listed))]
     return list(dict.fromkeys(problems))
 
 
-def _payload(bag: Path) -> set[str]:
-    found = set()
-    for at, _, names in os.walk(bag / "data"):
-        found |= {(Path(at) / name).relative_to(bag).as_posix() for name in names}
-    return found
+def _walk(bag: Path) -> tuple[set[str], list[str]]:
+    """Files of a bag and, apart from them, what is no plain file or folder."""
+    files, links = set(), []
+    for at, folders, names in os.walk(bag):
+        for name in sorted([*folders, *names]):
+            path = Path(at) / name
+            told = path.relative_to(bag).as_posix()
+            if path.is_symlink() or not (path.is_file() or path.is_dir()):
+                links.append(told)
+            elif path.is_file():
+                files.add(told)
+    return files, sorted(links)
 
 
 def _read_manifest(path: Path) -> dict[str, str] | None:
-    if not path.is_file():
+    """Digests by path; None when a line is none of a manifest's."""
+    found = {}
+    try:
+        for line in path.read_text(encoding="utf-8").split("\n"):
+            if line.strip():
+                digest, name = line.rstrip("\r").split(maxsplit=1)
+                found[_decoded(name.lstrip("*"))] = digest.lower()
+    except (UnicodeDecodeError, ValueError):
         return None
-    lines = (line.split(maxsplit=1) for line in path.read_text(encoding="utf-8").splitlines() if line.strip())
-    return {_decoded(name.lstrip("*")): digest.lower() for digest, name in lines}
+    return found
 
 
 def _digest(path: Path, algorithm: str) -> str:

@@ -5,7 +5,9 @@ from __future__ import annotations
 import shutil
 import stat
 import tempfile
+import unicodedata
 import zipfile
+import zlib
 from pathlib import Path, PurePosixPath
 
 from odograph.errors import InputError
@@ -34,7 +36,8 @@ def unpack(source: Path, target: Path) -> Path:
     ------
     InputError
         The file is no zip file, or a member has an absolute path, leads outside, is a link or a device, is
-        there twice (also when only upper and lower case differ), is encrypted, or is larger than it says.
+        there twice (also when only upper and lower case differ, or the way of writing an accent), is
+        encrypted, is larger than it says, or all together swell beyond reason or beyond what the disk holds.
     """
     if target.exists():
         raise InputError("it is there already", file=str(target), remedy="name a folder that is not there")
@@ -43,17 +46,27 @@ def unpack(source: Path, target: Path) -> Path:
         with zipfile.ZipFile(source) as archive:
             members = archive.infolist()
             check_members(members, source)
+            _check_room(members, target.parent, source)
             with tempfile.TemporaryDirectory(dir=target.parent, prefix=f".{target.name}.") as name:
+                content = Path(name) / "content"
+                content.mkdir()
                 for member in members:
                     if not member.is_dir():
-                        _extract(archive, member, Path(name), source)
-                shutil.copytree(name, target)
-    except (zipfile.BadZipFile, EOFError, NotImplementedError, OSError) as error:
+                        _extract(archive, member, content, source)
+                content.rename(target)
+    except (zipfile.BadZipFile, zlib.error, EOFError, NotImplementedError) as error:
         raise InputError(
             f"it cannot be unpacked ({error})",
             file=str(source),
-            expected="a zip file",
+            expected="a zip file that is whole",
             remedy="fetch it again",
+        ) from error
+    except OSError as error:
+        raise InputError(
+            f"it cannot be unpacked ({error.strerror or error})",
+            file=str(source),
+            expected="a zip file that can be read, and a folder that can be written",
+            remedy="look at the rights and the free space of both",
         ) from error
     inside = list(target.iterdir())
     return inside[0] if len(inside) == 1 and inside[0].is_dir() else target
@@ -76,17 +89,35 @@ def check_members(members: list[zipfile.ZipInfo], source: Path) -> None:
             raise _refused("a link or a device", name, source)
         if member.flag_bits & 0x1:
             raise _refused("an encrypted member", name, source)
-        folded = name.rstrip("/").casefold()
+        folded = _folded(name)
         if folded in seen:
             raise _refused(f"the same name twice (also {seen[folded]!r})", name, source)
         seen[folded] = name
         if member.file_size > LARGEST_RATIO * max(member.compress_size, 1) and member.file_size > _CHUNK:
             raise _refused("more bytes than so few can stand for", name, source)
-    files = {name.rstrip("/").casefold() for name in seen.values() if not name.endswith("/")}
-    for name in seen.values():
-        parents = PurePosixPath(name.casefold()).parents
-        if any(str(parent) in files for parent in parents):
+    files = {folded for folded, name in seen.items() if not name.endswith("/")}
+    for folded, name in seen.items():
+        if any(str(parent) in files for parent in PurePosixPath(folded).parents):
             raise _refused("a file that is a folder as well", name, source)
+    total, packed = sum(member.file_size for member in members), source.stat().st_size
+    if total > LARGEST_RATIO * packed and total > _CHUNK:
+        raise _refused(f"{total} bytes in {packed}, more than so few can stand for,", "", source)
+
+
+def _folded(name: str) -> str:
+    """A name as the least discerning disk keeps it."""
+    return unicodedata.normalize("NFC", unicodedata.normalize("NFC", name.rstrip("/")).casefold())
+
+
+def _check_room(members: list[zipfile.ZipInfo], folder: Path, source: Path) -> None:
+    needed, free = sum(member.file_size for member in members), shutil.disk_usage(folder).free
+    if needed > free:
+        raise InputError(
+            f"it unpacks to {needed / 1e6:,.0f} MB",
+            file=str(source),
+            expected=f"no more than the {free / 1e6:,.0f} MB that are free",
+            remedy="make room, or unpack on another disk",
+        )
 
 
 def _extract(archive: zipfile.ZipFile, member: zipfile.ZipInfo, target: Path, source: Path) -> None:
