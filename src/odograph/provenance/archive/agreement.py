@@ -1,21 +1,23 @@
-"""Do two runs agree? Tables number by number, documents value by value, figures by what is behind them."""
+"""Do two runs agree? Every product compared, and for what differs, where that begins and why."""
 
 from __future__ import annotations
 
-import json
-import math
-from collections.abc import Iterator, Mapping
+from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-import numpy as np
-
-from odograph.provenance.files import file_digest, read_arrays, read_json, read_table
+from odograph.errors import OdographError
+from odograph.provenance.archive.values import Difference, differences, readable_kind
+from odograph.provenance.canonical import canonical_json
+from odograph.provenance.files import file_digest, read_json
+from odograph.provenance.identifier import read_record_id
 from odograph.provenance.root import all_record_files
 
 RELATIVE, ABSOLUTE = 1e-6, 1e-9
 _FIGURES = (".png", ".svg", ".pdf", ".html")
+#: What a record names that can make its products differ, in the order in which it is told.
+CAUSES = ("inputs", "settings", "code", "software", "machine")
 
 
 @dataclass(frozen=True)
@@ -32,12 +34,19 @@ class Agreement:
         For what differs: where, and by how much.
     largest : float
         Largest relative difference between numbers; 0 where there is none.
+    begins : bool
+        Whether it differs though every product that it was made from agrees: here the differences begin.
+    causes : tuple of str
+        For what differs, which of `CAUSES` its two records do not share. "machine" when they share all: then
+        the processor, the operating system or chance is left.
     """
 
     path: str
     verdict: str
     detail: str = ""
     largest: float = 0.0
+    begins: bool = False
+    causes: tuple[str, ...] = ()
 
     @property
     def agrees(self) -> bool:
@@ -55,23 +64,31 @@ def compare_runs(
     old, new : Path
         The studies' folders.
     relative, absolute : float
-        Numbers agree when they differ by no more than `absolute` or by no more than `relative` of the larger.
+        Two floating-point numbers agree when they differ by no more than `absolute` or by no more than
+        `relative` of the larger. Integers, texts and truth values must be the same.
 
     Returns
     -------
     list of Agreement
-        Sorted by path. A figure or a page agrees when all that it was drawn from agrees.
+        Sorted by path. A figure or a page agrees when it carries the identifier of its record and was drawn,
+        with the same settings, from products that agree; its pixels do not count.
     """
-    before, after = _products(old), _products(new)
+    before, after = _records_by_product(old), _records_by_product(new)
     found: dict[str, Agreement] = {}
+
+    def agreement(path: str) -> Agreement:
+        # What a product was made from comes first: whether a figure agrees follows from it.
+        if path not in found:
+            for name in _used(before[path]):
+                if name in before:
+                    agreement(name)
+            found[path] = _compare(path, old, new, before, after, found, (relative, absolute))
+        return found[path]
+
     for path in sorted(before):
-        if Path(path).suffix not in _FIGURES:
-            found[path] = _compare(path, old, new, path in after, relative, absolute)
-    for path in sorted(before):
-        if Path(path).suffix in _FIGURES:
-            found[path] = _figure(path, old, new, before[path], path in after, found)
+        agreement(path)
     for path in sorted(set(after) - set(before)):
-        found[path] = Agreement(path, "differs", "only the new run has it")
+        found[path] = Agreement(path, "differs", "only the new run has it", begins=True)
     return [found[path] for path in sorted(found)]
 
 
@@ -84,138 +101,121 @@ def software_differences(old: Path, new: Path) -> dict[str, tuple[str, str]]:
 
 
 def _software(folder: Path) -> dict[str, str]:
-    found: dict[str, str] = {}
+    found: dict[str, set[str]] = {}
     for file in all_record_files(folder):
-        found |= read_json(file)["software"]
-    return found
+        for name, version in read_json(file)["software"].items():
+            found.setdefault(name, set()).add(version)
+    return {name: " and ".join(sorted(versions)) for name, versions in found.items()}
 
 
-def _products(folder: Path) -> dict[str, list[str]]:
-    """Every product, with the products that its record used."""
+def _records_by_product(folder: Path) -> dict[str, dict[str, Any]]:
+    """The record of every product, by the product's path."""
     found = {}
     for file in all_record_files(folder):
         record = read_json(file)
-        used = [entry["path"] for entry in record["inputs"] if entry["kind"] == "product"]
-        found |= {product["path"]: used for product in record["products"]}
+        found |= {product["path"]: record for product in record["products"]}
     return found
 
 
-def _compare(path: str, old: Path, new: Path, there: bool, relative: float, absolute: float) -> Agreement:
-    if not there or not (new / path).is_file():
-        return Agreement(path, "missing", "the new run did not make it")
+def _used(record: Mapping[str, Any]) -> list[str]:
+    """The products that a record's products were made from."""
+    return [entry["path"] for entry in record["inputs"] if entry["kind"] == "product"]
+
+
+def _compare(
+    path: str,
+    old: Path,
+    new: Path,
+    before: Mapping[str, dict[str, Any]],
+    after: Mapping[str, dict[str, Any]],
+    found: Mapping[str, Agreement],
+    tolerances: tuple[float, float],
+) -> Agreement:
+    wrong = [name for name in _used(before[path]) if name in found and not found[name].agrees]
+    if path not in after or not (new / path).is_file():
+        return Agreement(path, "missing", "the new run did not make it", begins=not wrong)
     if file_digest(old / path) == file_digest(new / path):
         return Agreement(path, "same bytes")
-    readers = {".parquet": _table, ".npz": _arrays, ".json": _document, ".tsv": _lines}
-    read = readers.get(Path(path).suffix)
-    if read is None:
-        return Agreement(path, "differs", "its bytes differ")
-    differences = list(_differences(read(old / path), read(new / path), relative, absolute))
-    if not differences:
-        return Agreement(path, "same values")
-    largest = max(size for _, size in differences)
-    beyond = [(where, size) for where, size in differences if size > 0 and not math.isnan(size)]
-    wrong = [where for where, size in differences if math.isinf(size)]
-    if wrong:
-        finite = [size for _, size in beyond if math.isfinite(size)]
-        more = f" and {len(wrong) - 3} more" if len(wrong) > 3 else ""
-        return Agreement(path, "differs", "; ".join(wrong[:3]) + more, max(finite, default=0.0))
-    return Agreement(path, "within tolerance", "", largest)
+    causes = _causes(before[path], after[path])
+    if Path(path).suffix in _FIGURES:
+        verdict, detail = _figure(path, old, new, before[path], after[path], wrong, causes)
+        largest = 0.0
+    else:
+        verdict, detail, largest = _data(path, old, new, tolerances)
+    if verdict != "differs":
+        return Agreement(path, verdict, detail, largest)
+    return Agreement(path, verdict, detail, largest, begins=not wrong, causes=causes)
+
+
+def _causes(old: Mapping[str, Any], new: Mapping[str, Any]) -> tuple[str, ...]:
+    parts = {cause: (old.get(cause), new.get(cause)) for cause in ("settings", "code", "software")}
+    parts["inputs"] = (_content(old), _content(new))
+    found = [cause for cause in CAUSES if cause in parts and _unlike(*parts[cause])]
+    return tuple(found) or ("machine",)
+
+
+def _unlike(old: Any, new: Any) -> bool:
+    return canonical_json(old) != canonical_json(new)
+
+
+def _content(record: Mapping[str, Any]) -> list[tuple[str, str, str]]:
+    """What a record's inputs are, wherever they lie; products are looked at by their own records."""
+    return sorted(
+        (entry["kind"], str(entry.get("signal", entry.get("unit", entry.get("table")))), entry["digest"])
+        for entry in record["inputs"]
+        if entry["kind"] != "product"
+    )
 
 
 def _figure(
     path: str,
     old: Path,
     new: Path,
-    used: list[str],
-    there: bool,
-    found: Mapping[str, Agreement],
-) -> Agreement:
-    if not there or not (new / path).is_file():
-        return Agreement(path, "missing", "the new run did not make it")
-    if file_digest(old / path) == file_digest(new / path):
-        return Agreement(path, "same bytes")
-    wrong = [name for name in used if name in found and not found[name].agrees]
+    before: Mapping[str, Any],
+    after: Mapping[str, Any],
+    wrong: list[str],
+    causes: tuple[str, ...],
+) -> tuple[str, str]:
+    """A figure by what is behind it: its identifier, its settings and the products it was drawn from."""
+    for folder, record in ((old, before), (new, after)):
+        if _identifier(folder / path) != record["record_id"]:
+            whose = "the archived" if folder == old else "the new"
+            return "differs", f"{whose} one does not carry the identifier of its record"
     if wrong:
-        return Agreement(path, "differs", f"drawn from {wrong[0]}, which differs")
-    return Agreement(path, "same values", "drawn from data that agree")
+        more = f" and {len(wrong) - 1} more" if len(wrong) > 1 else ""
+        return "differs", f"drawn from {wrong[0]}{more}, which differs"
+    if sorted(_used(before)) != sorted(_used(after)):
+        return "differs", "drawn from other products"
+    for cause in ("inputs", "settings"):
+        if cause in causes:
+            return "differs", f"drawn with other {cause}"
+    if before["record_id"] == after["record_id"]:
+        return "same values", "it carries the same identifier"
+    return "same values", "drawn from products that agree"
 
 
-def _table(path: Path) -> dict[str, Any]:
-    table = read_table(path)
-    return {name: table[name].to_numpy() for name in table.columns}
-
-
-def _arrays(path: Path) -> dict[str, Any]:
-    return dict(read_arrays(path))
-
-
-def _lines(path: Path) -> dict[str, Any]:
-    rows = [line.split("\t") for line in path.read_text(encoding="utf-8").splitlines()]
-    return {name: np.array([row[i] for row in rows[1:]], object) for i, name in enumerate(rows[0])}
-
-
-def _document(path: Path) -> dict[str, Any]:
-    flat: dict[str, Any] = {}
-
-    def walk(value: Any, place: str) -> None:
-        if isinstance(value, Mapping):
-            for key, item in value.items():
-                walk(item, f"{place}.{key}" if place else str(key))
-        elif isinstance(value, list):
-            flat[f"{place} (length)"] = np.array([len(value)])
-            for i, item in enumerate(value):
-                walk(item, f"{place}[{i}]")
-        else:
-            flat[place] = np.array([value], object if isinstance(value, str) or value is None else None)
-
-    walk(json.loads(path.read_bytes()), "")
-    return flat
-
-
-def _differences(
-    old: Mapping[str, Any], new: Mapping[str, Any], relative: float, absolute: float
-) -> Iterator[tuple[str, float]]:
-    """Where two sets of columns differ, and by how much of the larger; infinite where they do not agree."""
-    for name in sorted({*old, *new}):
-        if name not in old or name not in new:
-            yield f"{name} is in one of the two only", math.inf
-            continue
-        a, b = np.asarray(old[name]), np.asarray(new[name])
-        if a.shape != b.shape:
-            yield f"{name} has {a.shape} and {b.shape} values", math.inf
-            continue
-        a, b = _numbers(a), _numbers(b)
-        if a is None or b is None:
-            differ = np.asarray(old[name], object) != np.asarray(new[name], object)
-            both = [_nothing(x) and _nothing(y) for x, y in zip(old[name], new[name], strict=True)]
-            differ = np.ravel(differ) & ~np.array(both, bool)
-            if differ.any():
-                yield f"{name} differs in {int(differ.sum())} of {differ.size} rows", math.inf
-            continue
-        unequal = ~((a == b) | (np.isnan(a) & np.isnan(b)))
-        if not unequal.any():
-            continue
-        apart = np.abs(a - b)[unequal]
-        larger = np.maximum(np.abs(a), np.abs(b))[unequal]
-        ratio = np.where(np.isnan(apart), math.inf, apart / np.maximum(larger, 1e-300))
-        beyond = ~((apart <= absolute) | (apart <= relative * larger))
-        if beyond.any():
-            place = f"{name} differs in {int(beyond.sum())} of {a.size} values"
-            size = float(np.max(ratio[beyond]))
-            yield f"{place}, by up to {size:.2g} of the larger" if math.isfinite(size) else place, math.inf
-        else:
-            yield name, float(np.max(ratio))
-
-
-def _numbers(values: np.ndarray) -> np.ndarray | None:
-    """Values as floats, None when they are text."""
-    if values.dtype != object:
-        return values.astype(float) if values.dtype.kind in "fiub" else None
+def _identifier(path: Path) -> str | None:
     try:
-        return np.array([math.nan if _nothing(value) else float(value) for value in values.ravel()])
-    except (TypeError, ValueError):
+        return read_record_id(path)
+    except OdographError:
         return None
 
 
-def _nothing(value: Any) -> bool:
-    return value is None or value == "" or (isinstance(value, float) and math.isnan(value))
+def _data(path: str, old: Path, new: Path, tolerances: tuple[float, float]) -> tuple[str, str, float]:
+    if not readable_kind(path):
+        return "differs", "its bytes differ", 0.0
+    try:
+        found = differences(old / path, new / path, *tolerances)
+    except OdographError as error:
+        return "differs", error.found, 0.0
+    beyond = [one for one in found if one.beyond]
+    largest = max((one.largest for one in beyond or found), default=0.0)
+    if beyond:
+        return "differs", _told(beyond), largest
+    return ("within tolerance" if found else "same values"), "", largest
+
+
+def _told(beyond: list[Difference]) -> str:
+    beyond = sorted(beyond, key=lambda one: -one.largest)
+    more = f" and {len(beyond) - 3} more" if len(beyond) > 3 else ""
+    return "; ".join(one.text for one in beyond[:3]) + more
