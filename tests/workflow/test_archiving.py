@@ -4,6 +4,7 @@ import gzip
 import io
 import json
 import shutil
+import socket
 import subprocess
 from pathlib import Path
 
@@ -15,11 +16,14 @@ from rocrate_validator import models, services
 from urllib3.response import HTTPResponse
 
 from odograph.command.main import main
+from odograph.errors import InputError
 from odograph.provenance.archive.agreement import compare_runs
+from odograph.provenance.archive.replay import lay_out
 from odograph.provenance.root import read_root
 from odograph.provenance.verify import verify
 
 CONTEXT = Path(__file__).with_name("data") / "ro-crate-1.1-context.jsonld.gz"
+ADDRESS = "https://example.org/set"
 PROFILES = ("ro-crate-1.1", "process-run-crate", "workflow-run-crate")
 
 
@@ -70,15 +74,30 @@ def validator_cache(tmp_path_factory):
     return cache
 
 
+def issues(bag, cache, profile):
+    settings = services.ValidationSettings(
+        rocrate_uri=str(bag / "data"), profile_identifier=profile,
+        requirement_severity=models.Severity.REQUIRED, offline=True, cache_path=str(cache),
+    )  # fmt: skip
+    return [issue.message for issue in services.validate(settings).get_issues()]
+
+
 @pytest.mark.parametrize("profile", PROFILES)
 def test_the_crate_is_valid(bag, validator_cache, profile):
     """By roc-validator 0.13, at the level of what is required."""
-    settings = services.ValidationSettings(
-        rocrate_uri=str(bag / "data"), profile_identifier=profile,
-        requirement_severity=models.Severity.REQUIRED, offline=True, cache_path=str(validator_cache),
-    )  # fmt: skip
-    result = services.validate(settings)
-    assert not result.has_issues(), [issue.message for issue in result.get_issues()]
+    assert issues(bag, validator_cache, profile) == []
+
+
+def test_the_validator_would_find_what_is_wrong(bag, validator_cache, tmp_path):
+    """The checks above can fail: a crate without a licence, and one whose workflow is not named."""
+    for number, key in enumerate(("license", "mainEntity")):
+        copy = tmp_path / str(number)
+        shutil.copytree(bag, copy)
+        path = copy / "data/ro-crate-metadata.json"
+        document = json.loads(path.read_text())
+        del next(entity for entity in document["@graph"] if entity["@id"] == "./")[key]
+        path.write_text(json.dumps(document))
+        assert issues(copy, validator_cache, "workflow-run-crate")
 
 
 def test_the_archive_verifies_where_it_is_unpacked(bag, finished):
@@ -172,34 +191,113 @@ def test_how_did_parameters_reach_the_workflow(crate):
     assert all(entity["@type"] == "FormalParameter" for entity in parameters)
     value = crate["#value-intake.front_point"]
     assert value["value"] == "led_front" and ids(value["exampleOfWork"]) == ["#parameter-intake.front_point"]
-    assert "#value-intake.front_point" in ids(crate["#run"]["object"])
+    for action in ("#run", "#run-intake-alpha"):
+        assert "#value-intake.front_point" in ids(crate[action]["object"])
+    assert "#value-intake.front_point" not in ids(crate["#run-encoding-alpha"]["object"])
 
 
-def test_recordings_that_are_not_enclosed_are_named_by_digest(finished, tmp_path):
-    target, at = tmp_path / "bag", "https://example.org/set"
-    arguments = ["archive", str(target), "--study", str(finished.folder), "--recordings-at", at]
+@pytest.fixture(scope="module")
+def bag_without(finished, tmp_path_factory):
+    """The archive of the finished study, a folder, recordings by reference."""
+    target = tmp_path_factory.mktemp("archived") / "bag"
+    arguments = ["archive", str(target), "--study", str(finished.folder), "--recordings-at", ADDRESS]
     assert main(arguments) == 0
-    graph = json.loads((target / "data/ro-crate-metadata.json").read_text())["@graph"]
+    return target
+
+
+def test_recordings_that_are_not_enclosed_are_named_by_digest(finished, bag_without, tmp_path, capsys):
+    graph = json.loads((bag_without / "data/ro-crate-metadata.json").read_text())["@graph"]
     (one,) = [entity for entity in graph if entity.get("name") == "bracken_1.nwb"]
     row = next(row for row in read_root(finished.folder)["recordings"] if row["session"] == "alpha")
     assert one["sha256"] == row["digest"].removeprefix("sha256:") and one["contentSize"] == str(row["bytes"])
-    assert f"{at}/bracken_1.nwb" in (target / "data/recordings.tsv").read_text()
-    assert not list(target.rglob("*.nwb"))
-    # Whoever has the recordings can lay the study out again.
-    assert main(["replay", str(target), "--into", str(tmp_path / "again")]) == 66
+    assert one["url"] == f"{ADDRESS}/bracken_1.nwb" and one["identifier"].startswith("gorse-heath/bracken_1")
+    assert f"{ADDRESS}/bracken_1.nwb" in (bag_without / "data/recordings.tsv").read_text()
+    assert f"fetched from {ADDRESS}" in (bag_without / "data/METHODS.md").read_text()
+    assert not list(bag_without.rglob("*.nwb"))
+    assert main(["replay", str(bag_without), "--into", str(tmp_path / "again")]) == 66
+    assert f"fetch it from {ADDRESS}/bracken_1.nwb" in capsys.readouterr().err
 
 
-def test_an_archive_runs_again_elsewhere_and_agrees(bag, finished, tmp_path, capsys):
-    """In an empty folder, from a copy; with the present libraries, which the suite has at hand."""
-    copy = tmp_path / "copy"
-    shutil.copytree(bag, copy)
-    into = tmp_path / "empty" / "again"
-    status = main(["replay", str(copy), "--into", str(into), "--environment", "here", "--json"])
-    told = json.loads(capsys.readouterr().out)
+def test_the_crate_without_recordings_is_valid(bag_without, validator_cache):
+    assert bagit.Bag(str(bag_without)).validate()
+    assert issues(bag_without, validator_cache, "workflow-run-crate") == []
+
+
+def test_recordings_are_found_by_name_or_else_by_digest(finished, bag_without, tmp_path):
+    data, study = tmp_path / "data", tmp_path / "study"
+    shutil.copytree(finished.folder / "recordings", data / "deep" / "down")
+    (data / "deep/down/sorrel_1.nwb").rename(data / "renamed.nwb")
+    study.mkdir()
+    lay_out(bag_without, study, data)
+    assert (study / "recordings/sorrel_1.nwb").resolve() == data / "renamed.nwb"
+    assert (study / "recordings/bracken_1.nwb").resolve() == data / "deep/down/bracken_1.nwb"
+    assert not (study / "results").exists()
+
+
+def test_a_recording_of_that_name_with_another_content_is_refused(finished, bag_without, tmp_path):
+    data, study = tmp_path / "data", tmp_path / "study"
+    shutil.copytree(finished.folder / "recordings", data)
+    shutil.copyfile(data / "bracken_1_resorted.nwb", data / "bracken_1.nwb")
+    (data / "bracken_1_first.nwb").unlink()
+    study.mkdir()
+    with pytest.raises(InputError, match="not the recording of session alpha"):
+        lay_out(bag_without, study, data)
+
+
+def test_nothing_of_this_machine_is_inside(bag, bag_without, finished):
+    """Neither host nor user nor a place; the records of the study itself do name the host."""
+    host = socket.gethostname()
+    assert finished.record("population/record.json")["run"]["host"] == host
+    marks = [f"{finished.folder}", f"{Path.home()}/", f'"{host}"', f"@{host}"]
+    for folder in (bag, bag_without):
+        for path in folder.rglob("*"):
+            if path.is_file() and path.suffix != ".nwb" and "src" not in path.parts:
+                content = path.read_bytes()
+                assert not [mark for mark in marks if mark.encode() in content], path
+        records = [json.loads(path.read_text()) for path in folder.rglob("*record.json")]
+        assert len(records) == len(read_root(finished.folder)["records"])
+        assert not [record for record in records if "host" in record["run"]]
+
+
+def test_recordings_from_elsewhere_get_a_place_in_the_archive(study, finished, tmp_path, capsys):
+    """A sessions table with absolute paths: they stay at home, and the root is the same."""
+    (study.folder / "recordings").rename(tmp_path / "elsewhere")
+    for row in study.sessions.values():
+        row["nwb"] = row["nwb"].replace("recordings", str(tmp_path / "elsewhere"))
+    study.run()
+    target = tmp_path / "bag"
+    assert main(["archive", str(target), "--study", str(study.folder), "--with-recordings"]) == 0
+    assert capsys.readouterr().err == ""
+    table = (target / "data/config/sessions.tsv").read_text()
+    assert "alpha\trecordings/bracken_1.nwb" in table and str(tmp_path) not in table
+    found = verify(target / "data")
+    assert found.breaches == [] and found.recordings == 4
+    assert found.root == read_root(finished.folder)["root"]
+
+
+def test_an_archive_runs_again_elsewhere_and_agrees(finished, tmp_path, capsys):
+    """From a copy in an empty folder, in a fresh virtual environment that borrows the libraries at hand."""
+    assert main(["archive", str(tmp_path / "whole.zip"), "--study", str(finished.folder)]) == 0
+    empty = tmp_path / "empty"
+    empty.mkdir()
+    (tmp_path / "whole.zip").rename(empty / "copy.zip")
+    into, data = empty / "again", finished.folder / "recordings"
+    capsys.readouterr()
+    options = ["--data", str(data), "--into", str(into), "--environment", "borrowed", "--json"]
+    status = main(["replay", str(empty / "copy.zip"), *options])
+    captured = capsys.readouterr()
+    assert status == 0, captured.err
+    told = json.loads(captured.out)
     wrong = [product for product in told["products"] if product["verdict"] in ("differs", "missing")]
-    assert (status, wrong, told["agrees"], told["software"]) == (0, [], True, {})
+    assert (wrong, told["agrees"], told["software"]) == ([], True, {})
     assert told["roots"][0] == told["roots"][1] == read_root(finished.folder)["root"]
     assert {one.verdict for one in compare_runs(finished.folder, into / "study")} == {"same bytes"}
+    # The library that ran was the archive's, not the one that called it.
+    python = into / "environment/bin/python"
+    place = "import odograph; print(odograph.__file__)"
+    done = subprocess.run([python, "-c", place], cwd=into, capture_output=True, text=True, check=True)
+    assert Path(done.stdout.strip()).is_relative_to(into / "study")
+    assert "steps are done" in captured.err
 
 
 def test_a_damaged_archive_is_not_run(bag, tmp_path, capsys):

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import csv
 import io
+import re
 from collections.abc import Iterable, Mapping
 from pathlib import Path
 from typing import Any
@@ -77,5 +78,10 @@ def archived_sessions(text: str, places: Mapping[str, str]) -> str:
 
 def files_that_name(texts: Mapping[str, str], folders: Iterable[Path]) -> list[tuple[str, str]]:
     """Texts that hold the path of a folder of this machine: pairs of the text's name and the path."""
-    words = {str(folder) for folder in folders if len(folder.parts) > 1}
-    return [(name, word) for name, text in sorted(texts.items()) for word in sorted(words) if word in text]
+    words = sorted({str(folder) for folder in folders if len(folder.parts) > 1})
+    return [
+        (name, word)
+        for name, text in sorted(texts.items())
+        for word in words
+        if re.search(rf"(?<![\w.-]){re.escape(word)}(?![\w.-])", text)
+    ]
