@@ -5,6 +5,7 @@ import math
 import numpy as np
 import pytest
 
+from odograph.command.replay import report
 from odograph.provenance import records
 from odograph.provenance.archive.agreement import compare_runs, software_differences
 from odograph.provenance.files import write_arrays, write_json, write_table, write_tsv
@@ -157,3 +158,29 @@ def test_what_a_difference_comes_with_is_told(old, new, change, causes):
     assert verdicts(old, folder)["units.parquet"].causes == causes
     differ = {"numpy": ("2.0", "2.1")} if "numpy" in change else {}
     assert software_differences(old, folder) == differ
+
+
+def told(old, folder):
+    found, software = compare_runs(old, folder), software_differences(old, folder)
+    return "\n".join(report(found, software, ["root:1", "root:2"], (1e-6, 1e-9)))
+
+
+def test_the_report_tells_other_libraries_from_real_differences(old, new, tmp_path, monkeypatch):
+    rows = ROWS | {"rate_hz": [1.0, 9.0, None]}
+    text = told(old, new(rows=rows, numpy="2.1"))
+    assert "numpy 2.0 then, 2.1 now" in text and "it may come from versions of libraries" in text
+    assert "a real difference" not in text
+    other = study(
+        tmp_path / "other", monkeypatch, rows=rows, numpy="2.1", settings={"population": {"seed": 2}}
+    )
+    assert "a real difference, not one of the machine: other settings" in told(old, other)
+    same = study(tmp_path / "same", monkeypatch, rows=rows)
+    assert "it may come from the processor" in told(old, same)
+
+
+def test_the_report_says_where_differences_begin(old, new):
+    lines = told(old, new(rows=ROWS | {"rate_hz": [1.0, 9.0, None]}, noise="other")).splitlines()
+    begins = lines.index("3 differ; where that begins:")
+    follows = lines.index("what was made from these and differs as well:")
+    assert ["units.parquet" in line for line in lines[begins + 1 : follows]] == [True, False]
+    assert "figure.svg: drawn from results/a/units.parquet, which differs" in lines[follows + 1]

@@ -31,7 +31,7 @@ def test_places_elsewhere_are_replaced_and_the_rest_of_the_table_stays():
 
 def test_a_users_file_that_names_a_place_of_this_machine_is_told():
     texts = {
-        "config/config.yaml": "# see /home/sam/notes\n",
-        "METHODS.md": "/home/sammy/x and results/home/sam\n",
+        "config/config.yaml": "# see /disk/sam/notes\n",
+        "METHODS.md": "/disk/sammy/x and results/disk/sam\n",
     }
-    assert files_that_name(texts, [Path("/home/sam"), Path("/")]) == [("config/config.yaml", "/home/sam")]
+    assert files_that_name(texts, [Path("/disk/sam"), Path("/")]) == [("config/config.yaml", "/disk/sam")]

@@ -186,6 +186,18 @@ def test_which_version_of_the_code_and_which_engine(crate):
     assert all(entity["identifier"] and entity["softwareVersion"] for entity in steps)
 
 
+def test_which_script_wraps_each_tool(crate):
+    """The module that a step's jobs start; the file is in the archive, by its digest."""
+    steps = [entity for name, entity in crate.items() if name.startswith("#step-")]
+    assert {action["instrument"]["@id"] for action in actions(crate)} == {
+        "Snakefile",
+        *(entity["@id"] for entity in steps),
+    }
+    for step in steps:
+        (script,) = ids(step["hasPart"])
+        assert script.endswith(f"/{step['@id'].removeprefix('#step-')}.py") and crate[script]["sha256"]
+
+
 def test_how_did_parameters_reach_the_workflow(crate):
     parameters = [crate[name] for name in ids(crate["Snakefile"]["input"])]
     assert all(entity["@type"] == "FormalParameter" for entity in parameters)

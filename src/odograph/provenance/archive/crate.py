@@ -191,7 +191,9 @@ def _add_workflow(
         graph.add(
             f"#step-{rule}", "SoftwareApplication",
             name=f"odograph.steps.{rule}", softwareVersion=", ".join(versions), identifier=codes,
-            description=f"The step of rule {rule}; `identifier` is the fingerprint of its code.",
+            description=f"The step of rule {rule}; `identifier` is the fingerprint of its code, and the part "
+            "named is the script that its jobs start.",
+            hasPart=_references(path for path in (f"src/odograph/steps/{rule}.py",) if path in files),
             softwareRequirements=_references(_packages(graph, records)),
         )  # fmt: skip
 
