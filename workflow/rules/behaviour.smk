@@ -11,6 +11,9 @@ rule behaviour:
         "logs/behaviour/{session}.log",
     conda:
         "../../environment.yml"
+    resources:
+        mem_mb=megabytes("behaviour"),
+        runtime=minutes("behaviour"),
     params:
         planned=planned("behaviour"),
         settings=settings("behaviour"),

@@ -22,8 +22,6 @@ except OdographError as error:
 # Jobs call `python`; it has to be the one that runs this.
 use_this_python()
 
-SHARDS = range(PLAN.shards)
-
 
 wildcard_constraints:
     session=r"[A-Za-z0-9_-]+",
@@ -47,9 +45,32 @@ def origin(wildcards):
     return PLAN.origin_of(wildcards.session, int(wildcards.shard))
 
 
+def shards(wildcards):
+    """Into how many shards the session is divided."""
+    return PLAN.shards[wildcards.session]
+
+
+def megabytes(step):
+    """Memory of a job, from units and bins; twice as much with every further attempt."""
+    return lambda wildcards, attempt: PLAN.megabytes(
+        step, wildcards.get("session")
+    ) * 2 ** (attempt - 1)
+
+
+def minutes(step):
+    """Time of a job, from units and bins; twice as much with every further attempt."""
+    return lambda wildcards, attempt: PLAN.minutes(
+        step, wildcards.get("session")
+    ) * 2 ** (attempt - 1)
+
+
 def of_shards(pattern):
     """A file of every shard of every session that can be read."""
-    return expand(pattern, session=PLAN.readable, shard=SHARDS)
+    return [
+        pattern.format(session=session, shard=shard)
+        for session in PLAN.readable
+        for shard in range(PLAN.shards[session])
+    ]
 
 
 def of_sessions(pattern):

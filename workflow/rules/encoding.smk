@@ -14,12 +14,14 @@ rule encoding:
         "logs/encoding/{session}/shard-{shard}.benchmark.tsv"
     conda:
         "../../environment.yml"
-    threads: 1
+    resources:
+        mem_mb=megabytes("encoding"),
+        runtime=minutes("encoding"),
     params:
         planned=planned("shard-{shard}"),
         settings=settings("encoding"),
         code=PLAN.code["encoding"],
-        shards=PLAN.shards,
+        shards=shards,
     message:
         "{wildcards.session}: units of shard {wildcards.shard}"
     shell:

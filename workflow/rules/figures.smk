@@ -12,10 +12,13 @@ rule cards:
         "logs/cards/{session}/shard-{shard}.log",
     conda:
         "../../environment.yml"
+    resources:
+        mem_mb=megabytes("cards"),
+        runtime=minutes("cards"),
     params:
         settings=settings("cards"),
         code=PLAN.code["cards"],
-        shards=PLAN.shards,
+        shards=shards,
         origin=origin,
     message:
         "{wildcards.session}: cards of shard {wildcards.shard}"
@@ -44,6 +47,9 @@ rule session_quality:
         "logs/session_quality/{session}.log",
     conda:
         "../../environment.yml"
+    resources:
+        mem_mb=megabytes("session_quality"),
+        runtime=minutes("session_quality"),
     params:
         settings=settings("session_quality"),
         code=PLAN.code["session_quality"],
@@ -75,6 +81,9 @@ rule population_figures:
         "logs/population_figures.log",
     conda:
         "../../environment.yml"
+    resources:
+        mem_mb=megabytes("population_figures"),
+        runtime=minutes("population_figures"),
     params:
         settings=PLAN.settings_of("population_figures"),
         code=PLAN.code["population_figures"],

@@ -8,6 +8,9 @@ rule intake:
         "logs/intake/{session}.log",
     conda:
         "../../environment.yml"
+    resources:
+        mem_mb=megabytes("intake"),
+        runtime=minutes("intake"),
     params:
         planned=planned("intake"),
         settings=settings("intake"),

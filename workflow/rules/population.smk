@@ -28,6 +28,9 @@ rule population:
         "logs/population.log",
     conda:
         "../../environment.yml"
+    resources:
+        mem_mb=megabytes("population"),
+        runtime=minutes("population"),
     params:
         planned=PLAN.digests["population"],
         settings=PLAN.settings_of("population"),

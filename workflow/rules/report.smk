@@ -18,6 +18,9 @@ rule report:
         "logs/report.log",
     conda:
         "../../environment.yml"
+    resources:
+        mem_mb=megabytes("report"),
+        runtime=minutes("report"),
     params:
         planned=PLAN.digests["population"],
         settings=PLAN.settings_of("report"),

@@ -7,6 +7,9 @@ rule root:
         "logs/root.log",
     conda:
         "../../environment.yml"
+    resources:
+        mem_mb=megabytes("root"),
+        runtime=minutes("root"),
     params:
         code=PLAN.code["root"],
     message:

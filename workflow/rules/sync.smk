@@ -9,6 +9,9 @@ rule sync:
         "logs/sync/{session}.log",
     conda:
         "../../environment.yml"
+    resources:
+        mem_mb=megabytes("sync"),
+        runtime=minutes("sync"),
     params:
         planned=planned("sync"),
         settings=settings("sync"),

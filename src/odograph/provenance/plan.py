@@ -18,11 +18,21 @@ from pathlib import Path
 from typing import Any
 
 from odograph.errors import InputError
-from odograph.provenance.canonical import canonical_json, digest_text, readable_json
+from odograph.provenance.canonical import canonical_json
+from odograph.provenance.effort import NO_EFFORT, Effort, SettledShards, megabytes, minutes, session_effort
 from odograph.provenance.files import write_if_changed
 from odograph.provenance.fingerprint import code_fingerprint
-from odograph.provenance.layout import PLAN, plan_folder, shard_of
+from odograph.provenance.layout import PLAN, shard_of
+from odograph.provenance.plan_files import (
+    planned_intake,
+    some_missing,
+    stamps_of,
+    write_session,
+    write_source,
+    write_study,
+)
 from odograph.provenance.survey import Request, survey
+from odograph.settings.all import Settings
 from odograph.settings.load import load_settings, read_sessions, resolve_session
 
 STEPS = (
@@ -50,7 +60,7 @@ STAGES_READ = {
     "root": (),
     "report": ("study", "intake", "sync", "behaviour", "encoding", "population", "figures"),
 }
-_CACHE_FORMAT = 2
+_CACHE_FORMAT = 3
 _READER = "odograph.steps.survey_recordings"
 
 
@@ -64,8 +74,8 @@ class Plan:
         All sessions of the table, sorted.
     unreadable : mapping of str to dict
         The finding that tells why, for each session whose recording cannot be used.
-    shards : int
-        Jobs that the units of a session are spread over.
+    shards : mapping of str to int
+        Jobs that the units of a session are spread over, by session.
     digests : mapping of str to str
         Digest of every plan file, by ``session/step``.
     settings : mapping of str to str
@@ -74,16 +84,19 @@ class Plan:
         Code fingerprint of every step.
     origins : mapping of str to dict
         By session: ``animal`` and ``regions`` of its units.
+    efforts : mapping of str to Effort
+        The size of the work, by session.
     """
 
     sessions: tuple[str, ...]
     unreadable: Mapping[str, Mapping[str, Any]]
-    shards: int
+    shards: Mapping[str, int]
     digests: Mapping[str, str]
     settings: Mapping[str, str]
     code: Mapping[str, str]
     figure_formats: tuple[str, ...] = field(default=("png",))
     origins: Mapping[str, Mapping[str, Any]] = field(default_factory=dict)
+    efforts: Mapping[str, Effort] = field(default_factory=dict)
 
     @property
     def readable(self) -> tuple[str, ...]:
@@ -96,9 +109,25 @@ class Plan:
         regions = {
             unit: region
             for unit, region in origin["regions"].items()
-            if shard_of(session, int(unit), self.shards) == shard
+            if shard_of(session, int(unit), self.shards[session]) == shard
         }
         return canonical_json({"animal": origin["animal"], "regions": regions})
+
+    @property
+    def units(self) -> int:
+        """The units of the whole study."""
+        return sum(effort.units for effort in self.efforts.values())
+
+    def megabytes(self, step: str, session: str | None = None) -> int:
+        """Memory to ask a cluster for."""
+        return megabytes(step, self._effort_of(session), len(self.sessions), self.units)
+
+    def minutes(self, step: str, session: str | None = None) -> int:
+        """Time to ask a cluster for."""
+        return minutes(step, self._effort_of(session), self.shards.get(session or "", 1), self.units)
+
+    def _effort_of(self, session: str | None) -> Effort:
+        return self.efforts.get(session or "", NO_EFFORT)
 
     def settings_of(self, step: str, session: str | None = None) -> str:
         """The settings a step reads, as canonical JSON."""
@@ -142,7 +171,7 @@ def make_plan(
     if main_process:
         intake = {id(model): canonical_json(model.intake) for model in own.values()}
         requests = [Request(row.session, row.nwb, intake[id(own[row.session])]) for row in rows]
-        cache = _refresh(requests, cache, settings.study, rows)
+        cache = _refresh(requests, cache, own, rows)
     sessions = cache["sessions"]
     digests = {
         f"{session}/{step}": digest
@@ -152,7 +181,7 @@ def make_plan(
     return Plan(
         sessions=tuple(row.session for row in rows),
         unreadable={name: entry["error"] for name, entry in sessions.items() if entry["error"] is not None},
-        shards=settings.study.shards_per_session,
+        shards={name: entry["shards"] for name, entry in sessions.items()},
         digests=digests,
         settings=_settings_texts(settings, own),
         code=code,
@@ -163,6 +192,11 @@ def make_plan(
                 "regions": sessions.get(row.session, {}).get("regions", {}),
             }
             for row in rows
+        },
+        efforts={
+            row.session: _effort(own[row.session], sessions[row.session])
+            for row in rows
+            if row.session in sessions
         },
     )
 
@@ -208,13 +242,13 @@ def _read_cache() -> dict[str, Any]:
 
 
 def _refresh(
-    requests: Sequence[Request], cache: dict[str, Any], study: Any, rows: Sequence[Any]
+    requests: Sequence[Request], cache: dict[str, Any], own: Mapping[str, Settings], rows: Sequence[Any]
 ) -> dict[str, Any]:
     """Survey the recordings that moved, and write the plan files whose content changed."""
     reader = code_fingerprint(_READER, cache["code"])
-    shards = study.shards_per_session
+    settled = SettledShards()
     known = cache["sessions"]
-    keys = {request.session: _key(request, reader, known.get(request.session)) for request in requests}
+    keys = {request.session: stamps_of(request, reader, known.get(request.session)) for request in requests}
     moved = [
         request
         for request in requests
@@ -231,22 +265,31 @@ def _refresh(
             answer = answers[session]
             entry = {"error": answer.get("error"), "links": answer.get("links", []), "shards": None}
             entry |= {"animal": answer.get("animal"), "regions": answer.get("regions", {})}
-            entry["key"] = _key(request, reader, entry) if answer.get("settled", True) else None
+            entry |= {"units": len(answer.get("units", {})), "duration_s": answer.get("duration_s")}
+            entry["key"] = stamps_of(request, reader, entry) if answer.get("settled", True) else None
         else:
             answer, entry = None, dict(known[session])
-        if answer is not None or entry["shards"] != shards or _some_missing(session, entry):
-            _write_session(session, answer or _planned_intake(session), entry, shards)
-        _write_source(request, study)
+        study, shards = own[session].study, 1
+        if entry["error"] is None:
+            shards = settled.of(session, study, _effort(own[session], entry))
+        if answer is not None or entry["shards"] != shards or some_missing(session, entry):
+            write_session(session, answer or planned_intake(session), entry, shards)
+        write_source(request, study)
         entries[session] = entry
     fresh = {
         "format": _CACHE_FORMAT,
         "code": cache["code"],
         "sessions": entries,
-        "study": _write_study(rows, entries, shards),
+        "study": write_study(rows, entries),
     }
     write_if_changed(PLAN / "cache.json", json.dumps(fresh, sort_keys=True))
+    settled.keep()
     _tell_unreadable(entries, study.on_bad_session)
     return fresh
+
+
+def _effort(settings: Settings, entry: Mapping[str, Any]) -> Effort:
+    return session_effort(settings, entry["units"], entry["duration_s"])
 
 
 def _no_file(request: Request) -> dict[str, Any]:
@@ -257,92 +300,6 @@ def _no_file(request: Request) -> dict[str, Any]:
         remedy="correct the path in the sessions table; it is relative to the folder the workflow is run in",
     )
     return {"error": error.finding() | {"file": request.nwb}, "settled": False}
-
-
-def _key(request: Request, reader: str, entry: Mapping[str, Any] | None) -> list[Any] | None:
-    """What a recording and the files it links to look like from outside: path, size, time stamp, inode."""
-    stamps = []
-    for path in (request.nwb, *(entry["links"] if entry else ())):
-        try:
-            stat = os.stat(path)  # noqa: PTH116 (a plain call: this runs for every session at every start)
-        except OSError:
-            return None
-        stamps.append([path, stat.st_size, stat.st_mtime_ns, stat.st_ino])
-    return [stamps, digest_text(request.settings), reader]
-
-
-def _some_missing(session: str, entry: Mapping[str, Any]) -> bool:
-    folder = str(plan_folder(session))
-    return not all(os.path.exists(f"{folder}/{step}.json") for step in entry["digests"])  # noqa: PTH110
-
-
-def _planned_intake(session: str) -> dict[str, Any]:
-    return json.loads((plan_folder(session) / "intake.json").read_bytes())
-
-
-def _write_session(session: str, answer: Mapping[str, Any], entry: dict[str, Any], shards: int) -> None:
-    """Write one session's plan files: for each job the digests of what it reads from the recording."""
-    signals, units = answer.get("signals", {}), answer.get("units", {})
-    documents: dict[str, Any] = {}
-    if answer.get("error") is not None:
-        documents["intake"] = {"error": answer["error"]}
-    else:
-        documents["intake"] = {"inventory": answer["inventory"], "signals": signals, "units": units}
-        documents["sync"] = {"signals": _chosen(signals, ("tracking", "frame_pulses"))}
-        documents["behaviour"] = {
-            "signals": {name: digest for name, digest in signals.items() if name != "frame_pulses"}
-        }
-        for shard in range(shards):
-            documents[f"shard-{shard}"] = {
-                "units": {
-                    unit: digest
-                    for unit, digest in units.items()
-                    if shard_of(session, int(unit), shards) == shard
-                }
-            }
-    folder = plan_folder(session)
-    entry["digests"] = {}
-    for step, document in documents.items():
-        text = readable_json(document)
-        write_if_changed(folder / f"{step}.json", text)
-        entry["digests"][step] = digest_text(text)
-    entry["shards"] = shards
-
-
-def _chosen(signals: Mapping[str, str], names: Sequence[str]) -> dict[str, str]:
-    return {name: signals[name] for name in names if name in signals}
-
-
-def _write_source(request: Request, study: Any) -> None:
-    """Tell the jobs where the recording lies and how to read it; no rule depends on this file."""
-    source = {
-        "nwb": request.nwb,
-        "intake": json.loads(request.settings),
-        "on_bad_session": study.on_bad_session,
-    }
-    write_if_changed(plan_folder(request.session) / "source.json", readable_json(source))
-
-
-def _write_study(
-    rows: Sequence[Any], entries: Mapping[str, Mapping[str, Any]], shards: int
-) -> dict[str, str]:
-    """Write what the population depends on besides products: who belongs to it."""
-    document = {
-        "sessions": [
-            {
-                "session": row.session,
-                "animal": row.animal,
-                "group": row.group,
-                "settings": row.overrides,
-                "readable": entries[row.session]["error"] is None,
-            }
-            for row in rows
-        ],
-        "shards": shards,
-    }
-    text = readable_json(document)
-    write_if_changed(PLAN / "population.json", text)
-    return {"population": digest_text(text)}
 
 
 def _tell_unreadable(entries: Mapping[str, Mapping[str, Any]], on_bad_session: str) -> None:

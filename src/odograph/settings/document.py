@@ -40,7 +40,7 @@ TABLE_END = "<!-- end of the settings -->"
 MATTERS = (
     "study.sessions_table",
     "study.on_bad_session",
-    "study.shards_per_session",
+    "study.shard_minutes",
     "intake.position_place",
     "intake.front_point",
     "intake.back_point",

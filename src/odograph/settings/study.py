@@ -21,9 +21,17 @@ class StudySettings(StageSettings):
         "What a session that cannot be used does: it is left out by name and the rest goes on, "
         "or the run stops.",
     )
-    shards_per_session: int = setting(
-        2,
-        "Number of jobs the units of one session are spread over; the results do not depend on it.",
+    shard_minutes: float = setting(
+        5.0,
+        "Predicted time of the fits of one job: a session has as many jobs (shards) as that takes. Settled "
+        "when the session is first planned, and kept; the results do not depend on it.",
+        unit="min",
+        gt=0,
+        le=1440,
+    )
+    shards_per_session: int | None = setting(
+        None,
+        "Number of jobs the units of every session are spread over, instead of what shard_minutes gives.",
         unit="jobs",
         ge=1,
         le=64,

@@ -57,7 +57,7 @@ def _documents(step: Step, members: list[dict[str, Any]]) -> dict[str, list[dict
 
 def _shards(step: Step, members: list[dict[str, Any]], name: str) -> Iterator[pd.DataFrame]:
     for row in members:
-        for shard in range(step.plan["shards"]) if row["readable"] else ():
+        for shard in range(row["shards"]) if row["readable"] else ():
             yield read_table(step.use(layout.shard_folder(row["session"], shard) / f"{name}.parquet"))
 
 

@@ -68,7 +68,7 @@ def _miniatures(step: Step, members: list[dict[str, Any]], settings: Any) -> dic
 
     drawn = {}
     for row in members:
-        for shard in range(step.plan["shards"]) if row["readable"] else ():
+        for shard in range(row["shards"]) if row["readable"] else ():
             arrays = read_arrays(step.use(layout.shard_folder(row["session"], shard) / "curves.npz"))
             curves: dict[int, dict[str, Any]] = {}
             for name, values in arrays.items():

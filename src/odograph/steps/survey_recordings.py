@@ -35,8 +35,8 @@ def survey_recording(session: str, nwb: str, settings: IntakeSettings) -> dict[s
     -------
     dict
         ``inventory`` (digest), ``signals`` and ``units`` (digests by name), ``links`` (paths of other files
-        that it links to), ``animal`` and ``regions`` (by unit) as the file names them; or ``error`` (a
-        finding) and ``settled``, whether reading again would end the same.
+        that it links to), ``animal`` and ``regions`` (by unit) as the file names them, ``duration_s`` of the
+        tracking; or ``error`` (a finding) and ``settled``, whether reading again would end the same.
     """
     try:
         recording = read_recording(nwb, settings)
@@ -51,6 +51,7 @@ def survey_recording(session: str, nwb: str, settings: IntakeSettings) -> dict[s
         "units": {str(unit): digest for unit, digest in unit_digests(recording).items()},
         "links": linked_files(nwb),
         "animal": document["subject"]["subject_id"],
+        "duration_s": _duration_s(document),
         "regions": {str(unit["unit"]): unit["region"] for unit in document["units"] if unit["region"]},
     }
 
@@ -87,6 +88,14 @@ def linked_files(nwb: str) -> list[str]:
     with h5py.File(nwb, "r") as file:
         walk(file)
     return sorted(found)
+
+
+def _duration_s(document: Mapping[str, Any]) -> float | None:
+    """From the first to the last sample of the tracking."""
+    for signal in document["signals"]:
+        if signal["signal"] == "tracking" and signal["samples"]:
+            return signal["last_s"] - signal["first_s"]
+    return None
 
 
 def inventory_digest(document: Mapping[str, Any]) -> str:
