@@ -10,6 +10,7 @@ from odograph.provenance.effort import (
     NO_EFFORT,
     Effort,
     SettledShards,
+    keep_shards_of,
     megabytes,
     minutes,
     session_effort,
@@ -99,6 +100,16 @@ def test_a_damaged_file_is_settled_anew(study_folder, text):
     assert settled.of("a", StudySettings(), effort()) == 1
     settled.keep()
     assert json.loads(Path("results/plan/shards.json").read_text())["a"]["shards"] == 1
+
+
+def test_a_study_run_again_elsewhere_is_divided_as_it_was(study_folder):
+    for shard in range(3):
+        record = Path(f"results/sessions/a/encoding/shard-{shard}/record.json")
+        record.parent.mkdir(parents=True)
+        record.write_text("{}")
+    keep_shards_of(Path("results"), Path())
+    assert SettledShards().of("a", StudySettings(shard_minutes=77.0), effort(units=1)) == 3
+    assert SettledShards().of("b", StudySettings(), effort(units=1)) == 1
 
 
 @pytest.mark.parametrize("step", ["intake", "sync", "behaviour", "encoding", "cards", "population", "root"])

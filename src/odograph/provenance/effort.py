@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from pathlib import Path
 from typing import Any
 
 from odograph.errors import InputError
@@ -145,7 +146,7 @@ class SettledShards:
         try:
             kept = read_json(self.file)
             self._kept = {
-                session: {"shards": int(entry["shards"]), "minutes": float(entry["minutes"])}
+                session: {"shards": int(entry["shards"]), "minutes": entry["minutes"]}
                 for session, entry in kept.items()
                 if 1 <= int(entry["shards"]) <= MOST_SHARDS
             }
@@ -157,7 +158,7 @@ class SettledShards:
         if study.shards_per_session is not None:
             return study.shards_per_session
         kept = self._kept.get(session)
-        if kept is None or kept["minutes"] != study.shard_minutes:
+        if kept is None or kept["minutes"] not in (None, study.shard_minutes):
             kept = {"shards": shards_for(effort, study.shard_minutes), "minutes": study.shard_minutes}
             self._kept[session] = kept
         return kept["shards"]
@@ -165,3 +166,23 @@ class SettledShards:
     def keep(self) -> None:
         """Write the numbers, those of sessions that are out of the table for now among them."""
         write_if_changed(self.file, readable_json(self._kept))
+
+
+def keep_shards_of(results: Path, study: Path) -> None:
+    """Give a study the shards of finished results, whatever it would settle on itself.
+
+    An analysis that is run again from its archive has the same records only if it is divided as it was.
+
+    Parameters
+    ----------
+    results : Path
+        A folder of finished results.
+    study : Path
+        The folder of the study that is to be run.
+    """
+    shards: dict[str, int] = {}
+    for record in results.glob("sessions/*/encoding/shard-*/record.json"):
+        session = record.parents[2].name
+        shards[session] = shards.get(session, 0) + 1
+    kept = {session: {"shards": number, "minutes": None} for session, number in shards.items()}
+    write_if_changed(study / SettledShards.file, readable_json(kept))

@@ -14,6 +14,7 @@ from pathlib import Path
 from odograph.errors import InputError, OdographError
 from odograph.provenance.archive.bag import bag_problems
 from odograph.provenance.archive.unpack import unpack
+from odograph.provenance.effort import keep_shards_of
 from odograph.provenance.files import file_digest
 
 _STEPS_DONE = re.compile(r"(\d+) of (\d+) steps \(")
@@ -57,6 +58,8 @@ def open_archive(archive: Path, work: Path) -> Path:
 def lay_out(bag: Path, study: Path, data: Path | None) -> None:
     """Make a study's folder from an archive: settings, workflow, library and recordings, but no results.
 
+    Sessions get as many shards as they had.
+
     Recordings are linked to, not copied.
 
     Parameters
@@ -83,6 +86,7 @@ def lay_out(bag: Path, study: Path, data: Path | None) -> None:
         if path.is_file() and name.parts[0] not in _NOT_LAID_OUT and name.as_posix() not in enclosed:
             (study / name).parent.mkdir(parents=True, exist_ok=True)
             shutil.copyfile(path, study / name)
+    keep_shards_of(payload / "results", study)
     (study / "README.md").write_text("An analysis run again from its archive.\n", encoding="utf-8")
     present = [path for path in sorted(data.rglob("*")) if path.is_file()] if data else []
     missing = []
