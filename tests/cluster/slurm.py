@@ -3,11 +3,11 @@
     python tests/cluster/slurm.py up FOLDER [--nodes 2] [--processors 2]
     python tests/cluster/slurm.py down FOLDER
 
-`up` starts a controller and nodes that listen on the loopback address only, and prints the line that makes a
-shell use them; `down` cancels their jobs and ends them. It needs root and the Debian packages slurmctld, slurmd,
-slurm-client and munge. Nodes claim memory and processors that need not exist. What Slurm writes lies in FOLDER;
-besides it there is the link /etc/slurm/slurm.conf while the cluster is up, since jobs look for their
-configuration there.
+`up` starts a controller and nodes that listen on the loopback address only, and prints the line that makes
+a shell use them; `down` cancels their jobs and ends them. It needs root and the Debian packages slurmctld,
+slurmd, slurm-client and munge. Nodes claim memory and processors that need not exist. What Slurm writes lies
+in FOLDER; besides it there is the link /etc/slurm/slurm.conf while the cluster is up, since jobs look for
+their configuration there.
 """
 
 from __future__ import annotations
@@ -27,9 +27,9 @@ from pathlib import Path
 PROGRAMS = ("munged", "slurmctld", "slurmd", "sbatch", "squeue", "scontrol", "scancel", "sinfo")
 LINK = Path("/etc/slurm/slurm.conf")
 HOSTS = Path("/etc/hosts")
-#: What a Slurm needs that has no systemd, no control groups and no accounting. A job that takes more memory than
-#: it asked for is killed; a node that does not answer is given up after ten seconds, a controller keeps what it
-#: knows of finished jobs for an hour.
+#: What a Slurm needs that has no systemd, no control groups and no accounting. A job that takes more memory
+#: than it asked for is killed; a node that does not answer is given up after ten seconds, a controller keeps
+#: what it knows of finished jobs for an hour.
 CONFIGURATION = """\
 ClusterName=bench
 SlurmctldHost={host}(127.0.0.1)
