@@ -2,6 +2,23 @@
 
 from __future__ import annotations
 
+import re
+
+# The two blocks of control characters, and the marks that turn the direction of writing.
+_CONTROL = re.compile("[\x00-\x08\x0b-\x1f\x7f-\x9f\u202a-\u202e\u2066-\u2069]")
+
+
+def printable(text: str) -> str:
+    """Text from a file as it can be shown and kept anywhere.
+
+    Control characters other than line ends and tabs would reach the terminal, and bytes that were no UTF-8
+    could not be written again; both become their escapes.
+    """
+    if text.isascii() and text.isprintable():
+        return text
+    text = text.encode("utf-8", "backslashreplace").decode()
+    return _CONTROL.sub(lambda match: ascii(match.group())[1:-1], text)
+
 
 class OdographError(Exception):
     """An expected failure, told in one message.
@@ -29,11 +46,11 @@ class OdographError(Exception):
         expected: str | None = None,
         remedy: str | None = None,
     ) -> None:
-        self.found = found
-        self.file = str(file) if file is not None else None
-        self.place = place
-        self.expected = expected
-        self.remedy = remedy
+        self.found = printable(found)
+        self.file = printable(str(file)) if file is not None else None
+        self.place = printable(place) if place is not None else None
+        self.expected = printable(expected) if expected is not None else None
+        self.remedy = printable(remedy) if remedy is not None else None
         super().__init__(self.message())
 
     def message(self) -> str:
@@ -71,3 +88,11 @@ class ChangedInputError(OdographError):
 
 class RecordError(OdographError):
     """A record is missing, damaged or contradicts its products."""
+
+
+class DiskFullError(OdographError):
+    """There is no room for a file."""
+
+
+class DamagedError(OdographError):
+    """A product of another job is not what its record says, or its record cannot be read."""

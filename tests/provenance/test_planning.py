@@ -8,7 +8,7 @@ from pathlib import Path
 import pytest
 
 from odograph.errors import InputError, SettingsError
-from odograph.provenance import plan as planning
+from odograph.provenance import plan_files as planning
 from odograph.provenance import survey as surveying
 from odograph.provenance.layout import shard_of
 from odograph.provenance.plan import STAGES_READ, STEPS, make_plan
@@ -217,6 +217,62 @@ def test_a_damaged_cache_is_made_anew(recordings):
     Path("results/plan/cache.json").write_text("{")
     assert make_plan({}) == first
     assert recordings.read == ["a", "b"]
+
+
+@pytest.mark.parametrize("old, new", [('"a.nwb"', '"b.nwb"'), ("sha256:", "sha256;"), ("{", "[")])
+def test_a_cache_with_a_changed_byte_is_made_anew(recordings, old, new):
+    first = make_plan({})
+    path = Path("results/plan/cache.json")
+    whole = path.read_text()
+    path.write_text(whole.replace(old, new, 1))
+    assert path.read_text() != whole
+    assert make_plan({}) == first
+    assert recordings.read == ["a", "b"]
+    assert path.read_text() == whole
+
+
+@pytest.mark.parametrize("step, read", [("sync", []), ("shard-0", []), ("intake", ["a"])])
+@pytest.mark.parametrize("content", ["", "{", '{"units": {}}'])
+def test_a_damaged_plan_file_is_written_anew(recordings, step, read, content):
+    first = make_plan({})
+    path = Path(f"results/plan/sessions/a/{step}.json")
+    whole = path.read_text()
+    path.write_text(content)
+    assert make_plan({}) == first
+    assert path.read_text() == whole
+    assert recordings.read == read
+
+
+def test_a_recording_that_changes_while_it_is_read_is_read_again(recordings, monkeypatch, capsys):
+    def replaced_once(requests):
+        answers = recordings(requests)
+        if "a" in answers and not recordings.content:
+            recordings.content["a"] = {
+                "inventory": "sha256:j",
+                "signals": SIGNALS,
+                "units": {"7": "sha256:7"},
+            }
+            Path("new").write_text("the next sorting")
+            Path("new").replace("a.nwb")
+        return answers
+
+    monkeypatch.setattr(planning, "survey", replaced_once)
+    plan = make_plan({})
+    assert json.loads(Path("results/plan/sessions/a/intake.json").read_text())["units"] == {"7": "sha256:7"}
+    assert recordings.read == ["a"]
+    assert "a.nwb: changed while it was read" in capsys.readouterr().err
+    assert make_plan({}) == plan and recordings.read == []
+
+
+def test_a_recording_that_never_rests_is_refused(recordings, monkeypatch):
+    def written_to(requests):
+        with Path("b.nwb").open("a") as file:
+            file.write("more")
+        return recordings(requests)
+
+    monkeypatch.setattr(planning, "survey", written_to)
+    with pytest.raises(InputError, match=r"b.nwb: .*changed 3 times(.|\n)*wait until"):
+        make_plan({})
 
 
 def test_every_step_says_what_it_reads():

@@ -7,10 +7,12 @@ from pathlib import Path
 
 import pytest
 
-from odograph.errors import ChangedInputError, InputError, SettingsError
+from odograph.errors import ChangedInputError, DiskFullError, InputError, SettingsError
+from odograph.provenance import records
 from odograph.provenance.canonical import digest_text
 from odograph.provenance.files import write_json
 from odograph.provenance.fingerprint import code_fingerprint
+from odograph.provenance.records import RecordDraft
 from odograph.provenance.step import failure_in, left_out_because, refuse_if_failed, run_step
 
 RULE = "sync"
@@ -145,6 +147,55 @@ def test_the_reason_of_a_failure_is_handed_on():
     assert "it jumps" in finding["found"]
 
 
+@pytest.mark.parametrize(
+    "error, status",
+    [(DiskFullError("no room"), 74), (ChangedInputError("changed"), 75), (OSError(28, "full"), 74)],
+)
+def test_no_session_is_left_out_for_a_fault_of_the_run(here, error, status):
+    def work(step):
+        raise error
+
+    def leave_out(step, error):
+        raise AssertionError("the session is not at fault")
+
+    assert run(work, leave_out) == status
+    assert not Path("out/clock.json").exists()
+
+
+@pytest.mark.parametrize("damage", ["product", "record"])
+def test_a_damaged_input_is_removed_and_made_again_by_the_next_run(here, damage):
+    made = RecordDraft("intake", keys={}, settings={}, code={})
+    write_json("up/inventory.json", {"verdict": "pass"})
+    made.add_product("up/inventory.json")
+    made.write("up/record.json")
+    damaged = Path("up/inventory.json" if damage == "product" else "up/record.json")
+    damaged.write_text(damaged.read_text().replace("pass", "fail").replace("intake", "sync"))
+    records._producers_in.cache_clear()
+
+    def leave_out(step, error):
+        raise AssertionError("the session is not at fault")
+
+    assert run(lambda step: step.use("up/inventory.json"), leave_out) == 75
+    assert not damaged.exists() and len(list(Path("up").iterdir())) == 1
+    told = Path("logs/sync/one.log").read_text()
+    assert f"{damaged}: " in told and "it was removed" in told and "run snakemake again" in told
+
+
+def test_a_job_that_outlived_its_run_writes_no_product(here, monkeypatch):
+    write_json("results/plan/run.lock", {"run": 8})
+    monkeypatch.setenv("ODOGRAPH_RUN", "7")
+    assert run(lambda step: step.write_json("clock", {})) == 75
+    assert not Path("out/clock.json").exists() and not Path("out/record.json").exists()
+
+
+def test_a_new_log_leaves_the_one_of_a_job_that_still_writes_alone(here):
+    assert run(lambda step: step.write_json("clock", {})) == 0
+    with Path("logs/sync/one.log").open("a") as orphan:
+        assert run(lambda step: step.write_json("clock", {})) == 0
+        orphan.write("from before")
+    assert "from before" not in Path("logs/sync/one.log").read_text()
+
+
 def test_inputs_that_are_missing_are_named(here):
-    assert run(lambda step: step.use("nowhere.json")) == 65
+    assert run(lambda step: step.use("nowhere.json")) == 75
     assert "nowhere.json" in Path("logs/sync/one.log").read_text()

@@ -4,18 +4,23 @@
 # settings that its step reads and on the fingerprint of the step's code. The last three are params as text: the
 # engine compares params, and it does not compare large inputs by content nor look into imported modules.
 
+import sys
+
 from snakemake.exceptions import WorkflowError
 
 from odograph.errors import OdographError
 from odograph.figures.captions import POPULATION_FIGURES
 from odograph.provenance.plan import make_plan, use_this_python
+from odograph.provenance.running import planning
 
 try:
-    PLAN = make_plan(
-        config,
-        main_process=workflow.is_main_process,
-        config_file=str(workflow.configfiles[-1]) if workflow.configfiles else None,
-    )
+    # One run at a time; a job that reads this file again, and a look beside a run, take the plan that is there.
+    with planning(sys.argv[1:], workflow.is_main_process) as alone:
+        PLAN = make_plan(
+            config,
+            main_process=alone,
+            config_file=str(workflow.configfiles[-1]) if workflow.configfiles else None,
+        )
 except OdographError as error:
     raise WorkflowError(str(error)) from None
 

@@ -15,4 +15,4 @@ rule root:
     message:
         "the run root"
     shell:
-        "python -m odograph.steps.root --code {params.code} > {log} 2>&1"
+        "python -m odograph.steps.root --code {params.code} --log {log}"

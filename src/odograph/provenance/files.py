@@ -11,14 +11,16 @@ import hashlib
 import io
 import json
 import math
-import os
 import zipfile
-from collections.abc import Callable, Iterator, Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from odograph.errors import InputError
 from odograph.provenance.canonical import readable_json
+from odograph.provenance.renaming import renamed_into_place
+
+Allowed = Callable[[], None] | None
 
 if TYPE_CHECKING:
     import numpy as np
@@ -28,41 +30,15 @@ if TYPE_CHECKING:
     Table = pd.DataFrame | pa.Table | Mapping[str, Any] | Sequence[Mapping[str, Any]]
 
 
-@contextlib.contextmanager
-def renamed_into_place(path: str | Path) -> Iterator[Path]:
-    """Give a temporary name beside `path`; when the block ends well, flush it to disk and rename it.
-
-    Parameters
-    ----------
-    path : str or Path
-        The file to write. Its folder is made when missing.
-
-    Yields
-    ------
-    Path
-        Where to write. It ends in the same suffix as `path`.
-    """
-    target = Path(path)
-    target.parent.mkdir(parents=True, exist_ok=True)
-    temporary = target.with_name(f".{target.stem}.{os.getpid()}.tmp{target.suffix}")
-    try:
-        yield temporary
-        with temporary.open("rb") as handle:
-            os.fsync(handle.fileno())
-        temporary.replace(target)
-    finally:
-        temporary.unlink(missing_ok=True)
-
-
-def write_bytes(path: str | Path, data: bytes) -> None:
-    """Write bytes to a file, by rename."""
-    with renamed_into_place(path) as temporary:
+def write_bytes(path: str | Path, data: bytes, allowed: Allowed = None) -> None:
+    """Write bytes to a file, by rename; `allowed` is asked right before it (as in `renamed_into_place`)."""
+    with renamed_into_place(path, allowed) as temporary:
         temporary.write_bytes(data)
 
 
-def write_text(path: str | Path, text: str) -> None:
+def write_text(path: str | Path, text: str, allowed: Allowed = None) -> None:
     """Write text to a file as UTF-8, by rename."""
-    write_bytes(path, text.encode())
+    write_bytes(path, text.encode(), allowed)
 
 
 def write_if_changed(path: str | Path, text: str) -> bool:
@@ -80,9 +56,9 @@ def write_if_changed(path: str | Path, text: str) -> bool:
     return True
 
 
-def write_json(path: str | Path, document: Any) -> None:
+def write_json(path: str | Path, document: Any, allowed: Allowed = None) -> None:
     """Write a document as indented JSON with sorted keys; numbers that are not finite become null."""
-    write_text(path, readable_json(document))
+    write_text(path, readable_json(document), allowed)
 
 
 def read_json(path: str | Path) -> Any:
@@ -114,7 +90,7 @@ def file_digest(path: str | Path) -> str:
 # Tables
 
 
-def write_table(path: str | Path, table: Table) -> None:
+def write_table(path: str | Path, table: Table, allowed: Allowed = None) -> None:
     """Write a table as Parquet: zstd, no index, no library's own metadata, NaN as null.
 
     Parameters
@@ -124,10 +100,12 @@ def write_table(path: str | Path, table: Table) -> None:
     table : DataFrame, pyarrow Table, mapping of columns, or sequence of rows
         A mapping holds one array or list per column, all of equal length; rows are mappings with the same
         keys in the same order.
+    allowed : callable, optional
+        Asked right before the rename.
     """
     import pyarrow.parquet as pq
 
-    with renamed_into_place(path) as temporary:
+    with renamed_into_place(path, allowed) as temporary:
         pq.write_table(as_arrow(table), temporary, compression="zstd", write_statistics=False)
 
 
@@ -142,12 +120,12 @@ def read_columns(path: str | Path, columns: Sequence[str] | None = None) -> dict
     return {name: _column_array(table.column(name)) for name in table.column_names}
 
 
-def write_tsv(path: str | Path, table: Table) -> None:
+def write_tsv(path: str | Path, table: Table, allowed: Allowed = None) -> None:
     """Write a table as tab-separated text: shortest floats, `true` and `false`, blank for missing."""
     columns = as_arrow(table).to_pydict()
     lines = ["\t".join(columns)]
     lines += ["\t".join(map(_tsv_cell, row)) for row in zip(*columns.values(), strict=True)]
-    write_text(path, "\n".join(lines) + "\n")
+    write_text(path, "\n".join(lines) + "\n", allowed)
 
 
 def as_arrow(table: Table) -> pa.Table:
@@ -230,7 +208,7 @@ def _tsv_cell(value: Any) -> str:
 # Named arrays
 
 
-def write_arrays(path: str | Path, arrays: Mapping[str, np.ndarray]) -> None:
+def write_arrays(path: str | Path, arrays: Mapping[str, np.ndarray], allowed: Allowed = None) -> None:
     """Write named arrays as an uncompressed npz file whose bytes depend on the arrays only.
 
     Parameters
@@ -239,8 +217,10 @@ def write_arrays(path: str | Path, arrays: Mapping[str, np.ndarray]) -> None:
         The file to write.
     arrays : mapping of str to ndarray
         Names may hold slashes. Objects are refused.
+    allowed : callable, optional
+        Asked right before the rename.
     """
-    write_bytes(path, pack_arrays(arrays))
+    write_bytes(path, pack_arrays(arrays), allowed)
 
 
 def pack_arrays(arrays: Mapping[str, np.ndarray]) -> bytes:

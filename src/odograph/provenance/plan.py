@@ -9,7 +9,6 @@ fingerprint of its code: those say everything that can change its result, and no
 
 from __future__ import annotations
 
-import json
 import os
 import sys
 from collections.abc import Mapping, Sequence
@@ -20,18 +19,19 @@ from typing import Any
 from odograph.errors import InputError
 from odograph.provenance.canonical import canonical_json
 from odograph.provenance.effort import NO_EFFORT, Effort, SettledShards, megabytes, minutes, session_effort
-from odograph.provenance.files import write_if_changed
 from odograph.provenance.fingerprint import code_fingerprint
+from odograph.provenance.known import keep_known, read_known
 from odograph.provenance.layout import PLAN, shard_of
 from odograph.provenance.plan_files import (
+    damaged_plan_files,
     planned_intake,
-    some_missing,
     stamps_of,
+    survey_at_rest,
     write_session,
     write_source,
     write_study,
 )
-from odograph.provenance.survey import Request, survey
+from odograph.provenance.survey import Request
 from odograph.settings.all import Settings
 from odograph.settings.load import load_settings, read_sessions, resolve_session
 
@@ -232,12 +232,9 @@ def _settings_texts(settings: Any, own: Mapping[str, Any]) -> dict[str, str]:
 
 
 def _read_cache() -> dict[str, Any]:
-    try:
-        cache = json.loads((PLAN / "cache.json").read_bytes())
-        if cache["format"] == _CACHE_FORMAT:
-            return cache
-    except (FileNotFoundError, ValueError, KeyError, TypeError):
-        pass
+    cache = read_known(PLAN / "cache.json")
+    if cache.get("format") == _CACHE_FORMAT:
+        return cache
     return {"format": _CACHE_FORMAT, "code": {}, "sessions": {}, "study": {}}
 
 
@@ -249,15 +246,18 @@ def _refresh(
     settled = SettledShards()
     known = cache["sessions"]
     keys = {request.session: stamps_of(request, reader, known.get(request.session)) for request in requests}
+    damaged = {session: damaged_plan_files(session, entry) for session, entry in known.items()}
     moved = [
         request
         for request in requests
         if (entry := known.get(request.session)) is None
         or entry["key"] != keys[request.session]
         or entry["key"] is None
+        or "intake" in damaged[request.session]
     ]
     gone = {request.session: _no_file(request) for request in moved if not Path(request.nwb).is_file()}
-    answers = gone | survey([request for request in moved if request.session not in gone])
+    answers, read = survey_at_rest([request for request in moved if request.session not in gone], reader)
+    answers |= gone
     entries = {}
     for request in requests:
         session = request.session
@@ -266,13 +266,16 @@ def _refresh(
             entry = {"error": answer.get("error"), "links": answer.get("links", []), "shards": None}
             entry |= {"animal": answer.get("animal"), "regions": answer.get("regions", {})}
             entry |= {"units": len(answer.get("units", {})), "duration_s": answer.get("duration_s")}
-            entry["key"] = stamps_of(request, reader, entry) if answer.get("settled", True) else None
+            at_rest = read.get(session) == stamps_of(request, reader, None)
+            entry["key"] = (
+                stamps_of(request, reader, entry) if at_rest and answer.get("settled", True) else None
+            )
         else:
             answer, entry = None, dict(known[session])
         study, shards = own[session].study, 1
         if entry["error"] is None:
             shards = settled.of(session, study, _effort(own[session], entry))
-        if answer is not None or entry["shards"] != shards or some_missing(session, entry):
+        if answer is not None or entry["shards"] != shards or damaged[session]:
             write_session(session, answer or planned_intake(session), entry, shards)
         write_source(request, study)
         entries[session] = entry
@@ -282,7 +285,7 @@ def _refresh(
         "sessions": entries,
         "study": write_study(rows, entries),
     }
-    write_if_changed(PLAN / "cache.json", json.dumps(fresh, sort_keys=True))
+    keep_known(PLAN / "cache.json", fresh)
     settled.keep()
     _tell_unreadable(entries, study.on_bad_session)
     return fresh

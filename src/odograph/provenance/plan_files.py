@@ -4,13 +4,18 @@ from __future__ import annotations
 
 import json
 import os
+import sys
 from collections.abc import Mapping, Sequence
 from typing import Any
 
+from odograph.errors import InputError
 from odograph.provenance.canonical import digest_text, readable_json
 from odograph.provenance.files import write_if_changed
 from odograph.provenance.layout import PLAN, plan_folder, shard_of
-from odograph.provenance.survey import Request
+from odograph.provenance.survey import Request, survey
+
+# How often a recording is read that changes meanwhile.
+_READINGS = 3
 
 
 def stamps_of(request: Request, reader: str, entry: Mapping[str, Any] | None) -> list[Any] | None:
@@ -25,10 +30,56 @@ def stamps_of(request: Request, reader: str, entry: Mapping[str, Any] | None) ->
     return [stamps, digest_text(request.settings), reader]
 
 
-def some_missing(session: str, entry: Mapping[str, Any]) -> bool:
-    """Whether a plan file of a session is gone."""
+def survey_at_rest(requests: Sequence[Request], reader: str) -> tuple[dict[str, Any], dict[str, Any]]:
+    """Survey recordings; one that changes while it is read is read again.
+
+    Returns
+    -------
+    tuple of dict
+        By session, the answers of `survey`, and what each recording looked like when its reading began.
+
+    Raises
+    ------
+    InputError
+        A recording changes again and again.
+    """
+    answers: dict[str, Any] = {}
+    before: dict[str, Any] = {}
+    moving = list(requests)
+    for _ in range(_READINGS):
+        before |= {request.session: stamps_of(request, reader, None) for request in moving}
+        answers |= survey(moving)
+        moving = [
+            request for request in moving if stamps_of(request, reader, None) != before[request.session]
+        ]
+        if not moving:
+            return answers, before
+        names = ", ".join(request.nwb for request in moving)
+        print(f"odograph: {names}: changed while it was read; it is read again", file=sys.stderr)
+    raise InputError(
+        f"the recording changed {_READINGS} times while it was read",
+        file=moving[0].nwb,
+        expected="a recording that nobody writes to",
+        remedy="wait until the file is written or copied, then run snakemake again",
+    )
+
+
+def damaged_plan_files(session: str, entry: Mapping[str, Any]) -> set[str]:
+    """The steps whose plan file is gone, or is not what it was when it was written."""
     folder = str(plan_folder(session))
-    return not all(os.path.exists(f"{folder}/{step}.json") for step in entry["digests"])  # noqa: PTH110
+    return {
+        step
+        for step, digest in entry["digests"].items()
+        if digest_text(_content(f"{folder}/{step}.json")) != digest
+    }
+
+
+def _content(path: str) -> str:
+    try:
+        with open(path, encoding="utf-8", newline="") as file:  # noqa: PTH123 (for every session at every start)
+            return file.read()
+    except (OSError, UnicodeDecodeError):
+        return ""
 
 
 def planned_intake(session: str) -> dict[str, Any]:

@@ -10,14 +10,14 @@ from __future__ import annotations
 
 import platform
 import socket
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from datetime import UTC, datetime
 from functools import cache
 from importlib import metadata
 from pathlib import Path
 from typing import Any
 
-from odograph.errors import RecordError
+from odograph.errors import DamagedError, OdographError, RecordError
 from odograph.provenance.canonical import digest_value
 from odograph.provenance.files import file_digest, read_json, write_json
 
@@ -60,14 +60,21 @@ class RecordDraft:
         self._record_id: str | None = None
 
     def add_product_input(self, path: str | Path) -> None:
-        """Note a product of another job as an input, with the identifier of the record that made it."""
+        """Note a product of another job as an input, with the identifier of the record that made it.
+
+        Raises
+        ------
+        DamagedError
+            The product is not what its record says, or the record cannot be read.
+        """
+        producer, wanted = _made_as(Path(path))
+        digest = file_digest(path)
+        if wanted not in (None, digest):
+            raise DamagedError(
+                "the product is not what its record says", file=str(path), expected=f"the content {wanted}"
+            )
         self._add_input(
-            {
-                "kind": "product",
-                "path": Path(path).as_posix(),
-                "digest": file_digest(path),
-                "producer": producer_of(path),
-            }
+            {"kind": "product", "path": Path(path).as_posix(), "digest": digest, "producer": producer}
         )
 
     def add_signal_input(self, signal: str, digest: str, *, file: str, place: str | None) -> None:
@@ -116,15 +123,15 @@ class RecordDraft:
         """Note a finished product and its digest."""
         self.products.append({"path": Path(path).as_posix(), "digest": file_digest(path)} | facts)
 
-    def write(self, path: str | Path) -> None:
-        """Write the record, the last act of a job."""
+    def write(self, path: str | Path, allowed: Callable[[], None] | None = None) -> None:
+        """Write the record, the last act of a job; `allowed` is asked right before it."""
         document = {
             "record_id": self.record_id,
             **self._identity(),
             "products": sorted(self.products, key=lambda product: product["path"]),
             "run": self.run | {"ended": _now()},
         }
-        write_json(path, document)
+        write_json(path, document, allowed)
 
 
 def told_path(file: str | Path) -> str:
@@ -202,18 +209,26 @@ def record_files(folder: str | Path) -> list[Path]:
 
 def producer_of(path: str | Path) -> str | None:
     """The identifier of the record that lists a file among its products; None when there is none."""
-    path = Path(path)
-    return _producers_in(path.parent).get(path.name)
+    return _made_as(Path(path))[0]
+
+
+def _made_as(path: Path) -> tuple[str | None, str | None]:
+    """Of a product the identifier of its record, and the digest that it has there."""
+    return _producers_in(path.parent).get(path.name, (None, None))
 
 
 @cache
-def _producers_in(folder: Path) -> dict[str, str]:
+def _producers_in(folder: Path) -> dict[str, tuple[str, str]]:
     # Within one job the inputs do not change, so each folder is looked at once.
     producers = {}
     for file in record_files(folder):
-        record = read_json(file)
-        for product in record["products"]:
-            producers[Path(product["path"]).name] = record["record_id"]
+        try:
+            record = read_record(file)
+            made = [(Path(product["path"]).name, product["digest"]) for product in record["products"]]
+        except (OdographError, KeyError, TypeError) as error:
+            found = error.found if isinstance(error, OdographError) else f"the record lacks {error}"
+            raise DamagedError(found, file=str(file), expected="a record as its job wrote it") from error
+        producers |= {name: (record["record_id"], digest) for name, digest in made}
     return producers
 
 

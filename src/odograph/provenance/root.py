@@ -19,11 +19,13 @@ from concurrent.futures import ThreadPoolExecutor
 from pathlib import Path
 from typing import Any
 
-from odograph.errors import InputError, RecordError
+from odograph.errors import ChangedInputError, DamagedError, InputError, RecordError
 from odograph.provenance.canonical import digest_value, readable_json
 from odograph.provenance.files import file_digest, read_json, write_if_changed
+from odograph.provenance.known import keep_known, read_known
 from odograph.provenance.layout import PLAN, RESULTS, STORE
 from odograph.provenance.records import read_record, told_path
+from odograph.provenance.running import still_in_charge
 
 ROOT_FORMAT = 1
 ROOT = RESULTS / "root.json"
@@ -88,15 +90,22 @@ def write_root(folder: str | Path = ".") -> str:
     Raises
     ------
     InputError
-        A record cannot be read, or there is none.
-    RecordError
-        A record was changed after it was written.
+        There is no record.
+    DamagedError
+        A record cannot be read, or was changed after it was written.
+    ChangedInputError
+        A recording is not the file any more that the run was planned with.
     """
     folder = Path(folder)
     sessions = _sessions(folder)
     entries = []
     for file in all_record_files(folder):
-        record = read_record(file)
+        try:
+            record = read_record(file)
+        except (InputError, RecordError) as error:
+            raise DamagedError(
+                error.found, file=str(file), expected="a record as its job wrote it"
+            ) from error
         if record["keys"].get("session") in (None, *sessions):
             entries.append({"path": file, "record": record})
     if not entries:
@@ -119,6 +128,7 @@ def write_root(folder: str | Path = ".") -> str:
         "code": code_state(folder),
     }
     document["own_digest"] = digest_value(document)
+    still_in_charge()
     write_if_changed(folder / ROOT, readable_json(document))
     return document["root"]
 
@@ -166,10 +176,7 @@ def _user_files(folder: Path) -> list[dict[str, str]]:
 def _recordings(folder: Path, sessions: list[str]) -> list[dict[str, Any]]:
     """Every recording and the files it links to, by their bytes; those known by their stamps are not read."""
     cache = read_json(folder / PLAN / "cache.json")["sessions"]
-    try:
-        known = read_json(folder / KNOWN_FILES)
-    except InputError:
-        known = {}
+    known = read_known(folder / KNOWN_FILES)
     found, sources = [], {}
     for session in sessions:
         sources[session] = read_json(folder / PLAN / "sessions" / session / "source.json")["nwb"]
@@ -177,14 +184,16 @@ def _recordings(folder: Path, sessions: list[str]) -> list[dict[str, Any]]:
             path = folder / name
             if path.is_file():
                 stat = path.stat()
-                found.append((session, str(name), path, [stat.st_size, stat.st_mtime_ns, stat.st_ino]))
+                stamp = [stat.st_size, stat.st_mtime_ns, stat.st_ino]
+                _refuse_changed(str(name), stamp, cache[session]["key"])
+                found.append((session, str(name), path, stamp))
     fresh = [row for row in found if known.get(row[1], {}).get("stamp") != row[3]]
     digests = dict(zip((row[1] for row in fresh), digests_of(row[2] for row in fresh), strict=True))
     now = {
         name: {"stamp": stamp, "digest": digests.get(name) or known[name]["digest"]}
         for _, name, _, stamp in found
     }
-    write_if_changed(folder / KNOWN_FILES, readable_json(now))
+    keep_known(folder / KNOWN_FILES, now)
     return [
         {
             "session": session,
@@ -197,13 +206,29 @@ def _recordings(folder: Path, sessions: list[str]) -> list[dict[str, Any]]:
     ]
 
 
+def _refuse_changed(name: str, stamp: list[int], key: list[Any] | None) -> None:
+    """The results are those of the file that was planned with; another one must not be bound to them."""
+    planned = {row[0]: row[1:] for row in (key[0] if key else ())}
+    if planned.get(name, stamp) != stamp:
+        raise ChangedInputError(
+            "the recording changed since this run was planned",
+            file=name,
+            expected="the file that was there when the run began",
+            remedy="run snakemake again",
+        )
+
+
 def code_state(folder: Path) -> dict[str, Any]:
     """The commit that the study's folder is at, and whether files that git knows were changed since."""
 
     def git(*arguments: str) -> str | None:
         try:
-            done = subprocess.run(
-                ["git", "-C", str(folder), *arguments], capture_output=True, text=True, timeout=30, check=True
+            done = subprocess.run(  # noqa: S603 (a list of fixed words and a path)
+                ["git", "-C", str(folder), *arguments],  # noqa: S607 (git is where the user's PATH says)
+                capture_output=True,
+                text=True,
+                timeout=30,
+                check=True,
             )
         except (OSError, subprocess.SubprocessError):
             return None

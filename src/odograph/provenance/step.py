@@ -2,7 +2,7 @@
 
 A step module has a function ``work(step)`` that reads the inputs its rule names, calls the library and
 writes the products. `run_step` does the rest. Exit codes: 0 done, 65 bad data, 70 a fault of the program,
-75 an input changed under the run, 78 bad settings, 130 stopped.
+74 no room on the disk, 75 an input changed under the run or is damaged, 78 bad settings, 130 stopped.
 """
 
 from __future__ import annotations
@@ -11,7 +11,6 @@ import argparse
 import json
 import logging
 import os
-import sys
 import time
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
@@ -19,22 +18,32 @@ from datetime import UTC, datetime
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-from odograph.errors import ChangedInputError, InputError, OdographError, SettingsError
+from odograph.errors import (
+    ChangedInputError,
+    DamagedError,
+    DiskFullError,
+    InputError,
+    OdographError,
+    SettingsError,
+)
 from odograph.provenance.canonical import canonical_json, digest_text
 from odograph.provenance.files import (
     read_arrays,
     read_columns,
     read_json,
     read_table,
-    renamed_into_place,
     write_arrays,
     write_json,
     write_table,
     write_tsv,
 )
 from odograph.provenance.fingerprint import PACKAGE_FOLDER, code_fingerprint
+from odograph.provenance.job_log import start_log
+from odograph.provenance.known import read_known
 from odograph.provenance.layout import PLAN, STORE
 from odograph.provenance.records import RecordDraft
+from odograph.provenance.renaming import disk_full, disk_full_told, is_full, renamed_into_place
+from odograph.provenance.running import still_in_charge
 
 if TYPE_CHECKING:
     import numpy as np
@@ -44,7 +53,10 @@ if TYPE_CHECKING:
 
 logger = logging.getLogger("odograph.step")
 
-EXIT_OK, EXIT_DATA, EXIT_INTERNAL, EXIT_CHANGED, EXIT_SETTINGS, EXIT_STOPPED = 0, 65, 70, 75, 78, 130
+EXIT_OK, EXIT_DATA, EXIT_INTERNAL, EXIT_FULL, EXIT_CHANGED, EXIT_SETTINGS = 0, 65, 70, 74, 75, 78
+EXIT_STOPPED = 130
+# Faults of the run and not of a session's data: they end the job, and no session is left out for them.
+_OF_THE_RUN = (ChangedInputError, DamagedError, DiskFullError, SettingsError)
 _THREAD_VARIABLES = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS", "VECLIB_MAXIMUM_THREADS")
 
 
@@ -129,7 +141,7 @@ class Step:
         """Put a product of another job into the record as an input."""
         path = Path(path)
         if not path.is_file():
-            raise InputError("the file is missing", file=str(path), remedy="run snakemake again")
+            raise ChangedInputError("the file is missing", file=str(path), remedy="run snakemake again")
         self.record.add_product_input(path)
         return path
 
@@ -157,32 +169,37 @@ class Step:
 
     def write_json(self, name: str, document: Any) -> None:
         """Write a JSON document as the output of that name."""
-        write_json(self.output(name), document)
+        write_json(self.output(name), document, still_in_charge)
         self.record.add_product(self.output(name))
 
     def write_table(self, name: str, table: Any) -> None:
         """Write a table as the output of that name: Parquet, or text for the suffix ``.tsv``."""
         path = self.output(name)
-        (write_tsv if path.suffix == ".tsv" else write_table)(path, table)
+        (write_tsv if path.suffix == ".tsv" else write_table)(path, table, still_in_charge)
         self.record.add_product(path)
 
     def write_arrays(self, name: str, arrays: Mapping[str, np.ndarray]) -> None:
         """Write named arrays as the output of that name."""
-        write_arrays(self.output(name), arrays)
+        write_arrays(self.output(name), arrays, still_in_charge)
         self.record.add_product(self.output(name))
 
     @contextmanager
     def product(self, path: str | Path, **facts: Any) -> Iterator[Path]:
         """Give a temporary name to write a product under; it is renamed and recorded when the block ends."""
-        with renamed_into_place(path) as temporary:
+        with renamed_into_place(path, still_in_charge) as temporary:
             yield temporary
         self.record.add_product(path, **facts)
+
+    def remove(self, path: Path) -> None:
+        """Remove a product of an earlier job that has no place any more."""
+        still_in_charge()
+        path.unlink(missing_ok=True)
 
     def finish(self) -> None:
         """Write the record."""
         self.record.run["started"] = self._started_at
         self.record.run["seconds"] = round(time.monotonic() - self._started, 3)
-        self.record.write(self.output("record"))
+        self.record.write(self.output("record"), still_in_charge)
 
 
 def run_step(
@@ -212,13 +229,14 @@ def run_step(
     """
     parsed = _parser(rule).parse_args(arguments)
     _prepare_process()
-    _start_log(parsed.log, rule)
     try:
+        with disk_full_told(parsed.log or "the log"):
+            start_log(parsed.log)
         step = Step(rule, parsed)
         logger.debug("%s begins; code %s", step.name, parsed.code)
         try:
             work(step)
-        except (ChangedInputError, SettingsError):
+        except _OF_THE_RUN:
             raise
         except OdographError as error:
             if leave_out is None or step.stops_on_bad_session:
@@ -229,15 +247,38 @@ def run_step(
         step.finish()
         logger.debug("%s is done; %s", step.name, step.record_id)
     except OdographError as error:
-        logger.error("%s", error)
-        return _exit_code(error)
+        return told(error)
     except KeyboardInterrupt:
         logger.error("stopped")
         return EXIT_STOPPED
-    except Exception:
+    except Exception as error:
+        if is_full(error):
+            return told(disk_full(parsed.log or parsed.outputs[0].partition("=")[2], error))
         logger.exception("a fault of the program; please report it with this log")
         return EXIT_INTERNAL
     return EXIT_OK
+
+
+def told(error: OdographError) -> int:
+    """Tell an error in the log and give its exit code; a damaged product is removed, to be made again."""
+    if isinstance(error, DamagedError):
+        error = _removed(error)
+    logger.error("%s", error)
+    return _exit_code(error)
+
+
+def _removed(error: DamagedError) -> OdographError:
+    try:
+        still_in_charge()
+    except ChangedInputError as later:
+        return later
+    Path(error.file).unlink(missing_ok=True)
+    return DamagedError(
+        f"{error.found}; it was removed",
+        file=error.file,
+        expected=error.expected,
+        remedy="run snakemake again: the job that wrote it makes it anew",
+    )
 
 
 def refuse_if_failed(step: Step, document: Mapping[str, Any]) -> None:
@@ -303,10 +344,7 @@ def _checked_code(rule: str, planned: str) -> str:
 
 def known_code() -> dict[str, Any]:
     """What the planning knows of the package's modules, so that a job need not parse them."""
-    try:
-        return json.loads((PLAN / "cache.json").read_bytes())["code"]
-    except (OSError, ValueError, KeyError):
-        return {}
+    return read_known(PLAN / "cache.json").get("code", {})
 
 
 def _prepare_process() -> None:
@@ -316,28 +354,11 @@ def _prepare_process() -> None:
         os.environ.setdefault("NUMBA_CACHE_DIR", str((STORE / "compiled").resolve()))
 
 
-def _start_log(path: str | None, rule: str) -> None:
-    logging.captureWarnings(True)
-    root = logging.getLogger()
-    root.setLevel(logging.DEBUG)
-    for name in ("matplotlib", "numba", "hdmf", "pynwb", "PIL", "h5py"):
-        logging.getLogger(name).setLevel(logging.WARNING)
-    speak = logging.StreamHandler(sys.stderr)
-    speak.setLevel(logging.INFO)
-    speak.setFormatter(logging.Formatter("%(message)s"))
-    root.addHandler(speak)
-    if path is not None:
-        Path(path).parent.mkdir(parents=True, exist_ok=True)
-        keep = logging.FileHandler(path, mode="w", encoding="utf-8")
-        form = logging.Formatter("%(asctime)sZ %(levelname)s %(message)s", "%Y-%m-%dT%H:%M:%S")
-        form.converter = time.gmtime
-        keep.setFormatter(form)
-        root.addHandler(keep)
-
-
 def _exit_code(error: OdographError) -> int:
-    if isinstance(error, ChangedInputError):
+    if isinstance(error, ChangedInputError | DamagedError):
         return EXIT_CHANGED
+    if isinstance(error, DiskFullError):
+        return EXIT_FULL
     return EXIT_SETTINGS if isinstance(error, SettingsError) else EXIT_DATA
 
 

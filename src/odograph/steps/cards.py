@@ -56,11 +56,11 @@ def _remove_others(step: Step, drawn: list[Path]) -> None:
         number = path.stem.removeprefix("unit-")
         ours = number.isdecimal() and layout.shard_of(step.session, int(number), step.shards) == step.shard
         if ours and path not in drawn:
-            path.unlink(missing_ok=True)
+            step.remove(path)
     for path in folder.glob("shard-*.json"):
         number = path.name.partition(".")[0].removeprefix("shard-")
         if step.shard == 0 and number.isdecimal() and int(number) >= step.shards:
-            path.unlink(missing_ok=True)
+            step.remove(path)
 
 
 if __name__ == "__main__":

@@ -3,10 +3,16 @@
 from __future__ import annotations
 
 import argparse
+import logging
 import sys
 
 from odograph.errors import OdographError
-from odograph.provenance.root import write_root
+from odograph.provenance.job_log import start_log
+from odograph.provenance.renaming import disk_full_told
+from odograph.provenance.root import ROOT, write_root
+from odograph.provenance.step import told
+
+logger = logging.getLogger("odograph.step")
 
 
 def main() -> int:
@@ -15,12 +21,14 @@ def main() -> int:
         prog="python -m odograph.steps.root", description="The step of rule root; run by snakemake."
     )
     parser.add_argument("--code", required=True, help="fingerprint that the code has, so that it is run anew")
-    parser.parse_args()
+    parser.add_argument("--log", help="the log file")
+    arguments = parser.parse_args()
     try:
-        print(f"the run root is {write_root()}")
+        with disk_full_told(arguments.log or ROOT):
+            start_log(arguments.log)
+        logger.info("the run root is %s", write_root())
     except OdographError as error:
-        print(error.message(), file=sys.stderr)
-        return 65
+        return told(error)
     return 0
 
 

@@ -4,9 +4,9 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
-from odograph.errors import ChangedInputError
+from odograph.errors import ChangedInputError, InputError
 from odograph.provenance.step import Step
 
 if TYPE_CHECKING:
@@ -20,20 +20,15 @@ def read_signals(step: Step) -> Recording:
     ------
     ChangedInputError
         When a signal is no longer what it was when the run was planned.
-    InputError
-        When the recording cannot be used.
+        It could be read then, so a recording that cannot be used now has changed, too.
     """
     from odograph.recording.digest import signal_digests
-    from odograph.recording.reader import read_recording
-    from odograph.settings.intake import IntakeSettings
 
     planned = step.plan["signals"]
     source = step.source
     groups = {name.partition(":")[0] for name in planned}
     wanted = {"covariates" if group == "covariate" else group for group in groups}
-    recording = read_recording(
-        source["nwb"], IntakeSettings.model_validate(source["intake"]), signals=wanted, units=()
-    )
+    recording = _read(source, signals=wanted, units=())
     _compare(planned, signal_digests(recording), source["nwb"], "signal")
     places = signal_places(recording)
     for name, digest in planned.items():
@@ -53,19 +48,31 @@ def read_units(step: Step, units: Mapping[int, str]) -> Recording:
 
     Raises
     ------
-    ChangedInputError, InputError
+    ChangedInputError
         As `read_signals`.
     """
     from odograph.recording.digest import unit_digests
+
+    source = step.source
+    recording = _read(source, signals=(), units=tuple(units))
+    _compare(units, unit_digests(recording), source["nwb"], "unit")
+    return recording
+
+
+def _read(source: Mapping[str, Any], **what: Any) -> Recording:
     from odograph.recording.reader import read_recording
     from odograph.settings.intake import IntakeSettings
 
-    source = step.source
-    recording = read_recording(
-        source["nwb"], IntakeSettings.model_validate(source["intake"]), signals=(), units=tuple(units)
-    )
-    _compare(units, unit_digests(recording), source["nwb"], "unit")
-    return recording
+    try:
+        return read_recording(source["nwb"], IntakeSettings.model_validate(source["intake"]), **what)
+    except InputError as error:
+        raise ChangedInputError(
+            f"the recording changed since this run was planned; now it cannot be used: {error.found}",
+            file=error.file or source["nwb"],
+            place=error.place,
+            expected="the content that was there when the run began",
+            remedy="run snakemake again",
+        ) from error
 
 
 def signal_places(recording: Recording) -> dict[str, str]:
