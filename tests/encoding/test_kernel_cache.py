@@ -6,6 +6,7 @@ cell with `bincount`, a mirrored lower triangle with `tril`.
 
 import json
 import os
+import pickle
 import shutil
 import subprocess
 import sys
@@ -209,3 +210,31 @@ def test_where_no_folder_can_be_written_the_code_is_compiled_in_every_process(tm
     )
     assert (result, counted, folder) == (expected("cell_sums"), [0, 1], None)
     assert "set NUMBA_CACHE_DIR" in said
+
+
+class Trap:
+    """What unpickles to a call."""
+
+    def __init__(self, mark):
+        self.mark = mark
+
+    def __reduce__(self):
+        return Path.touch, (self.mark,)
+
+
+@pytest.mark.parametrize("suffix", [".nbi", ".nbc"])
+def test_code_that_others_may_have_written_is_not_even_read(code, suffix):
+    (path,) = [path for path in kept(code) if path.suffix == suffix]
+    mark = code.parent / "sprung"
+    path.write_bytes(pickle.dumps(Trap(mark)))
+    path.chmod(0o666)
+    before = path.read_bytes()
+    ((result, *counted, _),), said = Job(code.parent, NUMBA_CACHE_DIR=str(code)).call("cell_sums C")
+    assert (result, counted) == (expected("cell_sums"), [0, 1])
+    assert not mark.exists()
+    assert "others may have written" in said and str(path) in said
+    assert path.read_bytes() == before
+    # The same trap in a file of the user's own does spring: there is one in it.
+    path.chmod(0o600)
+    Job(code.parent, NUMBA_CACHE_DIR=str(code)).call("cell_sums C")
+    assert mark.exists()

@@ -28,14 +28,16 @@ def plain(value: Any) -> Any:
     TypeError
         For any other type.
     """
-    if value is None or isinstance(value, str | bool):
+    if value is None or isinstance(value, bool):
         return value
+    if isinstance(value, str):
+        return _encodable(value)
     if isinstance(value, int):
         return int(value)
     if isinstance(value, float):
         return float(value) if math.isfinite(value) else None
     if isinstance(value, Mapping):
-        return {str(key): plain(item) for key, item in value.items()}
+        return {_encodable(str(key)): plain(item) for key, item in value.items()}
     if isinstance(value, list | tuple):
         return [plain(item) for item in value]
     if isinstance(value, AbstractSet):
@@ -49,6 +51,11 @@ def plain(value: Any) -> Any:
     if hasattr(value, "tolist"):
         return plain(value.tolist())
     raise TypeError(f"a value of type {type(value).__name__} cannot be written as JSON")
+
+
+def _encodable(text: str) -> str:
+    """Text that UTF-8 can hold; halves of surrogate pairs, which a damaged file may bring, become escapes."""
+    return text if text.isascii() else text.encode("utf-8", "backslashreplace").decode()
 
 
 def canonical_json(value: Any) -> str:

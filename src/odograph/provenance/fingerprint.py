@@ -72,7 +72,8 @@ def imported_modules(
 
 def _facts(name: str, cache: dict[str, ModuleFacts], folder: Path) -> ModuleFacts:
     path = _source(name, folder)
-    assert path is not None
+    if path is None:
+        raise ModuleNotFoundError(f"{name} is no module of {PACKAGE}")
     beside = [] if path.parent == folder else sorted(_data_files(path.parent))
     stamp = [[file.name, (stat := file.stat()).st_size, stat.st_mtime_ns] for file in (path, *beside)]
     known = cache.get(name)

@@ -11,11 +11,16 @@ import threading
 import time
 from collections.abc import Sequence
 from dataclasses import asdict, dataclass
+from pathlib import Path
 from typing import Any
 
 _READER = "odograph.steps.survey_recordings"
 _QUIET_SECONDS = 1.0
 _SECONDS_BETWEEN_LINES = 5.0
+# A damaged file may send its reader round in circles for ever. Voltage is not read, so even a large file on a
+# slow disk is done long before this.
+_PATIENCE_S = 120.0
+_PATIENCE_S_PER_BYTE = 1 / 2e6
 
 
 @dataclass(frozen=True)
@@ -37,11 +42,13 @@ class Request:
     settings: str
 
 
-def survey(requests: Sequence[Request], workers: int | None = None) -> dict[str, dict[str, Any]]:
+def survey(
+    requests: Sequence[Request], workers: int | None = None, *, patience_s: float | None = None
+) -> dict[str, dict[str, Any]]:
     """Read recordings and digest their signals and units.
 
-    A process that dies takes only the recording it was reading with it. When the survey takes more than a
-    second, its progress is told on the error stream.
+    A process that dies, or reads for longer than its file can take, takes only that recording with it. When
+    the survey takes more than a second, its progress is told on the error stream.
 
     Parameters
     ----------
@@ -49,6 +56,8 @@ def survey(requests: Sequence[Request], workers: int | None = None) -> dict[str,
         The recordings.
     workers : int, optional
         Processes; by default as many as there are processors, at most eight.
+    patience_s : float, optional
+        How long one recording may take; by default two minutes and a second for every 2 MB.
 
     Returns
     -------
@@ -64,14 +73,19 @@ def survey(requests: Sequence[Request], workers: int | None = None) -> dict[str,
     for request in requests:
         waiting.put(request)
     answers: dict[str, dict[str, Any]] = {}
-    threads = [threading.Thread(target=_serve, args=(waiting, answers), daemon=True) for _ in range(workers)]
+    threads = [
+        threading.Thread(target=_serve, args=(waiting, answers, patience_s), daemon=True)
+        for _ in range(workers)
+    ]
     for thread in threads:
         thread.start()
     _tell_progress(threads, answers, len(requests))
     return answers
 
 
-def _serve(waiting: queue.SimpleQueue[Request], answers: dict[str, dict[str, Any]]) -> None:
+def _serve(
+    waiting: queue.SimpleQueue[Request], answers: dict[str, dict[str, Any]], patience_s: float | None
+) -> None:
     process: subprocess.Popen[str] | None = None
     try:
         while True:
@@ -81,9 +95,14 @@ def _serve(waiting: queue.SimpleQueue[Request], answers: dict[str, dict[str, Any
                 return
             if process is None:
                 process = _start()
+            patience = patience_s or _patience_s(request)
+            impatient = threading.Timer(patience, process.kill)
+            impatient.start()
             answer = _ask(process, request)
+            in_time = impatient.is_alive()
+            impatient.cancel()
             if answer is None:
-                answer = _died(request, process.wait())
+                answer = _died(request, process.wait(), None if in_time else patience)
                 process = None
             answers[request.session] = answer
     finally:
@@ -95,7 +114,7 @@ def _serve(waiting: queue.SimpleQueue[Request], answers: dict[str, dict[str, Any
 
 def _start() -> subprocess.Popen[str]:
     environment = dict(os.environ, OMP_NUM_THREADS="1", OPENBLAS_NUM_THREADS="1")
-    return subprocess.Popen(
+    return subprocess.Popen(  # noqa: S603 (this Python and a module of this package)
         [sys.executable, "-m", _READER],
         stdin=subprocess.PIPE,
         stdout=subprocess.PIPE,
@@ -114,15 +133,26 @@ def _ask(process: subprocess.Popen[str], request: Request) -> dict[str, Any] | N
     return json.loads(line) if line.endswith("\n") else None
 
 
-def _died(request: Request, status: int) -> dict[str, Any]:
+def _patience_s(request: Request) -> float:
+    try:
+        return _PATIENCE_S + Path(request.nwb).stat().st_size * _PATIENCE_S_PER_BYTE
+    except OSError:
+        return _PATIENCE_S
+
+
+def _died(request: Request, status: int, patience: float | None) -> dict[str, Any]:
     how = f"signal {-status}" if status < 0 else f"status {status}"
+    found = f"the process that read the recording ended abruptly ({how})"
+    if patience is not None:
+        found = f"the recording was still being read after {patience:.0f} s, and its reading was ended"
     return {
         "error": {
             "level": "fail",
-            "place": request.nwb,
-            "found": f"the process that read the recording ended abruptly ({how})",
+            "file": request.nwb,
+            "place": None,
+            "found": found,
             "expected": "a recording that can be read to its end",
-            "remedy": "check the file, for instance by `odograph look`, and that the machine has memory left",
+            "remedy": "copy the file anew if it is damaged; see that the machine has memory left",
         },
         "settled": False,
     }

@@ -10,6 +10,16 @@ from odograph.recording.opening import OpenRecording
 UNREAD = "none"
 
 
+def choose_one(
+    opened: OpenRecording, what: str, key: str, wanted: str | None, candidates: Mapping[str, Any]
+) -> str:
+    """The place of a thing that has to be there; as `choose` with `required`."""
+    place = choose(opened, what, key, wanted, candidates, required=True)
+    if place is None:
+        raise ValueError(f"no place was chosen for {what}")
+    return place
+
+
 def describe(thing: Any) -> str:
     """Kind, shape, unit and sampling of an object of the file, in a few words."""
     words = [type(thing).__name__]

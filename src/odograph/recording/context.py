@@ -6,7 +6,8 @@ from typing import Any
 
 import numpy as np
 
-from odograph.recording.choosing import choose
+from odograph.errors import printable
+from odograph.recording.choosing import choose, choose_one
 from odograph.recording.model import Arena, Covariate, Intervals, Subject
 from odograph.recording.opening import OpenRecording
 from odograph.recording.series import (
@@ -28,7 +29,7 @@ def read_subject(opened: OpenRecording) -> Subject:
     if subject is None:
         return Subject(None, None, None, None)
     texts = (getattr(subject, name, None) for name in ("subject_id", "species", "sex", "age"))
-    return Subject(*(str(text) if text else None for text in texts))
+    return Subject(*(printable(str(text)) if text else None for text in texts))
 
 
 def arena_candidates(opened: OpenRecording) -> dict[str, Any]:
@@ -159,10 +160,7 @@ def read_covariate(opened: OpenRecording, source: CovariateSource) -> Covariate:
         Nothing at the place, not one value per sample, bad times.
     """
     series_only = {place: thing for place, thing in opened.places.items() if is_series(thing)}
-    place = choose(
-        opened, f"the variable {source.name}", "covariates", source.place, series_only, required=True
-    )
-    assert place is not None
+    place = choose_one(opened, f"the variable {source.name}", "covariates", source.place, series_only)
     if place not in series_only:
         raise opened.refuse(
             f"this is not a TimeSeries but: {type(opened.places[place]).__name__}",

@@ -2,19 +2,26 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from pathlib import Path
 
 import h5py
 
+#: Ways to reach the objects of a file; a reader walks every one of them.
+MOST_PATHS = 1_000_000
+
 
 @dataclass(frozen=True)
 class MissingLink:
-    """One link without a target: its place in the file, and the file and place it points at."""
+    """One link without a target: its place in the file, and the file and place it points at.
+
+    `no_file` says that what it points at is there, but is a folder, a pipe or a device.
+    """
 
     place: str
     target_file: str | None
     target_place: str
+    no_file: bool = False
 
     def describe(self) -> str:
         """The link in one line."""
@@ -24,16 +31,24 @@ class MissingLink:
 
 @dataclass(frozen=True)
 class Links:
-    """The links of a file: those that lead nowhere, and the other files that those which hold lead into."""
+    """The links of a file.
+
+    `missing` are those that lead nowhere, `files` the other files that those which hold lead into, `named`
+    all other files that links and virtual data sets name, whether they are there or not. `paths` is the
+    number of ways to reach a group of the file, at most `MOST_PATHS`.
+    """
 
     missing: tuple[MissingLink, ...]
     files: tuple[Path, ...]
+    named: tuple[Path, ...] = ()
+    paths: int = 0
 
 
 def follow_links(path: Path) -> Links:
     """Follow all soft and external links of an HDF5 file, and those in the files it links to.
 
-    Only names and links are looked at, no data.
+    Only names and links are looked at, no data. What is there but no file (a pipe, a device) is not opened:
+    such a link is missing.
 
     Parameters
     ----------
@@ -45,36 +60,92 @@ def follow_links(path: Path) -> Links:
     Links
         Missing links sorted by place, other files sorted by path.
     """
-    missing: list[MissingLink] = []
-    files: set[Path] = set()
+    walk = _Walk()
     with h5py.File(path, "r") as file:
-        _walk(file, "", missing, files, {_address(file)})
-    files.discard(path)
-    return Links(tuple(sorted(missing, key=lambda link: link.place)), tuple(sorted(files)))
+        address = _address(file)
+        walk.seen.add(address)
+        walk.group(file, "", address)
+        paths = walk.count_paths(address)
+    walk.files.discard(path)
+    walk.named.discard(path)
+    missing = sorted(walk.missing, key=lambda link: link.place)
+    return Links(tuple(missing), tuple(sorted(walk.files)), tuple(sorted(walk.named)), paths)
 
 
-def _walk(
-    group: h5py.Group,
-    above: str,
-    missing: list[MissingLink],
-    files: set[Path],
-    seen: set[tuple[int, int]],
-) -> None:
-    for name in group:
-        place = f"{above}/{name}" if above else name
-        link = group.get(name, getlink=True)
-        target = _resolve(group, name)
-        if target is None:
+_Address = tuple[int, int]
+
+
+@dataclass
+class _Walk:
+    """One walk through a file and those it links to; `below` are the groups that each group holds."""
+
+    missing: list[MissingLink] = field(default_factory=list)
+    files: set[Path] = field(default_factory=set)
+    named: set[Path] = field(default_factory=set)
+    seen: set[_Address] = field(default_factory=set)
+    below: dict[_Address, list[_Address]] = field(default_factory=dict)
+
+    def group(self, group: h5py.Group, above: str, address: _Address) -> None:
+        """Walk through a group and what it holds."""
+        below = self.below.setdefault(address, [])
+        for name in group:
+            place = f"{above}/{name}" if above else name
+            link = group.get(name, getlink=True)
+            if isinstance(link, h5py.ExternalLink):
+                self.named.add(_beside(group.file, link.filename))
             target_file = link.filename if isinstance(link, h5py.ExternalLink) else None
-            missing.append(MissingLink(place, target_file, getattr(link, "path", name)))
-            continue
-        if isinstance(link, h5py.ExternalLink):
-            files.add(Path(target.file.filename))
-        if isinstance(target, h5py.Group):
-            address = _address(target)
-            if address not in seen:
-                seen.add(address)
-                _walk(target, place, missing, files, seen)
+            no_file = target_file is not None and not _may_be_opened(group.file, target_file)
+            target = None if no_file else _resolve(group, name)
+            if target is None:
+                target_place = getattr(link, "path", name)
+                self.missing.append(MissingLink(place, target_file, target_place, no_file))
+                continue
+            if isinstance(link, h5py.ExternalLink):
+                self.files.add(Path(target.file.filename))
+            if isinstance(target, h5py.Dataset):
+                self._data(target)
+            if isinstance(target, h5py.Group):
+                inner = _address(target)
+                if isinstance(link, h5py.HardLink):
+                    below.append(inner)
+                if inner not in self.seen:
+                    self.seen.add(inner)
+                    self.group(target, place, inner)
+
+    def _data(self, dataset: h5py.Dataset) -> None:
+        for other in sources_of(dataset):
+            self.named.add(other)
+            if other.is_file():
+                self.files.add(other)
+
+    def count_paths(self, top: _Address) -> int:
+        """Ways to reach a group from the top, at most `MOST_PATHS`; a circle has endless ones."""
+        counts: dict[_Address, int] = {}
+        open_above: set[_Address] = set()
+
+        def count(address: _Address) -> int:
+            if address in open_above:
+                return MOST_PATHS
+            if address not in counts:
+                open_above.add(address)
+                total = 1 + sum(count(inner) for inner in self.below.get(address, ()))
+                open_above.discard(address)
+                counts[address] = min(total, MOST_PATHS)
+            return counts[address]
+
+        return count(top)
+
+
+def sources_of(dataset: h5py.Dataset) -> list[Path]:
+    """The other files that a virtual data set takes its data from."""
+    if not dataset.is_virtual:
+        return []
+    names = {source.file_name for source in dataset.virtual_sources()} - {"."}
+    return sorted(_beside(dataset.file, name) for name in names)
+
+
+def _beside(file: h5py.File, name: str) -> Path:
+    return Path(file.filename).parent / name
 
 
 def _resolve(group: h5py.Group, name: str) -> h5py.HLObject | None:
@@ -84,6 +155,17 @@ def _resolve(group: h5py.Group, name: str) -> h5py.HLObject | None:
         return None
 
 
-def _address(thing: h5py.HLObject) -> tuple[int, int]:
+def _may_be_opened(file: h5py.File, name: str) -> bool:
+    # HDF5 looks beside the file and where the process runs. A pipe at either place would be waited for.
+    if "\0" in name:
+        return False
+    places = (_beside(file, name), Path(name), _beside(file, Path(name).name))
+    try:
+        return all(place.is_file() or not place.exists() for place in places)
+    except OSError:
+        return False
+
+
+def _address(thing: h5py.HLObject) -> _Address:
     info = h5py.h5o.get_info(thing.id)
     return info.fileno, info.addr

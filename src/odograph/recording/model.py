@@ -8,6 +8,8 @@ from typing import Literal
 
 import numpy as np
 
+from odograph.errors import printable
+
 Scalar = str | bool | int | float
 Clock = Literal["camera", "recording"]
 Finding = dict[str, str | None]
@@ -150,7 +152,8 @@ def finding(
     remedy: str | None = None,
 ) -> Finding:
     """One finding for a session's verdict."""
-    return {"level": level, "place": place, "found": found, "expected": expected, "remedy": remedy}
+    facts = {"place": place, "found": found, "expected": expected, "remedy": remedy}
+    return {"level": level} | {key: printable(text) if text else text for key, text in facts.items()}
 
 
 def verdict_of(findings: tuple[Finding, ...] | list[Finding]) -> str:

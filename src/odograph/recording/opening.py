@@ -2,22 +2,29 @@
 
 from __future__ import annotations
 
+import math
+import os
 import re
 import warnings
 from collections.abc import Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass, field, replace
+from functools import cache
 from pathlib import Path
 from typing import Any
 
 import h5py
 import numpy as np
 
-from odograph.errors import InputError, OdographError
-from odograph.recording.links import Links, follow_links
+from odograph.errors import InputError, OdographError, printable
+from odograph.recording.links import MOST_PATHS, Links, follow_links, sources_of
 from odograph.recording.model import FileFacts, Finding, finding
 from odograph.settings.intake import IntakeSettings
 
+#: Of unpacked to packed bytes; constants compress well, but not as well as this.
+LARGEST_RATIO = 5000
+#: What may be declared without being there: data sets of fill values take no room in the file.
+FEW_BYTES = 1 << 26
 _TIME_ZONE = re.compile(r"(Z|[+-]\d{2}:?\d{2})$")
 
 
@@ -50,17 +57,60 @@ class OpenRecording:
 
     def array(self, data: Any, place: str, part: slice | None = None) -> np.ndarray:
         """Read a data set, whole or in part; a damaged one is refused."""
+        self.check_held(data, place, part)
         try:
             if part is None:
                 part = slice(None) if np.ndim(data) else ()
             return np.asarray(data[part])
-        except (OSError, RuntimeError) as error:
+        except Exception as error:
+            # Of damaged data h5py raises whatever HDF5 stumbled over, down to KeyError and TypeError.
             raise self.refuse(
                 f"the data cannot be read ({_first_line(error)})",
                 place=place,
                 expected="data that are whole",
                 remedy="copy the file anew from its source; this copy is damaged",
             ) from error
+
+    def check_held(self, data: Any, place: str, part: slice | None = None) -> None:
+        """Refuse data that are only declared, or lie outside the file, before memory is taken for them.
+
+        Raises
+        ------
+        InputError
+            A shape beyond the bytes that the file holds for it or beyond this machine's memory; data kept
+            in a file of raw bytes, or in a virtual data set whose source is gone.
+        """
+        try:
+            needed, held, outside = _extent_of(data, part)
+        except Exception as error:
+            raise self.refuse(
+                f"the data cannot be read ({_first_line(error)})",
+                place=place,
+                expected="data that are whole",
+                remedy="copy the file anew from its source; this copy is damaged",
+            ) from error
+        if outside:
+            raise self.refuse(
+                f"the data lie outside the file, in {outside}",
+                place=place,
+                expected="data in the file itself, or a link to another NWB file; changes elsewhere would go "
+                "unnoticed",
+                remedy="write a copy of the file that holds its data (h5repack does that)",
+            )
+        if held is not None and needed > max(FEW_BYTES, LARGEST_RATIO * held):
+            raise self.refuse(
+                f"{_bytes(needed)} are declared, {_bytes(held)} are there",
+                place=place,
+                expected="about as many data as the shape says",
+                remedy="copy the file anew from its source, or write the data set in the shape of its data",
+            )
+        if needed > _memory():
+            raise self.refuse(
+                f"the data take {_bytes(needed)}",
+                place=place,
+                expected=f"no more than this machine's memory of {_bytes(_memory())}",
+                remedy="check the place in the settings of intake, or read the file on a larger machine",
+            )
 
     def numbers(self, data: Any, place: str, part: slice | None = None) -> np.ndarray:
         """Read a data set of numbers as float64; one of another type is refused."""
@@ -109,9 +159,10 @@ def open_recording(path: str | Path, settings: IntakeSettings) -> Iterator[OpenR
         links to nowhere.
     """
     path = Path(path)
-    facts = _file_facts(path)
-    links = _check_links(path, settings)
-    facts = replace(facts, linked_files=links.files)
+    _check_is_hdf5(path)
+    links = _follow_links(path)
+    facts = replace(_file_facts(path), linked_files=links.files)
+    _check_missing(path, links, settings)
     pynwb = _import_pynwb()
     with warnings.catch_warnings():
         warnings.simplefilter("ignore")
@@ -129,8 +180,25 @@ def open_recording(path: str | Path, settings: IntakeSettings) -> Iterator[OpenR
                 )
             _check_times_of_file(opened)
             yield opened
+        except Exception as error:
+            if isinstance(error, OdographError) or not _is_of_the_file(error):
+                raise
+            raise opened.refuse(
+                f"the file is damaged: reading it ended with {_reason(error)}",
+                expected="an NWB file that is whole",
+                remedy="copy it anew from its source; `pynwb-validate` may tell which object is at fault",
+            ) from error
         finally:
             io.close()
+
+
+def _is_of_the_file(error: BaseException) -> bool:
+    """Whether an exception was raised within the libraries that read the file."""
+    trace = error.__traceback__
+    while trace is not None and trace.tb_next is not None:
+        trace = trace.tb_next
+    module = trace.tb_frame.f_globals.get("__name__", "") if trace is not None else ""
+    return module.partition(".")[0] in ("h5py", "hdmf", "pynwb")
 
 
 def _import_pynwb() -> Any:
@@ -148,8 +216,37 @@ def _import_pynwb() -> Any:
     return pynwb
 
 
+def _extent_of(data: Any, part: slice | None) -> tuple[int, int | None, str | None]:
+    """Bytes that reading takes, bytes that the file holds, and the other file that the data are kept in."""
+    # hdmf wraps data sets of references and of text; the stored one is inside.
+    stored = getattr(data, "dataset", data)
+    if not isinstance(stored, h5py.Dataset):
+        return 0, None, None
+    shape = stored.shape or ()
+    if part is not None and shape:
+        shape = (len(range(*part.indices(shape[0]))), *shape[1:])
+    needed = math.prod(shape) * stored.dtype.itemsize
+    if stored.is_virtual:
+        gone = [str(path) for path in sources_of(stored) if not path.is_file()]
+        return needed, None, gone[0] if gone else None
+    outside = stored.external
+    return needed, stored.id.get_storage_size(), str(outside[0][0]) if outside else None
+
+
+def _bytes(count: int) -> str:
+    return f"{count / 1e9:.3g} GB" if count >= 1e8 else f"{count:,} bytes"
+
+
+@cache
+def _memory() -> int:
+    """Bytes of this machine's memory; where the system does not say, as many as any machine has."""
+    try:
+        return os.sysconf("SC_PAGE_SIZE") * os.sysconf("SC_PHYS_PAGES")
+    except (AttributeError, OSError, ValueError):
+        return 1 << 44
+
+
 def _file_facts(path: Path) -> FileFacts:
-    _check_is_hdf5(path)
     try:
         with h5py.File(path, "r") as file:
             version = _text(file.attrs.get("nwb_version")) or _text_of(file, "nwb_version")
@@ -180,6 +277,10 @@ def _file_facts(path: Path) -> FileFacts:
             )
     except OSError as error:
         raise _open_error(path, error) from error
+    except OdographError:
+        raise
+    except Exception as error:
+        raise _walk_error(path, error) from error
 
 
 def _check_is_hdf5(path: Path) -> None:
@@ -230,16 +331,34 @@ def _open_error(path: Path, error: OSError) -> InputError:
     return InputError(found, file=str(path), expected="an NWB file that is whole", remedy=remedy)
 
 
-def _check_links(path: Path, settings: IntakeSettings) -> Links:
+def _follow_links(path: Path) -> Links:
     try:
         links = follow_links(path)
-    except (OSError, RuntimeError) as error:
+    except OSError as error:
+        raise _open_error(path, error) from error
+    except Exception as error:
+        # Of damaged bookkeeping h5py raises whatever HDF5 stumbled over.
+        raise _walk_error(path, error) from error
+    for link in links.missing:
+        if link.no_file:
+            raise InputError(
+                f"the link leads to what is no file: {link.describe()}",
+                file=str(path),
+                place=link.place,
+                expected="a link to another HDF5 file; a pipe or a device would be waited for without end",
+                remedy="remove the link, or let it name the file",
+            )
+    if links.paths >= MOST_PATHS:
         raise InputError(
-            f"the file's structure cannot be walked ({_first_line(error)})",
+            "its groups hold each other: there is no end of ways to reach them",
             file=str(path),
-            expected="an NWB file that is whole",
-            remedy="copy it anew from its source",
-        ) from error
+            expected="every group in one place, and soft links elsewhere",
+            remedy="write the file anew with pynwb",
+        )
+    return links
+
+
+def _check_missing(path: Path, links: Links, settings: IntakeSettings) -> None:
     lost = links.missing
     if lost and settings.missing_links == "refuse":
         raise InputError(
@@ -249,7 +368,15 @@ def _check_links(path: Path, settings: IntakeSettings) -> Links:
             expected="every linked file at the place the link names",
             remedy="put the linked files back, or set intake.missing_links to warn if they are not needed",
         )
-    return links
+
+
+def _walk_error(path: Path, error: Exception) -> InputError:
+    return InputError(
+        f"the file's structure cannot be walked ({_first_line(error)})",
+        file=str(path),
+        expected="an NWB file that is whole",
+        remedy="copy it anew from its source",
+    )
 
 
 def _read(pynwb: Any, path: Path, links: Links) -> tuple[Any, Any, dict[str, Any], dict[str, str]]:
@@ -338,13 +465,13 @@ def _text(value: Any) -> str | None:
     if isinstance(value, np.ndarray):
         value = value.ravel()[0] if value.size else None
     if isinstance(value, bytes):
-        return value.decode("utf-8", "replace")
-    return str(value) if value is not None else None
+        value = value.decode("utf-8", "replace")
+    return printable(str(value)) if value is not None and not isinstance(value, h5py.Empty) else None
 
 
 def _text_of(file: h5py.File, place: str) -> str | None:
     thing = file.get(place)
-    return _text(thing[()]) if isinstance(thing, h5py.Dataset) else None
+    return _text(thing[()]) if isinstance(thing, h5py.Dataset) and thing.size == 1 else None
 
 
 def _first_line(error: BaseException) -> str:

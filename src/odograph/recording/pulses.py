@@ -6,7 +6,7 @@ from typing import Any
 
 import numpy as np
 
-from odograph.recording.choosing import choose, describe
+from odograph.recording.choosing import choose_one, describe
 from odograph.recording.model import Pulses
 from odograph.recording.opening import OpenRecording
 from odograph.recording.ragged import row_ends
@@ -91,10 +91,7 @@ def _place_and_column(opened: OpenRecording, settings: IntakeSettings) -> tuple[
     if table is not None and last in (getattr(opened.places[table], "colnames", None) or ()):
         return table, last
     candidates = pulse_candidates(opened)
-    place = choose(
-        opened, "frame pulses", "frame_pulses_place", settings.frame_pulses_place, candidates, required=True
-    )
-    assert place is not None
+    place = choose_one(opened, "frame pulses", "frame_pulses_place", settings.frame_pulses_place, candidates)
     inside = [known for known in candidates if known.startswith(f"{place}/")]
     if place not in candidates and len(inside) == 1:
         place = inside[0]
@@ -165,7 +162,10 @@ def _times_of_table(
                 expected=f"one of {', '.join(LABEL_COLUMNS)}",
                 remedy="set intake.frame_pulses_label to null",
             )
-        chosen = np.array([str(label) == wanted for label in table[labels].data[:]], dtype=bool)
+        chosen = np.array(
+            [_as_text(label) == wanted for label in opened.array(table[labels].data, f"{place}/{labels}")],
+            dtype=bool,
+        )
         if indexed is not None:
             chosen = np.repeat(chosen, np.diff(row_ends(opened, table, place, name), prepend=0))
         values = values[chosen]
@@ -189,7 +189,7 @@ def _with_label(
         )
     values = opened.array(data, f"{place}/data")
     if names is not None:
-        texts = [name.decode() if isinstance(name, bytes) else str(name) for name in names[:]]
+        texts = [_as_text(name) for name in opened.array(names, f"{place}/data__labels")]
         return times[np.array([texts[int(value)] == wanted for value in values], dtype=bool)]
     return times[np.array([_as_text(value) == wanted for value in values], dtype=bool)]
 
@@ -240,6 +240,14 @@ def _edges_of_line(opened: OpenRecording, series: Any, place: str, settings: Int
     def read(start: int) -> np.ndarray:
         return opened.numbers(data, f"{place}/data", slice(start, start + CHUNK_SAMPLES))
 
+    opened.check_held(data, f"{place}/data")
+    if not len(data):
+        raise opened.refuse(
+            "the line has no samples",
+            place=f"{place}/data",
+            expected="a line that goes up and down once a frame",
+            remedy="correct intake.frame_pulses_place",
+        )
     pieces = range(0, len(data), CHUNK_SAMPLES)
     extremes = [(float(np.min(part)), float(np.max(part))) for part in map(read, pieces)]
     low, high = min(pair[0] for pair in extremes), max(pair[1] for pair in extremes)

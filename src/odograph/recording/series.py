@@ -72,6 +72,7 @@ def _regular_times(opened: OpenRecording, series: Any, place: str) -> np.ndarray
             expected="seconds",
             remedy="write the series with time stamps",
         )
+    opened.check_held(series.data, f"{place}/data")
     n_samples = int(np.shape(series.data)[0]) if np.shape(series.data) else 0
     return start + np.arange(n_samples) / float(rate)
 

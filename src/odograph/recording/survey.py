@@ -98,9 +98,12 @@ def _rate_hz(series: Any) -> float | None:
     if getattr(series, "rate", None):
         return float(series.rate)
     stamps = getattr(series, "timestamps", None)
-    if stamps is None or np.ndim(stamps) != 1 or len(stamps) < 2 or stamps.dtype.kind not in "fiu":
+    if stamps is None or np.ndim(stamps) != 1 or len(stamps) < 2:
         return None
-    steps = np.diff(np.asarray(stamps[:STEPS_LOOKED_AT], dtype=np.float64))
+    first = np.asarray(stamps[:STEPS_LOOKED_AT])
+    if first.dtype.kind not in "fiu":
+        return None
+    steps = np.diff(first.astype(np.float64))
     step = float(np.median(steps))
     return 1 / step if np.isfinite(step) and step > 0 else None
 

@@ -6,7 +6,7 @@ from typing import Any
 
 import numpy as np
 
-from odograph.recording.choosing import choose, describe, list_candidates
+from odograph.recording.choosing import choose, choose_one, describe, list_candidates
 from odograph.recording.model import Direction, Track
 from odograph.recording.opening import OpenRecording
 from odograph.recording.series import (
@@ -122,9 +122,7 @@ def _named_point(opened: OpenRecording, key: str, name: str, candidates: dict[st
         return matches[0]
     if not candidates:
         choose(opened, "position", "position_place", None, candidates, required=True)
-    place = choose(opened, "tracked point", key, name, candidates, required=True)
-    assert place is not None
-    return place
+    return choose_one(opened, "tracked point", key, name, candidates)
 
 
 def _read_track(opened: OpenRecording, place: str, settings: IntakeSettings) -> Track:

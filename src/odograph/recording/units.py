@@ -8,7 +8,8 @@ from typing import Any
 
 import numpy as np
 
-from odograph.recording.choosing import choose
+from odograph.errors import printable
+from odograph.recording.choosing import choose_one
 from odograph.recording.model import Scalar, Unit
 from odograph.recording.opening import OpenRecording
 from odograph.recording.ragged import read_ragged, row_ends
@@ -47,8 +48,7 @@ def read_units(
         a filter on a column that is not there, a filter that no unit passes.
     """
     tables = unit_tables(opened)
-    place = choose(opened, "sorted units", "units_place", settings.units_place, tables, required=True)
-    assert place is not None
+    place = choose_one(opened, "sorted units", "units_place", settings.units_place, tables)
     if place not in tables:
         raise opened.refuse(
             f"this is not a table of units but: {type(opened.places[place]).__name__}",
@@ -255,10 +255,12 @@ def scalar_columns(opened: OpenRecording, table: Any, place: str) -> dict[str, l
 
 def _plain(value: Any) -> Scalar | None:
     if isinstance(value, bytes):
-        return value.decode("utf-8", "replace")
+        value = value.decode("utf-8", "replace")
     if isinstance(value, np.generic):
         value = value.item()
-    return value if isinstance(value, (str, bool, int, float)) else None
+    if isinstance(value, str):
+        return printable(value)
+    return value if isinstance(value, (bool, int, float)) else None
 
 
 def _regions(
@@ -284,7 +286,8 @@ def _electrode_regions(opened: OpenRecording, table: Any, place: str) -> dict[in
     electrodes = getattr(region, "table", None)
     if electrodes is None or "location" not in electrodes.colnames:
         return {}
-    locations = [str(_plain(value)) for value in electrodes["location"].data[:]]
+    stored = opened.array(electrodes["location"].data, "general/extracellular_ephys/electrodes/location")
+    locations = [str(_plain(value)) for value in stored.ravel()]
     numbers = opened.array(region.data, f"{place}/electrodes")
     if numbers.ndim != 1 or numbers.dtype.kind not in "iu":
         raise opened.refuse(

@@ -17,11 +17,14 @@ def work(step: Step) -> None:
     from odograph.steps.survey_recordings import inventory_digest
 
     file = step.source["nwb"]
+    error = _error_again(step, file) if "error" in step.plan else None
     try:
+        if error is not None:
+            raise error
         recording = read_recording(file, step.stage_settings(IntakeSettings))
         document = make_inventory(step.session, recording)
-    except InputError as error:
-        recording, document = None, failed_inventory(step.session, error)
+    except InputError as refusal:
+        recording, document = None, failed_inventory(step.session, refusal)
     if (recording is None) != ("error" in step.plan) or (
         recording is not None and inventory_digest(document) != step.plan["inventory"]
     ):
@@ -36,6 +39,20 @@ def work(step: Step) -> None:
         for unit, digest in step.plan["units"].items():
             step.record.add_unit_input(int(unit), digest, file=file)
     step.write_json("inventory", document)
+
+
+def _error_again(step: Step, file: str) -> InputError | None:
+    """Why a recording cannot be used; read in a process of its own, which a damaged file may kill or stop."""
+    import json
+
+    from odograph.provenance.survey import Request, survey
+
+    request = Request(str(step.session), file, json.dumps(step.source["intake"]))
+    error = survey([request], workers=1)[request.session].get("error")
+    if error is None:
+        return None
+    facts = {name: error.get(name) for name in ("place", "expected", "remedy")}
+    return InputError(error["found"], file=error.get("file") or file, **facts)
 
 
 if __name__ == "__main__":

@@ -11,10 +11,11 @@ from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
 
-from odograph.errors import OdographError
+from odograph.errors import OdographError, printable
 from odograph.provenance.canonical import digest_value
 from odograph.recording.digest import signal_digests, unit_digests
 from odograph.recording.inventory import make_inventory
+from odograph.recording.links import follow_links
 from odograph.recording.reader import read_recording
 from odograph.settings.intake import IntakeSettings
 
@@ -41,15 +42,16 @@ def survey_recording(session: str, nwb: str, settings: IntakeSettings) -> dict[s
     try:
         recording = read_recording(nwb, settings)
         document = make_inventory(session, recording)
+        links = linked_files(nwb)
     except OdographError as error:
-        return {"error": error.finding() | {"file": error.file}, "settled": True}
+        return {"error": error.finding() | {"file": error.file or nwb}, "settled": True, "links": _links(nwb)}
     except Exception as error:
-        return {"error": _unforeseen(error), "settled": False}
+        return {"error": _unforeseen(error, nwb), "settled": False}
     return {
         "inventory": inventory_digest(document),
         "signals": signal_digests(recording),
         "units": {str(unit): digest for unit, digest in unit_digests(recording).items()},
-        "links": linked_files(nwb),
+        "links": links,
         "animal": document["subject"]["subject_id"],
         "duration_s": _duration_s(document),
         "regions": {str(unit["unit"]): unit["region"] for unit in document["units"] if unit["region"]},
@@ -69,25 +71,15 @@ def linked_files(nwb: str) -> list[str]:
     list of str
         Sorted paths, relative to the folder of the file that names them.
     """
-    import h5py
+    return [path.as_posix() for path in follow_links(Path(nwb)).named]
 
-    found: set[str] = set()
-    seen: set[tuple[int, int]] = set()
 
-    def walk(group: h5py.Group) -> None:
-        for name in group:
-            link = group.get(name, getlink=True)
-            if isinstance(link, h5py.ExternalLink):
-                found.add((Path(group.file.filename).parent / link.filename).as_posix())
-            if isinstance(child := group.get(name), h5py.Group):
-                info = h5py.h5o.get_info(child.id)
-                if (info.fileno, info.addr) not in seen:
-                    seen.add((info.fileno, info.addr))
-                    walk(child)
-
-    with h5py.File(nwb, "r") as file:
-        walk(file)
-    return sorted(found)
+def _links(nwb: str) -> list[str]:
+    """Other files that a refused recording names: it is read again when one of them comes back."""
+    try:
+        return linked_files(nwb)
+    except Exception:  # the file may be damaged in any way; it was refused for it already
+        return []
 
 
 def _duration_s(document: Mapping[str, Any]) -> float | None:
@@ -104,11 +96,12 @@ def inventory_digest(document: Mapping[str, Any]) -> str:
     return digest_value({**document, "file": named})
 
 
-def _unforeseen(error: Exception) -> dict[str, Any]:
+def _unforeseen(error: Exception, nwb: str) -> dict[str, Any]:
     return {
         "level": "fail",
+        "file": nwb,
         "place": None,
-        "found": f"the recording could not be read ({type(error).__name__}: {error})",
+        "found": printable(f"the recording could not be read ({type(error).__name__}: {error})"),
         "expected": "a readable NWB file",
         "remedy": "look into the file with `odograph look`; if it is sound, please report this",
     }
