@@ -243,7 +243,10 @@ def test_recordings_are_found_by_name_or_else_by_digest(finished, bag_without, t
     lay_out(bag_without, study, data)
     assert (study / "recordings/sorrel_1.nwb").resolve() == data / "renamed.nwb"
     assert (study / "recordings/bracken_1.nwb").resolve() == data / "deep/down/bracken_1.nwb"
-    assert not (study / "results").exists()
+    # Into how many shards each session was divided, and no result.
+    kept = [path.relative_to(study).as_posix() for path in (study / "results").rglob("*") if path.is_file()]
+    assert kept == ["results/plan/shards.json"]
+    assert {entry["shards"] for entry in json.loads((study / kept[0]).read_text()).values()} == {2}
 
 
 def test_a_recording_of_that_name_with_another_content_is_refused(finished, bag_without, tmp_path):
