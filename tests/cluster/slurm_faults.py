@@ -271,6 +271,8 @@ def main() -> int:
     tables.use_one_thread()
     table = tables.Table("Faults on a Slurm cluster")
     with tempfile.TemporaryDirectory(prefix="slurm-") as place:
+        # The daemon that signs messages wants its folder open to all.
+        Path(place).chmod(0o755)
         cluster = slurm.Cluster(Path(place) / "cluster")
         try:
             cluster.start()
