@@ -122,7 +122,7 @@ class Cluster:
         NoClusterError
             It cannot be started here.
         """
-        why_not()
+        why_not(self.folder)
         for name in ("state", *(f"spool.{node}" for node in self.names)):
             (self.folder / name).mkdir(parents=True, exist_ok=True)
         self.folder.chmod(0o755)
@@ -240,8 +240,8 @@ class Cluster:
         return pid if name.split(".")[0].encode() in command and state != "Z" else None
 
 
-def why_not() -> None:
-    """Say why there can be no cluster here.
+def why_not(folder: Path) -> None:
+    """Say why there can be no cluster in a folder.
 
     Raises
     ------
@@ -258,6 +258,8 @@ def why_not() -> None:
         raise NoClusterError("a cluster for tests needs root")
     if LINK.exists() and not LINK.is_symlink():
         raise NoClusterError(f"{LINK} is there already: this machine belongs to a cluster")
+    if LINK.is_symlink() and (other := LINK.readlink().parent) != folder and Cluster(other)._pid("slurmctld"):
+        raise NoClusterError(f"another cluster for tests is up, in {other}")
 
 
 def name_leads_to_this_machine() -> None:
