@@ -7,7 +7,7 @@ import json
 import sys
 from pathlib import Path
 
-EXIT_OK, EXIT_DAMAGED, EXIT_NO_INPUT = 0, 65, 66
+EXIT_OK, EXIT_USAGE, EXIT_DAMAGED, EXIT_NO_INPUT = 0, 64, 65, 66
 
 _EXAMPLES = """\
 examples:
@@ -15,7 +15,11 @@ examples:
   odograph store --check      read every fit and see that it is whole
   odograph store --drop       remove the fits that no current result needs
 
-exit codes: 0 done, 65 a fit is damaged (with --check; it is made again when it is needed), 66 no store
+Studies may share a store: make results/store of each a link to one folder. To drop from it, name all of them:
+  odograph store --drop --results one/results --results two/results
+
+exit codes: 0 done, 64 the store is shared and only one study named, 65 a fit is damaged (with --check; it is made
+again when it is needed), 66 no store
 """
 
 
@@ -31,7 +35,10 @@ def add_parser(subparsers: argparse._SubParsersAction[argparse.ArgumentParser]) 
         formatter_class=argparse.RawDescriptionHelpFormatter,
     )
     parser.add_argument(
-        "--results", type=Path, default=Path("results"), help="folder of the results (results)"
+        "--results",
+        type=Path,
+        action="append",
+        help="folder of the results (results); once for each study that shares the store",
     )
     parser.add_argument("--check", action="store_true", help="read every fit and see that it is whole")
     parser.add_argument("--drop", action="store_true", help="remove the fits that no current result needs")
@@ -41,16 +48,24 @@ def add_parser(subparsers: argparse._SubParsersAction[argparse.ArgumentParser]) 
 
 def run(args: argparse.Namespace) -> int:
     """Survey the store, check it or drop from it; returns the exit code."""
-    from odograph.provenance.housekeeping import damaged_fits, drop, survey_store
+    from odograph.provenance.housekeeping import damaged_fits, drop, left_by_killed, survey_store
 
-    folder = args.results / "store"
+    results, *others = args.results or [Path("results")]
+    folder = results / "store"
     if not folder.is_dir():
         print(f"{folder}: there is no store\n  what to do: name the results with --results", file=sys.stderr)
         return EXIT_NO_INPUT
-    found = survey_store(args.results)
+    if args.drop and folder.is_symlink() and not others:
+        print(
+            f"{folder}: the store is shared, and other studies may need what this one does not\n"
+            "  what to do: name the results of all studies that share it, each with --results",
+            file=sys.stderr,
+        )
+        return EXIT_USAGE
+    found = survey_store(results, *others)
     damaged = damaged_fits(folder) if args.check else []
     if args.drop:
-        drop(found.unneeded)
+        drop([*found.unneeded, *left_by_killed(folder)])
     if args.json:
         document = {
             "schema_version": 1,

@@ -17,6 +17,7 @@ examples:
   odograph verify                      the study in this folder
   odograph verify /archive/study       another folder that holds `results` and `config`
   odograph verify --root root:4860a8   also that the run root is the one printed in a paper
+  odograph verify --remove             remove what is damaged; the next run makes it again
 
 exit codes: 0 everything holds, 1 something does not, 66 no results there
 """
@@ -41,6 +42,11 @@ def add_parser(subparsers: argparse._SubParsersAction[argparse.ArgumentParser]) 
     parser.add_argument(
         "--no-recordings", action="store_true", help="leave out the recordings, which take longest to read"
     )
+    parser.add_argument(
+        "--remove",
+        action="store_true",
+        help="remove results that are damaged, with their records, so that the next run makes them again",
+    )
     parser.add_argument("--json", action="store_true", help="write one JSON document instead of text")
     parser.set_defaults(run=run)
 
@@ -48,6 +54,7 @@ def add_parser(subparsers: argparse._SubParsersAction[argparse.ArgumentParser]) 
 def run(args: argparse.Namespace) -> int:
     """Verify the study in `args.folder`; returns the exit code."""
     from odograph.provenance.root import ROOT
+    from odograph.provenance.running import refuse_beside_a_run
     from odograph.provenance.verify import verify
 
     folder = args.folder.parent if args.folder.name == "results" else args.folder
@@ -60,12 +67,28 @@ def run(args: argparse.Namespace) -> int:
         found.add(
             ROOT, f"the run root is {found.root}, not {args.root}", "these are the results of another run"
         )
+    damaged = sorted({file for breach in found.breaches for file in breach.damaged})
+    if args.remove:
+        refuse_beside_a_run(folder)
+        for file in damaged:
+            (folder / file).unlink(missing_ok=True)
     if args.json:
         document = {"schema_version": 1, **asdict(found), "holds": not found.breaches}
         print(json.dumps(document, indent=1, sort_keys=True))
     else:
         print(_text(found))
+        if damaged:
+            print(f"\n{_remedy(len(damaged), args.remove)}")
     return EXIT_BREACH if found.breaches else EXIT_OK
+
+
+def _remedy(files: int, removed: bool) -> str:
+    number = f"{files} file{'s' if files > 1 else ''}"
+    if removed:
+        return f"{number} of the results removed; run snakemake to make them again"
+    return (
+        f"what to do: `odograph verify --remove` removes {number} of the results; snakemake makes them again"
+    )
 
 
 def _digits(root: str | None) -> str:

@@ -6,6 +6,7 @@ from collections.abc import Iterable
 from dataclasses import dataclass
 from pathlib import Path
 
+from odograph.provenance.renaming import leftovers
 from odograph.provenance.store import FitStore
 
 _KEY_DIGITS = 64
@@ -31,17 +32,19 @@ class StoreSurvey:
     unneeded_bytes: int
 
 
-def survey_store(results: str | Path) -> StoreSurvey:
+def survey_store(results: str | Path, *others: str | Path) -> StoreSurvey:
     """Count the fits of a study's store, and find those that no unit's row names.
 
     Parameters
     ----------
     results : str or Path
         The folder of the results. A fit is needed when a shard's table of units has its key.
+    others : str or Path
+        The results of other studies that share the store.
     """
     results = Path(results)
     sizes = {path: path.stat().st_size for path in fit_files(results / "store")}
-    needed = _needed_keys(results)
+    needed = _needed_keys(results).union(*(_needed_keys(Path(other)) for other in others))
     unneeded = tuple(sorted(path for path in sizes if path.stem not in needed))
     return StoreSurvey(len(sizes), sum(sizes.values()), unneeded, sum(sizes[path] for path in unneeded))
 
@@ -55,6 +58,12 @@ def damaged_fits(store: str | Path) -> list[Path]:
     """Fits that are not what they were when they were written; nothing is removed."""
     kept = FitStore(store)
     return [path for path in fit_files(Path(store)) if not kept.is_whole(path.stem)]
+
+
+def left_by_killed(store: str | Path) -> list[Path]:
+    """Temporary files in a store whose writers are gone."""
+    folders = [folder for folder in Path(store).glob("??") if folder.is_dir()]
+    return [path for folder in sorted(folders) for path in leftovers(folder)]
 
 
 def drop(paths: Iterable[Path]) -> None:

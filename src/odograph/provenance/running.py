@@ -116,6 +116,21 @@ def still_in_charge() -> None:
         )
 
 
+def refuse_beside_a_run(folder: Path) -> None:
+    """See that no run is at work in a study's folder.
+
+    Raises
+    ------
+    InputError
+        One is.
+    """
+    if not (folder / RUN_LOCK).is_file():
+        return
+    with (folder / RUN_LOCK).open("r+", encoding="utf-8", errors="replace") as file:
+        if not _lock(file, fcntl.LOCK_EX | fcntl.LOCK_NB):
+            raise _refusal(_told(_read(file)), unlocking=False)
+
+
 def _hold(file: IO[str], unlocking: bool) -> None:
     before = _read(file)
     if ENGINE_LOCKS.is_dir() and any(ENGINE_LOCKS.iterdir()) and not unlocking:

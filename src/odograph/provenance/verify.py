@@ -9,7 +9,7 @@ there. A change anywhere breaks a link; one that was hidden by editing a record 
 from __future__ import annotations
 
 import os
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterable, Iterator, Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
@@ -48,11 +48,14 @@ class Breach:
         What is wrong with it.
     meaning : str
         What that means for the results, or what to do.
+    damaged : tuple of str
+        Files of the results whose removal makes the next run make them again.
     """
 
     file: str
     found: str
     meaning: str
+    damaged: tuple[str, ...] = ()
 
 
 @dataclass
@@ -81,9 +84,9 @@ class Verification:
     recordings: int = 0
     bytes_read: int = 0
 
-    def add(self, file: str | Path, found: str, meaning: str) -> None:
+    def add(self, file: str | Path, found: str, meaning: str, damaged: Iterable[str] = ()) -> None:
         """Note a breach."""
-        breach = Breach(Path(file).as_posix(), found, meaning)
+        breach = Breach(Path(file).as_posix(), found, meaning, tuple(damaged))
         if breach not in self.breaches:
             self.breaches.append(breach)
 
@@ -136,14 +139,19 @@ def _check_records(folder: Path, found: Verification) -> dict[str, dict[str, Any
         try:
             record = read_record(folder / name)
         except OdographError as error:
-            found.add(name, f"the record cannot be trusted: {error.found}", "its products cannot be traced")
+            found.add(
+                name, f"the record cannot be trusted: {error.found}", "its products cannot be traced", (name,)
+            )
             continue
         records[name] = record
         if entry is None:
             if listed:
                 found.add(name, "the run root does not list this record", _rerun("it was added since"))
         elif entry["record_id"] != record["record_id"] or entry["content"] != record_content(record):
-            found.add(name, "the record says something else than when the run ended", _rerun("it was edited"))
+            meaning = _rerun("it was edited")
+            found.add(
+                name, "the record says something else than when the run ended", meaning, (name, str(ROOT))
+            )
         elif entry["digest"] != digests[name]:
             found.add(
                 name, "the record's bytes changed, though not what it says of the results", "it was edited"
@@ -161,7 +169,7 @@ def _listed_records(folder: Path, found: Verification) -> dict[str, dict[str, An
     try:
         document = read_root(folder)
     except OdographError as error:
-        found.add(ROOT, error.found, error.remedy or "run snakemake again")
+        found.add(ROOT, error.found, error.remedy or "run snakemake again", (ROOT.as_posix(),))
         return {}
     found.root, found.code = document["root"], document["code"]
     for row, digest in zip(
@@ -191,15 +199,16 @@ def _check_products(folder: Path, records: Mapping[str, dict[str, Any]], found: 
         wanted, record_id, name = made[path]
         found.products += 1
         if digest is None:
-            found.add(path, "the product is gone", "run snakemake again to make it")
+            meaning = f"run snakemake again to make it; remove {name} first if that does not bring it back"
+            found.add(path, "the product is gone", meaning, (name,))
             continue
         found.bytes_read += (folder / path).stat().st_size
         if digest != wanted:
-            found.add(
-                path, "the product is not what its record says", f"it was changed after {name} was written"
-            )
+            meaning = f"it was changed after {name} was written"
+            found.add(path, "the product is not what its record says", meaning, (path, name))
         elif Path(path).suffix in _CARRY_IDENTIFIER and read_record_id(folder / path) != record_id:
-            found.add(path, "it carries the identifier of another record", f"its record is {name}")
+            meaning = f"its record is {name}"
+            found.add(path, "it carries the identifier of another record", meaning, (path, name))
     known = {record["record_id"] for record in records.values()}
     for name, record in records.items():
         for entry in record["inputs"]:
@@ -219,7 +228,10 @@ def _check_input(
         found.add(path, f"no record says that it made this input of {name}", "it cannot be traced further")
     elif entry["digest"] != maker[0] or entry["producer"] not in known:
         found.add(
-            name, f"it was made from another {path} than is there now", _rerun("inputs and results differ")
+            name,
+            f"it was made from another {path} than is there now",
+            _rerun("inputs and results differ"),
+            (name,),
         )
 
 
