@@ -33,8 +33,8 @@ def clocks(lab: Laboratory) -> Iterator[Happening]:
 
 def other_head(lab: Laboratory) -> Iterator[Happening]:
     """A study made on a machine whose clock is ahead goes on, with other settings, on one that is not."""
-    other = lab.undisturbed("other")
-    study = lab.copy("other-head")
+    other = lab.undisturbed("other", short=True)
+    study = lab.copy("other-head", short=True)
     for path in [path for path in study.results.rglob("*") if path.is_file()]:
         _shift(path, 1)
     study.settings = other.study.settings
@@ -49,7 +49,7 @@ def other_head(lab: Laboratory) -> Iterator[Happening]:
 
 def late(lab: Laboratory) -> Iterator[Happening]:
     """Products appear seconds after their jobs have ended, as on a network file system."""
-    study = lab.fresh("late")
+    study = lab.fresh("late", short=True)
     study.environment = {"PYTHONPATH": str(Path(__file__).with_name("late")), "LATE_S": str(LATE_S)}
     number, outcome = study.again()
     happened = f"run {number} ended with {outcome.status}"

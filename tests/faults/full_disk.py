@@ -23,7 +23,7 @@ STAGES = (
     "report",
     "root",
 )
-QUICK_STAGES = ("sync", "report")
+QUICK_STAGES = ("encoding",)
 MEGABYTES = 24
 CODE = "exit status 74"
 TOLD = ("no space left on the disk", "MB are free", "what to do: make room")

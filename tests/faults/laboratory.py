@@ -27,6 +27,14 @@ MARK = "ODOGRAPH_FAULT"
 LIMIT_S = 600
 
 
+#: How far a short study goes: everything but pictures, report and run root.
+SHORT = ("results/population/units.parquet",)
+
+
+def _has_aim(arguments: tuple[str, ...]) -> bool:
+    return bool({"--until", "--unlock"} & set(arguments))
+
+
 def load(path: Path) -> ModuleType:
     """A module of the tests, by its file."""
     spec = importlib.util.spec_from_file_location(path.stem, path)
@@ -82,6 +90,7 @@ class Study:
     settings: dict
     sessions: dict
     environment: dict[str, str] = field(default_factory=dict)
+    targets: tuple[str, ...] = ()
     runs: int = 0
     asked: bool = False
 
@@ -104,7 +113,7 @@ class Study:
         profile = ROOT / "workflow" / "profiles" / "local"
         command = [
             str(SNAKEMAKE), "--snakefile", str(ROOT / "Snakefile"), "--profile", str(profile),
-            "--cores", str(cores), "--nocolor", *arguments,
+            "--cores", str(cores), "--nocolor", *arguments, *(() if _has_aim(arguments) else self.targets),
         ]  # fmt: skip
         with printed.open("w") as file:
             run = subprocess.Popen(
@@ -220,7 +229,7 @@ class Laboratory:
 
     def __init__(self, folder: Path, quick: bool, seed: int) -> None:
         self.folder, self.quick, self.seed = folder, quick, seed
-        self._undisturbed: dict[str, Undisturbed] = {}
+        self._undisturbed: dict[tuple[str, bool], Undisturbed] = {}
         self._count = 0
         made = folder / "recordings"
         units = "4" if quick else "5"
@@ -237,26 +246,30 @@ class Laboratory:
         for more in (["--sessions", "bracken_1"], ["--resort", "bracken_1"]):
             subprocess.run([*make, *more], check=True, stdout=subprocess.DEVNULL, env=environment)
 
-    def fresh(self, name: str, **settings: dict) -> Study:
-        """A study with recordings and without results."""
+    def fresh(self, name: str, short: bool = False, **settings: dict) -> Study:
+        """A study with recordings and without results; a short one ends with the tables of the population."""
         self._count += 1
         study = Study(self.folder / f"{self._count}-{name}", self._settings(settings), self._sessions())
+        study.targets = SHORT if short or self.quick else ()
         study.folder.mkdir()
         shutil.copytree(self.folder / "recordings", study.folder / "recordings")
         return study
 
-    def copy(self, name: str, of: str = "first") -> Study:
+    def copy(self, name: str, short: bool = False) -> Study:
         """A copy of a finished study."""
         self._count += 1
-        source = self.undisturbed(of).study
+        source = self.undisturbed("first", short).study
         study = Study(self.folder / f"{self._count}-{name}", source.settings, dict(source.sessions))
+        study.targets = source.targets
         shutil.copytree(source.folder, study.folder, symlinks=True)
         return study
 
-    def undisturbed(self, what: str = "first") -> Undisturbed:
+    def undisturbed(self, what: str = "first", short: bool = False) -> Undisturbed:
         """The study as it is when nothing happens: `first`, `resorted`, or with `other` settings."""
-        if what not in self._undisturbed:
-            study = self.fresh(f"undisturbed-{what}", **({"sync": OTHER_SYNC} if what == "other" else {}))
+        key = (what, short or self.quick)
+        if key not in self._undisturbed:
+            more = {"sync": OTHER_SYNC} if what == "other" else {}
+            study = self.fresh(f"undisturbed-{what}", short, **more)
             if what == "resorted":
                 self.resort(study)
             begun = time.monotonic()
@@ -264,8 +277,8 @@ class Laboratory:
             seconds = time.monotonic() - begun
             if outcome.status != 0:
                 raise RuntimeError(f"the undisturbed run failed:\n{outcome.text}")
-            self._undisturbed[what] = Undisturbed(study, content(study), kept(study), seconds)
-        return self._undisturbed[what]
+            self._undisturbed[key] = Undisturbed(study, content(study), kept(study), seconds)
+        return self._undisturbed[key]
 
     def resort(self, study: Study, in_place: bool = False) -> None:
         """Replace the first session's recording by the same one sorted again."""
@@ -296,7 +309,7 @@ def judged(
     lab: Laboratory, study: Study, what: str, done: str, happened: str, holds: bool, of: str = "first"
 ) -> Happening:
     """The line of a study that has come to its end: are its bytes those of the undisturbed run?"""
-    differences = lab.undisturbed(of).differences(study)
+    differences = lab.undisturbed(of, bool(study.targets)).differences(study)
     if differences:
         happened += f"; not the same: {', '.join(differences[:3])} and {max(len(differences) - 3, 0)} more"
     return Happening(what, done, happened, not differences, holds and not differences)

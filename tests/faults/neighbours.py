@@ -16,7 +16,7 @@ def two_runs(lab: Laboratory) -> Iterator[Happening]:
     if not lab.quick:
         cases += [("while it plans", _planning, False), ("while units are fitted", _fitting, True)]
     for moment, reached, replaced in cases:
-        study = lab.fresh("two-runs")
+        study = lab.fresh("two-runs", short=True)
         first = study.start(cores=1)
         until(lambda study=study, reached=reached: reached(study), first)
         if replaced:
@@ -62,27 +62,22 @@ def shared_store(lab: Laboratory) -> Iterator[Happening]:
     """Two studies whose results/store is one folder run at the same time, the same fits among theirs."""
     store = lab.folder / "shared store"
     store.mkdir()
-    studies = [
-        lab.fresh("shares"),
-        lab.fresh("shares-too", sync=lab.undisturbed("other").study.settings["sync"]),
-    ]
+    other = lab.undisturbed("other", short=True)
+    studies = [lab.fresh("shares", True), lab.fresh("shares-too", True, sync=other.study.settings["sync"])]
     for study in studies:
         study.results.mkdir()
         (study.results / "store").symlink_to(store, target_is_directory=True)
     runs = [study.start(cores=1) for study in studies]
     outcomes = [study.end(run) for study, run in zip(studies, runs, strict=True)]
-    verified = [study.odograph("verify").status for study in studies]
     dropped = studies[0].odograph("store", "--drop")
     whole = studies[0].odograph("store", "--check").status == 0
     refused = dropped.status != 0 and dropped.says("shared", "--results")
-    needed = kept(studies[1]).keys() >= lab.undisturbed("other").fits.keys()
+    needed = kept(studies[1]).keys() >= other.fits.keys()
     happened = (
         f"ended with {outcomes[0].status} and {outcomes[1].status}, {len(kept(studies[0]))} fits, all whole"
     )
     happened += f"; --drop {'asks for every study' if refused else 'DROPPED'}"
-    holds = (
-        outcomes[0].status == outcomes[1].status == 0 and verified == [0, 0] and whole and refused and needed
-    )
+    holds = outcomes[0].status == outcomes[1].status == 0 and whole and refused and needed
     for study, of in zip(studies, ("first", "other"), strict=True):
         yield judged(
             lab, study, f"one store, study {of}", "both run at the same time", happened, holds, of=of

@@ -14,7 +14,7 @@ def replaced(lab: Laboratory) -> Iterator[Happening]:
     """Hold the reader still while it has the recording open, replace the file, let it go on, run again."""
     cases = [(moment, in_place) for moment in MOMENTS for in_place in (False, True)]
     for moment, in_place in cases[2:3] if lab.quick else cases:
-        study = lab.fresh("replaced")
+        study = lab.fresh("replaced", short=True)
         run = study.start()
         found: list[int] = []
 

@@ -18,8 +18,8 @@ examples:
 Studies may share a store: make results/store of each a link to one folder. To drop from it, name all of them:
   odograph store --drop --results one/results --results two/results
 
-exit codes: 0 done, 64 the store is shared and only one study named, 65 a fit is damaged (with --check; it is made
-again when it is needed), 66 no store
+exit codes: 0 done, 64 the store is shared and only one study named, 65 a fit is damaged (with --check; it is
+made again when it is needed), 66 no store
 """
 
 

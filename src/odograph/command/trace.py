@@ -129,7 +129,8 @@ def _chain(found: Any) -> Iterator[str]:
     for record in found.records.values():
         by_rule.setdefault(record["rule"], []).append(record)
     for rule, records in by_rule.items():
-        code = sorted({record["code"][rule].removeprefix("sha256:")[:12] for record in records})
+        digests = {record["code"].get(rule, "unknown") for record in records}
+        code = sorted(digest.removeprefix("sha256:")[:12] for digest in digests)
         sessions = {record["keys"].get("session") for record in records} - {None}
         number = (
             f"{len(records)} records of {len(sessions)} sessions"

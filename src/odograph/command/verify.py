@@ -67,7 +67,7 @@ def run(args: argparse.Namespace) -> int:
         found.add(
             ROOT, f"the run root is {found.root}, not {args.root}", "these are the results of another run"
         )
-    damaged = sorted({file for breach in found.breaches for file in breach.damaged})
+    damaged = found.damaged
     if args.remove:
         refuse_beside_a_run(folder)
         for file in damaged:

@@ -84,6 +84,15 @@ class Verification:
     recordings: int = 0
     bytes_read: int = 0
 
+    @property
+    def damaged(self) -> list[str]:
+        """Files whose removal makes the next run make again what does not hold, sorted.
+
+        The run root is among them, since it is what asks for every record.
+        """
+        files = {file for breach in self.breaches for file in breach.damaged}
+        return sorted(files | {ROOT.as_posix()} if files else files)
+
     def add(self, file: str | Path, found: str, meaning: str, damaged: Iterable[str] = ()) -> None:
         """Note a breach."""
         breach = Breach(Path(file).as_posix(), found, meaning, tuple(damaged))
@@ -146,7 +155,7 @@ def _check_records(folder: Path, found: Verification) -> dict[str, dict[str, Any
         records[name] = record
         if entry is None:
             if listed:
-                found.add(name, "the run root does not list this record", _rerun("it was added since"))
+                found.add(name, "the run root does not list this record", "it was added since", (str(ROOT),))
         elif entry["record_id"] != record["record_id"] or entry["content"] != record_content(record):
             meaning = _rerun("it was edited")
             found.add(
@@ -157,12 +166,12 @@ def _check_records(folder: Path, found: Verification) -> dict[str, dict[str, Any
                 name, "the record's bytes changed, though not what it says of the results", "it was edited"
             )
     for name in sorted(set(listed) - set(files)):
-        found.add(name, "the record is gone", _rerun("its products cannot be traced"))
+        found.add(name, "the record is gone", _rerun("its products cannot be traced"), (str(ROOT),))
     return records
 
 
 def _rerun(what: str) -> str:
-    return f"{what}; snakemake makes what is missing and writes the root again"
+    return f"{what}; its job has to run again"
 
 
 def _listed_records(folder: Path, found: Verification) -> dict[str, dict[str, Any]]:
@@ -199,8 +208,7 @@ def _check_products(folder: Path, records: Mapping[str, dict[str, Any]], found: 
         wanted, record_id, name = made[path]
         found.products += 1
         if digest is None:
-            meaning = f"run snakemake again to make it; remove {name} first if that does not bring it back"
-            found.add(path, "the product is gone", meaning, (name,))
+            found.add(path, "the product is gone", f"the job of {name} has to run again", (name,))
             continue
         found.bytes_read += (folder / path).stat().st_size
         if digest != wanted:
