@@ -201,6 +201,8 @@ def node_lost(run: Run) -> tuple[str, bool]:
     job = run.wait_for_fits()
     node = run.cluster.ask("squeue", "-h", "-j", job, "-o", "%N")
     run.cluster.stop_daemon(f"slurmd.{node}", signal.SIGKILL)
+    # What the controller does by itself once the node has not answered for some time.
+    run.cluster.ask("scontrol", "update", f"nodename={node}", "state=down", "reason=lost")
     status = run.end()
     lost = [job for job, state in run.jobs("encoding").items() if state == "NODE_FAIL"]
     run.cluster.start()
@@ -306,7 +308,7 @@ def run_cases(place: Path, cluster: Any, given: argparse.Namespace, table: Any) 
                 what_broke += f", pass {number}"
             table.add(what_broke, "same bytes, no other step", f"{what}; {same}", holds and not different)
             if different or not holds:
-                print((study.folder / "head.log").read_text(), file=sys.stderr)
+                print((study.folder / "head.log").read_text()[-4000:], file=sys.stderr)
 
 
 if __name__ == "__main__":
