@@ -130,6 +130,7 @@ INDEXES: dict[str, Callable[[np.ndarray], Any]] = {
     "negative": lambda v: -v.astype(np.int64),
     "negative first": lambda v: np.concatenate([[-5], v[1:].astype(np.int64)]),
     "zeros": lambda v: np.zeros_like(v),
+    "enormous": lambda v: np.append(v[:-1].astype(np.int64), 10**12),
     "wrapping": lambda v: np.full(v.shape, 2**64 - 1, dtype=np.uint64),
     "fractions": lambda v: v.astype(np.float64) + 0.5,
     "nan": lambda v: np.full(v.shape, np.nan),

@@ -18,6 +18,7 @@ import importlib
 import json
 import os
 import random
+import re
 import select
 import signal
 import subprocess
@@ -58,8 +59,8 @@ def runner(kind: str) -> Any:
     write = reading.write_recording if kind == "recording" else reading.write_records
 
     def run(case: dict[str, Any], folder: Path) -> dict[str, str]:
-        path = write(case, folder)
         try:
+            path = write(case, folder)
             return {"ended": reading.read_case(case, path)}
         except reading.WrongError as error:
             return {"ended": "wrong", "why": str(error)[:2000]}
@@ -174,8 +175,9 @@ def search(kind: str, minutes: float, seed: int, most: int | None = None) -> int
             ended[answer["ended"]] += 1
             why = _complaint(kind, case, answer, Path(name))
             if why is not None:
-                reported[why.split("(")[0][:60]] += 1
-                if reported[why.split("(")[0][:60]] <= 3:
+                kind_of_fault = re.sub(r"[\d\W]+", " ", why)[:40]
+                reported[kind_of_fault] += 1
+                if reported[kind_of_fault] <= 2:
                     print(f"case {number}: {why}\n  {json.dumps(case)}", flush=True)
             number += 1
             if time.monotonic() - told > 30:

@@ -70,15 +70,34 @@ def read_json(path: str | Path) -> Any:
         When the file is missing or is not JSON.
     """
     try:
-        return json.loads(Path(path).read_bytes())
-    except FileNotFoundError as error:
-        raise InputError("the file is missing", file=str(path), remedy="run snakemake again") from error
-    except ValueError as error:
+        text = Path(path).read_bytes().decode()
+        document = json.loads(text)
+        if "\\ud" in text.lower():
+            # Half a surrogate pair is no text: it could be neither shown nor written again.
+            json.dumps(document, ensure_ascii=False).encode()
+        return document
+    except OSError as error:
+        raise _cannot_be_read(path, error, "a JSON document") from error
+    except (ValueError, RecursionError) as error:
         raise InputError(
             f"not a JSON document ({error})",
             file=str(path),
-            remedy="delete the file and run snakemake again",
+            expected="a JSON document",
+            remedy="run `odograph verify --remove`, then snakemake",
         ) from error
+
+
+def _cannot_be_read(path: str | Path, error: OSError, expected: str) -> InputError:
+    if isinstance(error, FileNotFoundError):
+        return InputError(
+            "the file is missing", file=str(path), expected=expected, remedy="run snakemake again"
+        )
+    return InputError(
+        f"the file cannot be read ({error.strerror or error})",
+        file=str(path),
+        expected=expected,
+        remedy="delete what is there and run snakemake again; if it comes back, look at the disk",
+    )
 
 
 def file_digest(path: str | Path) -> str:
@@ -181,12 +200,13 @@ def _read_arrow(path: str | Path, columns: Sequence[str] | None) -> pa.Table:
         with pq.ParquetFile(path) as source:
             return source.read(columns=list(columns) if columns else None, use_threads=False)
     except FileNotFoundError as error:
-        raise InputError("the table is missing", file=str(path), remedy="run snakemake again") from error
-    except pa.ArrowInvalid as error:
+        raise _cannot_be_read(path, error, "a Parquet table") from error
+    except (pa.ArrowException, OSError, ValueError, MemoryError) as error:
         raise InputError(
             f"not a Parquet table ({error})",
             file=str(path),
-            remedy="delete the file and run snakemake again",
+            expected="a Parquet table",
+            remedy="run `odograph verify --remove`, then snakemake",
         ) from error
 
 
@@ -252,21 +272,36 @@ def read_arrays(path: str | Path, wanted: Callable[[str], bool] | None = None) -
     InputError
         When the file is missing or damaged (each array's checksum is verified).
     """
-    import numpy as np
-
     try:
         with zipfile.ZipFile(path) as archive:
-            names = [name.removesuffix(".npy") for name in archive.namelist()]
             return {
-                name: np.lib.format.read_array(io.BytesIO(archive.read(f"{name}.npy")), allow_pickle=False)
-                for name in names
-                if wanted is None or wanted(name)
+                member.filename.removesuffix(".npy"): _read_member(archive, member)
+                for member in archive.infolist()
+                if wanted is None or wanted(member.filename.removesuffix(".npy"))
             }
-    except FileNotFoundError as error:
-        raise InputError("the file is missing", file=str(path), remedy="run snakemake again") from error
-    except (zipfile.BadZipFile, ValueError, EOFError) as error:
+    except OSError as error:
+        raise _cannot_be_read(path, error, "named arrays") from error
+    except Exception as error:
+        # Of damaged bytes zipfile and numpy raise many kinds, down to struct.error and SyntaxError.
         raise InputError(
             f"the file is damaged ({error})",
             file=str(path),
-            remedy="delete the file and run snakemake again",
+            expected="named arrays as odograph writes them",
+            remedy="run `odograph verify --remove`, then snakemake",
         ) from error
+
+
+def _read_member(archive: zipfile.ZipFile, member: zipfile.ZipInfo) -> np.ndarray:
+    """One array; as `pack_arrays` writes it, its bytes are all there, so none can be declared for nothing."""
+    import numpy as np
+
+    if member.compress_type != zipfile.ZIP_STORED or member.compress_size != member.file_size:
+        raise ValueError(f"{member.filename} is packed")
+    stream = io.BytesIO(archive.read(member))
+    version = np.lib.format.read_magic(stream)
+    read_header = np.lib.format.read_array_header_1_0
+    shape, _, dtype = (read_header if version == (1, 0) else np.lib.format.read_array_header_2_0)(stream)
+    if math.prod(shape) * dtype.itemsize > member.file_size:
+        raise ValueError(f"{member.filename} declares the shape {shape}")
+    stream.seek(0)
+    return np.lib.format.read_array(stream, allow_pickle=False)

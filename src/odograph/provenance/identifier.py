@@ -10,6 +10,7 @@ from pathlib import Path
 from odograph.errors import InputError
 
 RECORD_KEY = "odograph-record"
+LARGEST_TEXT = 1 << 20
 _PNG_SIGNATURE = b"\x89PNG\r\n\x1a\n"
 _IDENTIFIER = re.compile(rb"record:[0-9a-f]{64}")
 _PLACES = {
@@ -42,9 +43,22 @@ def read_record_id(path: str | Path) -> str | None:
     try:
         content = path.read_bytes()
     except OSError as error:
-        raise InputError(f"the file cannot be read ({error.strerror})", file=str(path)) from error
+        raise InputError(
+            f"the file cannot be read ({error.strerror})",
+            file=str(path),
+            expected="a figure, table or page made by odograph",
+            remedy="check the path",
+        ) from error
     if path.suffix.lower() == ".png" or content.startswith(_PNG_SIGNATURE):
-        texts = dict(_png_texts(content, path))
+        try:
+            texts = dict(_png_texts(content))
+        except (ValueError, IndexError, zlib.error) as error:
+            raise InputError(
+                f"a damaged PNG file ({error})",
+                file=str(path),
+                expected="a PNG file that is whole",
+                remedy="make the figure again",
+            ) from error
         value = texts.get(RECORD_KEY, "").encode()
         return value.decode() if _IDENTIFIER.fullmatch(value) else None
     place = _PLACES.get(path.suffix.lower())
@@ -52,23 +66,32 @@ def read_record_id(path: str | Path) -> str | None:
     return found.group(1).decode() if found else None
 
 
-def _png_texts(content: bytes, path: Path) -> Iterator[tuple[str, str]]:
+def _png_texts(content: bytes) -> Iterator[tuple[str, str]]:
     """The text chunks of a PNG file: plain (tEXt), compressed (zTXt) and international (iTXt)."""
     if not content.startswith(_PNG_SIGNATURE):
-        raise InputError("not a PNG file, though its name says so", file=str(path))
+        raise ValueError("not a PNG file, though its name says so")
     at = len(_PNG_SIGNATURE)
     while at + 12 <= len(content):
         length = int.from_bytes(content[at : at + 4], "big")
         kind, data = content[at + 4 : at + 8], content[at + 8 : at + 8 + length]
         check = content[at + 8 + length : at + 12 + length]
         if len(check) < 4 or zlib.crc32(kind + data).to_bytes(4, "big") != check:
-            raise InputError("a damaged PNG file", file=str(path), remedy="make the figure again")
+            raise ValueError("a chunk is not what its checksum says")
         key, _, rest = data.partition(b"\0")
         if kind == b"tEXt":
             yield key.decode("latin-1"), rest.decode("latin-1")
         elif kind == b"zTXt":
-            yield key.decode("latin-1"), zlib.decompress(rest[1:]).decode("latin-1")
+            yield key.decode("latin-1"), _unpacked(rest[1:]).decode("latin-1")
         elif kind == b"iTXt":
             compressed, text = rest[0] == 1, rest[2:].split(b"\0", 2)[-1]
-            yield key.decode("latin-1"), (zlib.decompress(text) if compressed else text).decode()
+            yield key.decode("latin-1"), (_unpacked(text) if compressed else text).decode()
         at += 12 + length
+
+
+def _unpacked(packed: bytes) -> bytes:
+    """What was compressed, as far as a text may reach."""
+    unpacker = zlib.decompressobj()
+    text = unpacker.decompress(packed, LARGEST_TEXT)
+    if unpacker.unconsumed_tail:
+        raise ValueError(f"a text of more than {LARGEST_TEXT} bytes")
+    return text

@@ -20,6 +20,7 @@ from typing import Any
 from odograph.errors import DamagedError, OdographError, RecordError
 from odograph.provenance.canonical import digest_value
 from odograph.provenance.files import file_digest, read_json, write_json
+from odograph.provenance.record_shape import fault_of_record
 
 RECORD_FORMAT = 1
 SOFTWARE = ("odograph", "numpy", "scipy", "pandas", "pynwb", "hdmf", "h5py", "pyarrow", "matplotlib", "numba")
@@ -173,27 +174,37 @@ def read_record(path: str | Path) -> dict[str, Any]:
         When it is missing or not JSON.
     """
     record = read_json(path)
-    try:
-        if record["format"] != RECORD_FORMAT:
-            raise RecordError(
-                f"a record of format {record['format']}",
-                file=str(path),
-                expected=f"format {RECORD_FORMAT}",
-                remedy="run snakemake again with this version, or read it with the version that wrote it",
-            )
-        expected = identify(record)
-        found = record["record_id"]
-        record["products"], record["run"]
-    except (KeyError, TypeError, AttributeError) as error:
+    form = record.get("format") if isinstance(record, dict) else None
+    if isinstance(form, int) and form != RECORD_FORMAT:
         raise RecordError(
-            f"the record lacks {error}", file=str(path), remedy="delete it and run snakemake again"
+            f"a record of format {form}",
+            file=str(path),
+            expected=f"format {RECORD_FORMAT}",
+            remedy="run snakemake again with this version, or read it with the version that wrote it",
+        )
+    fault = fault_of_record(record)
+    if fault is not None:
+        raise RecordError(
+            fault,
+            file=str(path),
+            expected=f"a record of format {RECORD_FORMAT} as odograph writes it",
+            remedy="run `odograph verify --remove`, then snakemake",
+        )
+    try:
+        expected, found = identify(record), record["record_id"]
+    except (TypeError, ValueError, RecursionError) as error:
+        raise RecordError(
+            f"its content cannot be digested ({error})",
+            file=str(path),
+            expected="a record as odograph writes it",
+            remedy="run `odograph verify --remove`, then snakemake",
         ) from error
     if found != expected:
         raise RecordError(
             f"the record was changed after it was written: it says {found}",
             file=str(path),
             expected=expected,
-            remedy="delete it and run snakemake again",
+            remedy="run `odograph verify --remove`, then snakemake",
         )
     return record
 

@@ -24,6 +24,7 @@ from odograph.provenance.canonical import digest_value, readable_json
 from odograph.provenance.files import file_digest, read_json, write_if_changed
 from odograph.provenance.known import keep_known, read_known
 from odograph.provenance.layout import PLAN, RESULTS, STORE
+from odograph.provenance.record_shape import fault_of_root
 from odograph.provenance.records import read_record, told_path
 from odograph.provenance.running import still_in_charge
 
@@ -145,15 +146,20 @@ def read_root(folder: str | Path) -> dict[str, Any]:
     """
     path = Path(folder) / ROOT
     document = read_json(path)
-    try:
-        rest = {key: value for key, value in document.items() if key != "own_digest"}
-        whole = document["format"] == ROOT_FORMAT and document["root"] == identify_root(document["records"])
-        whole = whole and document["own_digest"] == digest_value(rest) and rest.keys() == _KEYS
-    except (KeyError, TypeError, AttributeError):
-        whole = False
-    if not whole or path.read_bytes() != readable_json(document).encode():
+    fault = fault_of_root(document)
+    if fault is None:
+        try:
+            rest = {key: value for key, value in document.items() if key != "own_digest"}
+            whole = document["format"] == ROOT_FORMAT and document["root"] == identify_root(
+                document["records"]
+            )
+            whole = whole and document["own_digest"] == digest_value(rest) and rest.keys() == _KEYS
+            whole = whole and path.read_bytes() == readable_json(document).encode()
+        except (TypeError, ValueError, RecursionError):
+            whole = False
+    if fault is not None or not whole:
         raise RecordError(
-            "the run root was changed after it was written",
+            "the run root was changed after it was written" + (f": {fault}" if fault else ""),
             file=str(path),
             expected="the list of records as snakemake wrote it",
             remedy="compare with the root that was printed; delete the file and run snakemake again",

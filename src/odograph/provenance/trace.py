@@ -264,6 +264,7 @@ def _start_from_file(path: Path, results: Path) -> Start:
             f"its record {record_id.removeprefix('record:')[:12]} is not among these results",
             file=str(path),
             place=str(results),
+            expected="the results that it was made with",
             remedy="name the results it was made with by --results; or it was made by an earlier run",
         )
     raise InputError(

@@ -23,6 +23,9 @@ from odograph.settings.problems import (
 from odograph.settings.sessions import SessionRow as SessionRow
 from odograph.settings.sessions import read_sessions as read_sessions
 
+_DEEPEST = 50
+_MOST_ENTRIES = 100_000
+
 
 def load_settings(config: Mapping[str, Any] | str | Path, *, file: str | Path | None = None) -> Settings:
     """Check a configuration and fill in the defaults.
@@ -177,7 +180,7 @@ def key_lines(path: Path) -> dict[tuple[str | int, ...], int]:
     lines: dict[tuple[str | int, ...], int] = {}
     try:
         node = yaml.compose(_read_text(path), Loader=yaml.SafeLoader)
-    except yaml.YAMLError as error:
+    except (yaml.YAMLError, ValueError, RecursionError) as error:
         raise _not_yaml(error, path) from error
     if node is not None:
         _collect_lines(node, (), lines, path)
@@ -187,9 +190,20 @@ def key_lines(path: Path) -> dict[tuple[str | int, ...], int]:
 def _collect_lines(
     node: yaml.Node, above: tuple[str | int, ...], lines: dict[tuple[str | int, ...], int], path: Path
 ) -> None:
+    # An alias may stand for what holds it, or ten aliases for ten aliases each, and so on.
+    if len(above) > _DEEPEST or len(lines) > _MOST_ENTRIES:
+        raise SettingsError(
+            f"entries within entries more than {_DEEPEST} deep"
+            if len(above) > _DEEPEST
+            else f"more than {_MOST_ENTRIES:,} entries",
+            file=str(path),
+            place=f"line {node.start_mark.line + 1}",
+            expected="sections with settings",
+            remedy="write the values out in place of YAML aliases (`*name`)",
+        )
     if isinstance(node, yaml.MappingNode):
         for key, value in node.value:
-            place = (*above, key.value)
+            place = (*above, str(key.value))
             line = key.start_mark.line + 1
             if place in lines:
                 raise SettingsError(
@@ -211,7 +225,8 @@ def _parse(path: Path) -> Mapping[str, Any]:
     text = _read_text(path)
     try:
         config = yaml.safe_load(text)
-    except yaml.YAMLError as error:
+    except (yaml.YAMLError, ValueError, RecursionError, OverflowError) as error:
+        # Dates and numbers that cannot be are found by Python, not by the parser.
         raise _not_yaml(error, path) from error
     if config is None:
         return {}
@@ -244,7 +259,7 @@ def _read_text(path: Path) -> str:
         ) from error
 
 
-def _not_yaml(error: yaml.YAMLError, path: Path) -> SettingsError:
+def _not_yaml(error: Exception, path: Path) -> SettingsError:
     mark = getattr(error, "problem_mark", None)
     place = f"line {mark.line + 1}, column {mark.column + 1}" if mark else None
     return SettingsError(
