@@ -4,9 +4,9 @@
 
 A small study (three minutes of one recording) is run once undisturbed. Then each case breaks something while,
 or before, the workflow runs, and runs it again, with `--unlock` after a killed head and nothing else done by
-hand. All products, the fits in the store and the run root are compared with those of the undisturbed run. Ends
-with status 1 when a line does not hold. Cases that need a small file system of their own are left out, with a
-word, where none can be mounted. What a cluster can do to a study is in tests/cluster/slurm_faults.py.
+hand. All products, the fits in the store and the run root are compared with those of the undisturbed run. It
+ends with status 1 when a line does not hold. Cases that need a small file system of their own are left out,
+with a word, where none can be mounted. What a cluster can do is in tests/cluster/slurm_faults.py.
 """
 
 from __future__ import annotations

@@ -12,7 +12,7 @@ from laboratory import Happening, Laboratory, Study, judged, kill_all, processes
 
 MOMENTS, QUICK_MOMENTS = 25, 3
 # Over how much of an undisturbed run a moment is drawn; more would let most runs end before it.
-SPAN = 0.5
+SPAN = 0.35
 TARGETS = ("all of the run", "the head alone", "a worker")
 
 

@@ -3,52 +3,64 @@
 from __future__ import annotations
 
 import json
+import subprocess
 from collections.abc import Iterator
 
-from laboratory import Happening, Laboratory, Study, judged, kept, processes_of, until
+from laboratory import Happening, Laboratory, Outcome, Study, judged, kept, processes_of, stopped, until
 
 RUN_LOCK = "plan/run.lock"
 
 
 def two_runs(lab: Laboratory) -> Iterator[Happening]:
     """A second run begins while the first plans or works; the recording may have changed in between."""
-    cases = [("while units are fitted", _fitting, False)]
+    yield _second_run(lab, replaced=False)
     if not lab.quick:
-        cases += [("while it plans", _planning, False), ("while units are fitted", _fitting, True)]
-    for moment, reached, replaced in cases:
-        study = lab.fresh("two-runs", short=True)
-        first = study.start(cores=1)
-        until(lambda study=study, reached=reached: reached(study), first)
-        if replaced:
-            lab.resort(study)
+        yield _second_run(lab, replaced=True)
+        yield _while_it_plans(lab)
+
+
+def _second_run(lab: Laboratory, replaced: bool) -> Happening:
+    study = lab.fresh("two-runs", short=True)
+    first = study.start(cores=1)
+    until(lambda: _noted(study) and bool(list(study.results.glob("store/??/*.npz"))), first)
+    if replaced:
+        lab.resort(study)
+    # Held still, it works as long as the others need.
+    with stopped([first.pid]):
         second, looked, unlocked = study.run(), study.run("-n"), study.run("--unlock")
-        outcome = study.end(first)
-        named = f"process {first.pid} on "
-        told = second.status != 0 and second.says(named, "is at work in this folder", "wait until it is done")
-        safe = unlocked.status != 0 and unlocked.says(named, "its lock is in use and stays")
-        beside = looked.status == 0 and looked.says(named, "this is its plan")
-        happened = f"the second {'was told which process works there' if told else 'WAS NOT TOLD'}"
-        happened += (
-            f", --unlock {'refused' if safe else 'NOT REFUSED'}, -n {'looked on' if beside else 'FAILED'}"
-        )
-        happened += f"; the first ended with {outcome.status}"
-        # A recording that was replaced under the first run may end it with code 75: run again.
-        first_holds = outcome.status == 0 or (replaced and outcome.says("changed since this run was planned"))
-        number, last = study.again()
-        holds = told and safe and beside and first_holds and number == 1 and last.status == 0
-        done = (
-            "the recording replaced, then a second run" if replaced else "a second run, --unlock, a dry run"
-        )
-        of = "resorted" if replaced else "first"
-        yield judged(lab, study, f"two runs, {moment}", done, happened, holds, of=of)
+    outcome = study.end(first)
+    told, named = _is_told(second, first), f"process {first.pid} on "
+    safe = unlocked.status != 0 and unlocked.says(named, "its lock is in use and stays")
+    beside = looked.status == 0 and looked.says(named, "this is its plan")
+    happened = f"the second {'told of' if told else 'NOT TOLD OF'} the first"
+    happened += f", --unlock {'refused' if safe else 'NOT REFUSED'}, -n {'looked on' if beside else 'FAILED'}"
+    happened += f"; the first ended with {outcome.status}"
+    # A recording that was replaced under the first run may end it with code 75: run again.
+    in_order = outcome.status == 0 or (replaced and outcome.says("changed since this run was planned"))
+    number, last = study.again()
+    holds = told and safe and beside and in_order and number == 1 and last.status == 0
+    done = "the recording replaced, " * replaced + "a second run, a dry run, --unlock"
+    of = "resorted" if replaced else "first"
+    return judged(lab, study, "two runs, while units are fitted", done, happened, holds, of=of)
 
 
-def _planning(study: Study) -> bool:
-    return _noted(study) and bool(processes_of(study, "survey_recordings"))
+def _while_it_plans(lab: Laboratory) -> Happening:
+    study = lab.fresh("two-plannings", short=True)
+    first = study.start(cores=1)
+    until(lambda: _noted(study) and bool(processes_of(study, "survey_recordings")), first)
+    second = study.run()
+    told, outcome = _is_told(second, first), study.end(first)
+    happened = (
+        f"the second {'told of' if told else 'NOT TOLD OF'} the first, which ended with {outcome.status}"
+    )
+    return judged(
+        lab, study, "two runs, while it plans", "a second run", happened, told and outcome.status == 0
+    )
 
 
-def _fitting(study: Study) -> bool:
-    return _noted(study) and bool(list(study.results.glob("store/??/*.npz")))
+def _is_told(second: Outcome, first: subprocess.Popen[str]) -> bool:
+    words = (f"process {first.pid} on ", "is at work in this folder", "wait until it is done", "--unlock")
+    return second.status != 0 and second.says(*words)
 
 
 def _noted(study: Study) -> bool:
