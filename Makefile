@@ -69,7 +69,7 @@ demo: $(ENVIRONMENT_STAMP) $(RECORDINGS_STAMP)
 	@$(RUN) odograph summary
 
 test: $(ENVIRONMENT_STAMP)
-	@$(RUN) python -m pytest -n 2 --dist loadfile
+	@$(RUN) python -m pytest -n 3 --dist loadfile
 
 lint: $(ENVIRONMENT_STAMP)
 	@$(RUN) ruff check .
