@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 import random
+import time
 from collections.abc import Iterator
 from pathlib import Path
 
@@ -22,8 +23,9 @@ def clocks(lab: Laboratory) -> Iterator[Happening]:
         products = sorted(path for path in study.results.rglob("*") if _is_product(study, path))
         third = len(products) // 3
         draw.shuffle(products)
+        _as_if_just_made(study)
         for number, path in enumerate(products[: 2 * third]):
-            _shift(path, minutes if number < third else -minutes)
+            _shift(path, (minutes if number < third else -minutes) * MINUTE_NS)
         number, outcome = study.again()
         rest = study.run()
         quiet = rest.says("Nothing to be done")
@@ -37,14 +39,15 @@ def other_head(lab: Laboratory) -> Iterator[Happening]:
     """A study made on a machine whose clock is ahead goes on, with other settings, on one that is not."""
     other = lab.undisturbed("other", short=True)
     study = lab.copy("other-head", short=True)
-    for path in [path for path in study.results.rglob("*") if path.is_file()]:
-        _shift(path, 1)
+    _as_if_just_made(study)
+    for path in _files(study):
+        _shift(path, MINUTE_NS)
     study.settings = other.study.settings
-    first = study.run("--until", "sync")
+    first = study.run("--until", "behaviour")
     number, outcome = study.again()
     said = first.says("lie in the future")
     happened = f"ended with {first.status} and {outcome.status}, {'said' if said else 'NOT SAID'}"
-    done = "made with a clock a minute ahead, then other settings, stopped after sync, run on"
+    done = "made with a clock a minute ahead, then other settings, stopped after behaviour, run on"
     holds = first.status == 0 and number == 1 and said
     yield judged(lab, study, "a head with another clock", done, happened, holds, of="other")
 
@@ -64,6 +67,17 @@ def _is_product(study: Study, path: Path) -> bool:
     return path.is_file() and not apart & set(path.parents)
 
 
-def _shift(path: Path, minutes: int) -> None:
-    stamp = path.stat().st_mtime_ns + minutes * MINUTE_NS
+def _files(study: Study) -> list[Path]:
+    return [path for path in study.results.rglob("*") if path.is_file()]
+
+
+def _as_if_just_made(study: Study) -> None:
+    """Move all time stamps so that the latest is now."""
+    since = time.time_ns() - max(path.stat().st_mtime_ns for path in _files(study))
+    for path in _files(study):
+        _shift(path, since)
+
+
+def _shift(path: Path, by_ns: int) -> None:
+    stamp = path.stat().st_mtime_ns + by_ns
     os.utime(path, ns=(stamp, stamp))

@@ -115,10 +115,11 @@ def stopped(lab: Laboratory) -> Iterator[Happening]:
 def orphaned(lab: Laboratory) -> Iterator[Happening]:
     """A worker that outlives its head writes after the next run, which has other settings, wrote."""
     other = lab.undisturbed("other", short=True)
+    differ = bool(other.differences(lab.undisturbed("first", short=True).study))
     study = lab.fresh("orphaned", short=True)
     run = study.start()
-    until(lambda: bool(workers_of(study, "sync")), run)
-    orphans = workers_of(study, "sync")
+    until(lambda: bool(workers_of(study, "behaviour")), run)
+    orphans = workers_of(study, "behaviour")
     for orphan in orphans:
         os.kill(orphan, signal.SIGSTOP)
     run.kill()
@@ -131,5 +132,5 @@ def orphaned(lab: Laboratory) -> Iterator[Happening]:
         time.sleep(0.05)
     happened = f"the next run ended with {outcome.status}, the old worker wrote nothing"
     done = "head killed, its worker held still, the next run with other settings, the worker let go"
-    holds = bool(orphans) and number == 1 and outcome.status == 0
-    yield judged(lab, study, "an orphan of sync", done, happened, holds, of="other")
+    holds = differ and bool(orphans) and number == 1 and outcome.status == 0
+    yield judged(lab, study, "an orphan of behaviour", done, happened, holds, of="other")

@@ -268,8 +268,7 @@ class Laboratory:
         """The study as it is when nothing happens: `first`, `resorted`, or with `other` settings."""
         key = (what, short or self.quick)
         if key not in self._undisturbed:
-            more = {"sync": OTHER_SYNC} if what == "other" else {}
-            study = self.fresh(f"undisturbed-{what}", short, **more)
+            study = self.fresh(f"undisturbed-{what}", short, **(OTHER if what == "other" else {}))
             if what == "resorted":
                 self.resort(study)
             begun = time.monotonic()
@@ -301,8 +300,8 @@ class Laboratory:
         return {"alpha": "recordings/bracken_1.nwb"}
 
 
-#: Another value of one setting that every product below sync depends on.
-OTHER_SYNC = {"max_bend_ms": 2.5}
+#: Another value of one setting that the behaviour table and every product below it depend on.
+OTHER = {"behaviour": {"bin_s": 0.04}}
 
 
 def judged(
