@@ -11,6 +11,7 @@ import numpy as np
 import pandas as pd
 
 from odograph.figures.colours import INK, PATH, SOFT_INK, term_colour, term_label
+from odograph.figures.style import as_it_stands
 
 Extent = tuple[float, float, float, float]
 
@@ -102,8 +103,8 @@ def say(axes: Any, text: str, columns: int = 34) -> None:
     """A panel that has nothing to draw says why."""
     axes.set_axis_off()
     axes.text(
-        0.0, 0.92, wrapped(text, columns, 8), transform=axes.transAxes, va="top", ha="left", color=SOFT_INK,
-        linespacing=1.35,
+        0.0, 0.92, as_it_stands(wrapped(text, columns, 8)), transform=axes.transAxes, va="top", ha="left",
+        color=SOFT_INK, linespacing=1.35,
     )  # fmt: skip
 
 

@@ -12,7 +12,7 @@ from matplotlib.patches import Patch
 
 from odograph.figures.colours import INK, PAPER, RULE, SOFT_INK, TERM_COLOURS, VERDICT_COLOURS
 from odograph.figures.panels import draw_arena, number, place_extent, say, square_map_axes, wrapped
-from odograph.figures.style import axes_at, figure_style, new_figure, rate_colours, text_at
+from odograph.figures.style import as_it_stands, axes_at, figure_style, new_figure, rate_colours, text_at
 from odograph.settings.figures import FiguresSettings
 
 WIDTH_IN, HEIGHT_IN = 7.2, 6.2
@@ -137,7 +137,7 @@ def _draw_findings(axes: Any, documents: Mapping[str, Mapping[str, Any]], column
             axes.text(0, y, f"and {len(told) - place} more, in the report", va="top", color=SOFT_INK)
             break
         colour = VERDICT_COLOURS.get(level, SOFT_INK)
-        axes.text(0, y, lines, va="top", color=colour, fontsize=7, linespacing=1.25)
+        axes.text(0, y, as_it_stands(lines), va="top", color=colour, fontsize=7, linespacing=1.25)
         y -= height
 
 

@@ -19,7 +19,7 @@ from odograph.figures.colours import (
     term_label,
 )
 from odograph.figures.panels import number, say, wrapped
-from odograph.figures.style import axes_at, figure_style, new_figure, text_at
+from odograph.figures.style import as_it_stands, axes_at, figure_style, new_figure, text_at
 from odograph.settings.figures import FiguresSettings
 
 WIDTH_IN = 7.2
@@ -43,13 +43,17 @@ def animal_legend(figure: Figure, marks: dict[str, str], left_in: float, bottom_
         return
     width, height = figure.get_size_inches()
     handles = [
-        Line2D([], [], ls="none", marker=mark, ms=4, mfc="white", mec=SOFT_INK, mew=0.8, label=name)
-        for name, mark in marks.items()
+        Line2D([], [], ls="none", marker=mark, ms=4, mfc="white", mec=SOFT_INK, mew=0.8)
+        for mark in marks.values()
     ]
-    figure.legend(
-        handles=handles, loc="lower left", bbox_to_anchor=(left_in / width, bottom_in / height),
-        ncols=len(marks), handletextpad=0.1, columnspacing=1.0, borderaxespad=0, borderpad=0,
+    # The names come after: a label that begins with an underscore would be left out.
+    legend = figure.legend(
+        handles=handles, labels=["name"] * len(marks), loc="lower left",
+        bbox_to_anchor=(left_in / width, bottom_in / height), ncols=len(marks), handletextpad=0.1,
+        columnspacing=1.0, borderaxespad=0, borderpad=0,
     )  # fmt: skip
+    for drawn, name in zip(legend.get_texts(), marks, strict=True):
+        drawn.set_text(as_it_stands(name))
 
 
 def headline(figure: Figure, title: str, note: str) -> None:

@@ -85,10 +85,15 @@ def axes_at(figure: Figure, left_in: float, bottom_in: float, width_in: float, h
     return figure.add_axes((left_in / width, bottom_in / height, width_in / width, height_in / height))
 
 
+def as_it_stands(text: str) -> str:
+    """Text from a file, to be drawn as it stands: two dollar signs would begin and end a formula."""
+    return text.replace("$", r"\$")
+
+
 def text_at(figure: Figure, x_in: float, y_in: float, text: str, **kwargs: Any) -> Any:
-    """Text placed in inches from the figure's lower left corner."""
+    """Text placed in inches from the figure's lower left corner, as it stands."""
     width, height = figure.get_size_inches()
-    return figure.text(x_in / width, y_in / height, text, **kwargs)
+    return figure.text(x_in / width, y_in / height, as_it_stands(text), **kwargs)
 
 
 def rate_colours(settings: FiguresSettings) -> Colormap:

@@ -8,13 +8,14 @@ import re
 from dataclasses import dataclass, field
 from pathlib import Path
 
-from odograph.errors import InputError
+from odograph.errors import InputError, printable
 from odograph.settings.fields import setting_facts
 from odograph.settings.problems import nearest
 
 REQUIRED_COLUMNS = ("session", "nwb")
 OPTIONAL_COLUMNS = ("animal", "group")
-SESSION_PATTERN = r"^[A-Za-z0-9_-]+$"
+#: A name is also that of a folder and a word of a command: it holds no slash and begins with no dash.
+SESSION_PATTERN = r"^[A-Za-z0-9_][A-Za-z0-9_-]*$"
 
 
 @dataclass(frozen=True)
@@ -105,11 +106,20 @@ def _lines(path: Path) -> list[tuple[int, list[str]]]:
             remedy="save it again as tab-separated text in UTF-8",
         ) from error
     reader = csv.reader(io.StringIO(text), delimiter="\t")
-    lines = [
-        (reader.line_num, cells)
-        for cells in reader
-        if any(cell.strip() for cell in cells) and not cells[0].lstrip().startswith("#")
-    ]
+    try:
+        lines = [
+            (reader.line_num, cells)
+            for cells in reader
+            if any(cell.strip() for cell in cells) and not cells[0].lstrip().startswith("#")
+        ]
+    except csv.Error as error:
+        raise InputError(
+            f"the table cannot be divided into cells ({error})",
+            file=str(path),
+            place=f"line {reader.line_num}",
+            expected="a tab between two columns, one line for every session",
+            remedy='look for a quotation mark (") that is not closed',
+        ) from error
     if not lines:
         raise InputError(
             "the table is empty",
@@ -181,12 +191,12 @@ def _row(columns: list[str], cells: list[str], line: int, path: Path) -> Session
         )
     cells += [""] * (len(columns) - len(cells))
     values = dict(zip(columns, cells, strict=True))
-    if not re.match(SESSION_PATTERN, values["session"]):
+    if not re.fullmatch(SESSION_PATTERN, values["session"]):
         raise InputError(
             f"the session name {values['session']!r}" if values["session"] else "no session name",
             file=str(path),
             place=f"line {line}, column session",
-            expected="letters A to Z, digits, _ and - only",
+            expected="letters A to Z, digits, _ and - only, and no - at the beginning",
             remedy=f"write {_safe_name(values['session'])}" if values["session"] else "give it a name",
         )
     if not values["nwb"]:
@@ -197,6 +207,15 @@ def _row(columns: list[str], cells: list[str], line: int, path: Path) -> Session
             expected="the path of its NWB file",
             remedy="write the path, or remove the line",
         )
+    for column, text in values.items():
+        if printable(text) != text:
+            raise InputError(
+                f"characters that cannot be seen: {printable(text)}",
+                file=str(path),
+                place=f"line {line}, column {column}",
+                expected="a name or a path in plain characters",
+                remedy="type the cell again",
+            )
     return SessionRow(
         session=values["session"],
         nwb=values["nwb"],
@@ -233,4 +252,4 @@ def _check_unique(rows: list[SessionRow], path: Path) -> None:
 
 
 def _safe_name(name: str) -> str:
-    return re.sub(r"[^A-Za-z0-9_-]+", "_", name.strip()) or "session"
+    return re.sub(r"^-|[^A-Za-z0-9_-]+", "_", name.strip()) or "session"
