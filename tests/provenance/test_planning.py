@@ -150,6 +150,14 @@ def test_a_job_that_parses_the_workflow_again_reads_and_writes_nothing(recording
     assert moved() == set()
 
 
+def test_a_look_beside_a_run_leaves_out_sessions_that_are_new(recordings):
+    first = make_plan({})
+    Path("c.nwb").write_text("c")
+    table("session\tnwb", "a\ta.nwb", "b\tb.nwb", "c\tc.nwb")
+    assert make_plan({}, main_process=False) == first
+    assert make_plan({}).sessions == ("a", "b", "c")
+
+
 def test_intake_settings_make_a_session_read_again_and_others_do_not(recordings):
     make_plan({})
     make_plan({"encoding": {"folds": 5}})

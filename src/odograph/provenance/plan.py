@@ -144,7 +144,8 @@ def make_plan(
     config : mapping
         The configuration, as the workflow engine parsed it.
     main_process : bool
-        False in a job that parses the workflow again: then nothing is read anew and nothing is written.
+        False in a job that parses the workflow again, and in a look beside a run: then nothing is read anew,
+        nothing is written, and sessions that are new in the table are left out.
     config_file : str, optional
         The file that the configuration came from, to name its lines in errors.
 
@@ -172,6 +173,8 @@ def make_plan(
         intake = {id(model): canonical_json(model.intake) for model in own.values()}
         requests = [Request(row.session, row.nwb, intake[id(own[row.session])]) for row in rows]
         cache = _refresh(requests, cache, own, rows)
+    else:
+        rows = [row for row in rows if row.session in cache["sessions"]]
     sessions = cache["sessions"]
     digests = {
         f"{session}/{step}": digest
