@@ -175,6 +175,7 @@ def make_plan(
         cache = _refresh(requests, cache, own, rows)
     else:
         rows = [row for row in rows if row.session in cache["sessions"]]
+        own = {row.session: own[row.session] for row in rows}
     sessions = cache["sessions"]
     digests = {
         f"{session}/{step}": digest
