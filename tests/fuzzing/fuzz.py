@@ -173,6 +173,8 @@ def search(kind: str, minutes: float, seed: int, most: int | None = None) -> int
             case = new_case(random.Random(f"{seed} {number}"))
             answer = reader.run(case)
             ended[answer["ended"]] += 1
+            if answer["ended"] in ("hung", "died"):
+                print(f"case {number} {answer['ended']}: {json.dumps(case)}", file=sys.stderr, flush=True)
             why = _complaint(kind, case, answer, Path(name))
             if why is not None:
                 kind_of_fault = re.sub(r"[\d\W]+", " ", why)[:40]

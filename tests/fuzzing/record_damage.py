@@ -159,6 +159,7 @@ def write_records(case: Case, folder: Path) -> Path:
     home = folder / "study"
     shutil.rmtree(home, ignore_errors=True)
     files: dict[str, bytes | None] = dict(study())
+    folders = {file for name, file, *_ in case["damages"] if name == "folder"}
     for name, file, *facts in case["damages"]:
         content = files.get(file)
         if content is None:
@@ -175,13 +176,11 @@ def write_records(case: Case, folder: Path) -> Path:
         elif name in BYTES and content:
             files[file] = bytes(BYTES[name](bytearray(content), *facts))
     for file, content in files.items():
-        if content is not None:
-            (home / file).parent.mkdir(parents=True, exist_ok=True)
+        (home / file).parent.mkdir(parents=True, exist_ok=True)
+        if file in folders:
+            (home / file).mkdir()
+        elif content is not None:
             (home / file).write_bytes(content)
-    for name, file, *_ in case["damages"]:
-        if name == "folder":
-            (home / file).unlink(missing_ok=True)
-            (home / file).mkdir(exist_ok=True)
     return home
 
 

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import json
 import random
+from types import SimpleNamespace
 
 import damage
 import fuzz
@@ -34,6 +35,7 @@ from odograph.recording.reader import read_recording
 from odograph.settings.intake import IntakeSettings
 from odograph.settings.load import load_settings
 from odograph.settings.sessions import read_sessions
+from odograph.steps.intake import _error_again
 from odograph.steps.survey_recordings import survey_recording
 
 RECORDING_SEEDS = json.loads((SEEDS / "recordings.json").read_text(encoding="utf-8"))
@@ -73,7 +75,7 @@ def test_records_that_once_went_wrong(tmp_path, seed):
     assert record_reading.read_case(seed["case"], home) == seed["ends"]
 
 
-@pytest.mark.parametrize("number", range(12))
+@pytest.mark.parametrize("number", range(8))
 def test_some_new_cases(tmp_path, number):
     for kind, new_case in (("recording", damage.new_case), ("records", record_damage.new_case)):
         answer = fuzz.runner(kind)(_harmless(new_case, number), tmp_path)
@@ -125,14 +127,15 @@ def endless():
 
 def test_a_recording_whose_reading_never_ends_is_a_finding(tmp_path, endless):
     path, request = damaged(tmp_path, endless)
-    error = survey([request], workers=1, patience_s=6.0)["walk"]["error"]
+    error = survey([request], workers=1, patience_s=4.0)["walk"]["error"]
     reading.check_facts(error)
     assert error["file"] == str(path)
-    assert "was still being read after 6 s" in error["found"]
+    assert "was still being read after 4 s" in error["found"]
 
 
-def test_a_reader_that_dies_is_a_finding_and_the_next_recording_is_read(tmp_path, monkeypatch):
-    # A stand-in for a library that falls over a damaged file: the reader kills itself on a name.
+@pytest.fixture
+def falling_reader(tmp_path, monkeypatch):
+    """A stand-in for a library that falls over a damaged file: the reader kills itself on a name."""
     (tmp_path / "falling_reader.py").write_text(
         "import json, os, sys\n"
         "for line in sys.stdin:\n"
@@ -142,10 +145,23 @@ def test_a_reader_that_dies_is_a_finding_and_the_next_recording_is_read(tmp_path
     )
     monkeypatch.setenv("PYTHONPATH", str(tmp_path))
     monkeypatch.setattr("odograph.provenance.survey._READER", "falling_reader")
+
+
+@pytest.mark.usefixtures("falling_reader")
+def test_a_reader_that_dies_is_a_finding_and_the_next_recording_is_read():
     answers = survey([Request("bad", "bad.nwb", "{}"), Request("good", "good.nwb", "{}")], workers=1)
     reading.check_facts(answers["bad"]["error"])
     assert "signal 11" in answers["bad"]["error"]["found"]
     assert answers["good"] == {"units": {}}
+
+
+@pytest.mark.usefixtures("falling_reader")
+def test_the_job_that_says_why_does_not_die_of_it():
+    """The inventory of a recording that killed its reader when the run was planned."""
+    step = SimpleNamespace(session="bad", source={"intake": {}})
+    error = _error_again(step, "bad.nwb")
+    assert "signal 11" in reading.check_error(error) and error.file == "bad.nwb"
+    assert _error_again(SimpleNamespace(session="good", source={"intake": {}}), "good.nwb") is None
 
 
 # ---- memory, waiting and other files

@@ -11,18 +11,29 @@ from collections.abc import Callable, Mapping
 from pathlib import PurePosixPath, PureWindowsPath
 from typing import Any
 
+_DEEPEST = 30
 _NAME = re.compile(r"[A-Za-z0-9_-]+")
 Check = Callable[[Any, str], str | None]
 
 
 def fault_of_record(record: Any) -> str | None:
     """What is wrong with the form of a record, in words; None when nothing is."""
-    return _RECORD(record, "the record")
+    return _RECORD(record, "the record") or _depth(record, "the record")
 
 
 def fault_of_root(document: Any) -> str | None:
     """What is wrong with the form of a run root, in words; None when nothing is."""
-    return _ROOT(document, "the run root")
+    return _ROOT(document, "the run root") or _depth(document, "the run root")
+
+
+def _depth(document: Any, name: str) -> str | None:
+    level = [document]
+    for _ in range(_DEEPEST):
+        held = [one for one in level if isinstance(one, dict | list)]
+        level = [inner for one in held for inner in (one.values() if isinstance(one, dict) else one)]
+        if not level:
+            return None
+    return f"{name} holds lists within lists more than {_DEEPEST} deep"
 
 
 def _is(kind: type | tuple[type, ...], words: str) -> Check:
