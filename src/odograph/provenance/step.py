@@ -11,6 +11,7 @@ import argparse
 import json
 import logging
 import os
+import sys
 import time
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
@@ -199,6 +200,7 @@ class Step:
         """Write the record."""
         self.record.run["started"] = self._started_at
         self.record.run["seconds"] = round(time.monotonic() - self._started, 3)
+        self.record.run |= _taken()
         self.record.write(self.output("record"), still_in_charge)
 
 
@@ -313,6 +315,20 @@ def left_out_because(stage: str, document: Mapping[str, Any]) -> dict[str, Any]:
         "found": f"left out because {stage} failed: {failure_in(document).found}",
         "expected": f"a session that passes {stage}",
         "remedy": f"mend what {stage} reports for this session",
+    }
+
+
+def _taken() -> dict[str, float]:
+    """What this process took so far: time of processors in s, and memory at its most in MB."""
+    try:
+        import resource
+    except ModuleNotFoundError:  # not on every system
+        return {}
+    usage = resource.getrusage(resource.RUSAGE_SELF)
+    unit = 1e6 if sys.platform == "darwin" else 1e3
+    return {
+        "processor_s": round(usage.ru_utime + usage.ru_stime, 3),
+        "memory_mb": round(usage.ru_maxrss / unit, 1),
     }
 
 
