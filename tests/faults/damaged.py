@@ -85,7 +85,7 @@ def _case(lab: Laboratory, study: Study, name: str, how: str, follow: bool) -> H
         (study.results / path).unlink(missing_ok=True)
     first = study.run()
     more, outcome = (0, first) if first.status == 0 else study.again()
-    if told in first.text:
+    if first.status != 0 and told in first.text:
         found.append("the reading step")
     happened = (
         f"found by {' and '.join(found) or 'planning'}; right after {more + 1} run{'s' if more else ''}"

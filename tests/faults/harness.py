@@ -34,6 +34,7 @@ tables = load(TESTS / "benchmarks" / "benchmark_table.py")
 #: By name: the case, and whether the quick version has it.
 CASES: dict[str, tuple[Callable[[Laboratory], Iterator[Happening]], bool]] = {
     "killed": (killed.killed, True),
+    "after-a-change": (killed.after_a_change, False),
     "orphaned": (killed.orphaned, False),
     "stopped": (killed.stopped, False),
     "full-disk": (full_disk.full_disk, True),

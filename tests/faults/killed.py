@@ -112,6 +112,21 @@ def stopped(lab: Laboratory) -> Iterator[Happening]:
         yield judged(lab, study, f"{name} to the head", "while units were fitted", happened, holds)
 
 
+def after_a_change(lab: Laboratory) -> Iterator[Happening]:
+    """A setting of sync is changed in a finished study, and the job after it is killed amid old results."""
+    warned = lab.undisturbed("warned")
+    study = lab.copy("changed")
+    study.settings = warned.study.settings
+    run = study.start(cores=1)
+    met = until(lambda: bool(workers_of(study, "behaviour")), run) and _kill("a worker", study, run)
+    study.end(run)
+    number, outcome = study.again()
+    happened = f"run {number} ended with {outcome.status}"
+    done = "a setting of sync changed in a finished study, then SIGKILL to behaviour"
+    holds = met and number == 1 and outcome.status == 0
+    yield judged(lab, study, "kill -9 amid old results", done, happened, holds, of="warned")
+
+
 def orphaned(lab: Laboratory) -> Iterator[Happening]:
     """A worker that outlives its head writes after the next run, which has other settings, wrote."""
     other = lab.undisturbed("other", short=True)

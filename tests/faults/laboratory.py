@@ -265,10 +265,10 @@ class Laboratory:
         return study
 
     def undisturbed(self, what: str = "first", short: bool = False) -> Undisturbed:
-        """The study as it is when nothing happens: `first`, `resorted`, or with `other` settings."""
+        """The study as it is when nothing happens: `first`, `resorted`, or with `SETTINGS`."""
         key = (what, short or self.quick)
         if key not in self._undisturbed:
-            study = self.fresh(f"undisturbed-{what}", short, **(OTHER if what == "other" else {}))
+            study = self.fresh(f"undisturbed-{what}", short, **SETTINGS.get(what, {}))
             if what == "resorted":
                 self.resort(study)
             begun = time.monotonic()
@@ -300,8 +300,9 @@ class Laboratory:
         return {"alpha": "recordings/bracken_1.nwb"}
 
 
-#: Another value of one setting that the behaviour table and every product below it depend on.
-OTHER = {"behaviour": {"bin_s": 0.04}}
+#: Other settings: one that the behaviour table and every product below it depend on, and one that changes
+#: what sync says, and so every record below, but no number.
+SETTINGS = {"other": {"behaviour": {"bin_s": 0.04}}, "warned": {"sync": {"warn_drift_ppm": 0.001}}}
 
 
 def judged(
