@@ -133,8 +133,10 @@ class Many:
 
     def _add_sessions(self, number: int) -> list[str]:
         new = [f"session_{n:05d}" for n in range(len(self.sessions), number)]
-        for session in new:
-            self._write_recording(session, f"animal_{int(session[-5:]) % ANIMALS:02d}")
+        for n, session in enumerate(new, len(self.sessions)):
+            # What is copied has the model's spikes; the first sessions have their own: none shares a fit.
+            later_s = 0.0 if self.sessions else 1e-6 * n
+            self._write_recording(session, f"animal_{n % ANIMALS:02d}", later_s)
         self.sessions += new
         (self.folder / "config").mkdir(exist_ok=True)
         shutil.copy(ROOT / "config" / "config.yaml", self.folder / "config" / "config.yaml")
@@ -142,7 +144,7 @@ class Many:
         (self.folder / "config" / "sessions.tsv").write_text("\n".join(["session\tnwb", *rows]) + "\n")
         return new
 
-    def _write_recording(self, session: str, animal: str) -> None:
+    def _write_recording(self, session: str, animal: str, later_s: float) -> None:
         import h5py
 
         path = self.recordings / f"{session}.nwb"
@@ -151,6 +153,7 @@ class Many:
             for place, text in (("general/subject/subject_id", animal), ("identifier", session)):
                 del file[place]
                 file[place] = text
+            file["units/spike_times"][...] = file["units/spike_times"][()] + later_s
 
     def change_one_unit(self) -> None:
         """One unit of the last session loses its last spike but one, as if sorted anew."""
