@@ -99,16 +99,20 @@ def main() -> int:
     parser.add_argument("--json", type=Path, metavar="FILE", help="write the table to this file as well")
     parser.add_argument("--seed", type=int, default=1, help="of moments and of what is damaged (1)")
     options = parser.parse_args()
+    folder = Path(tempfile.mkdtemp(prefix="faults-"))
+    try:
+        return _passes(Laboratory(folder, options.quick, options.seed), options)
+    finally:
+        shutil.rmtree(folder, ignore_errors=True)
+
+
+def _passes(lab: Laboratory, options: argparse.Namespace) -> int:
     status = 0
     for number in range(options.passes):
-        seed = options.seed + number
+        lab.seed = options.seed + number
         title = "What happens when things break" + (f", pass {number + 1}" if options.passes > 1 else "")
-        table = FaultTable(title, quick=options.quick, seed=seed)
-        folder = Path(tempfile.mkdtemp(prefix="faults-"))
-        try:
-            _make(Laboratory(folder, options.quick, seed), table, options.case)
-        finally:
-            shutil.rmtree(folder, ignore_errors=True)
+        table = FaultTable(title, quick=options.quick, seed=lab.seed)
+        _make(lab, table, options.case)
         status |= table.finish(options.json)
         print(flush=True)
     return status

@@ -72,7 +72,7 @@ def _noted(study: Study) -> bool:
 
 def shared_store(lab: Laboratory) -> Iterator[Happening]:
     """Two studies whose results/store is one folder make the same fits at the same time."""
-    store = lab.folder / "shared store"
+    store = lab.folder / f"store of pass {lab.seed}"
     store.mkdir()
     studies = [lab.fresh(name, short=True) for name in ("shares", "shares-too")]
     for study in studies:
