@@ -14,8 +14,9 @@ from pathlib import Path
 
 import pytest
 
-from odograph.errors import InputError
+from odograph.errors import InputError, OdographError, printable
 from odograph.provenance import plan_files
+from odograph.provenance.archive.replay import lay_out
 from odograph.provenance.plan import make_plan
 from odograph.provenance.record_shape import fault_of_record, fault_of_root
 from odograph.settings.fields import setting_facts
@@ -276,3 +277,41 @@ def test_records_and_roots_name_no_path_outside(path):
     root["code"] = {"commit": None, "modified": None}
     assert fault_of_root(root | {"records": [row | {"file": "results/record.json"}]}) is None
     assert "records[0].file" in fault_of_root(root | {"records": [row]})
+
+
+@pytest.mark.parametrize(
+    ("change", "found"),
+    [
+        ({"file": "../x.nwb"}, "leads out"),
+        ({"file": "/etc/x.nwb"}, "leads out"),
+        ({"file": "a\\..\\x.nwb"}, "leads out"),
+        ({"bytes": "-1"}, "bytes"),
+        ({"sha256": None}, "no sha256"),
+    ],
+)
+def test_an_archive_lays_no_recording_outside_the_study(tmp_path, change, found):
+    row = {"session": "a", "file": "a.nwb", "enclosed": "yes", "bytes": "3", "fetch_from": "", "sha256": "0"}
+
+    def laid_out(name, row):
+        payload, study = tmp_path / name / "data", tmp_path / name / "study" / "inner"
+        (payload / "results").mkdir(parents=True)
+        study.mkdir(parents=True)
+        (payload / "a.nwb").write_bytes(b"abc")
+        kept = {key: value for key, value in row.items() if value is not None}
+        table = "\t".join(kept) + "\n" + "\t".join(kept.values()) + "\n"
+        (payload / "recordings.tsv").write_text(table, encoding="utf-8")
+        lay_out(payload.parent, study, None)
+        return study
+
+    assert (laid_out("whole", row) / "a.nwb").read_bytes() == b"abc"
+    with pytest.raises(InputError, match=found):
+        laid_out("damaged", row | change)
+    assert [path.name for path in (tmp_path / "damaged/study").rglob("*")] == ["inner"]
+
+
+def test_what_a_file_says_does_not_reach_the_terminal_as_a_command():
+    # ECMA-48: ESC [ begins a control sequence, and so does the single character 9B hex.
+    said = OdographError("\x1b[31mred\x9b2J\u202egnp.exe", file="a\x07b", remedy="line\n\tindented")
+    assert said.message() == ("a\\x07b: \\x1b[31mred\\x9b2J\\u202egnp.exe\n  what to do: line\n\tindented")
+    assert printable("Sören, 北, µm·°, Κατερίνα") == "Sören, 北, µm·°, Κατερίνα"
+    assert printable("a\ud800b") == "a\\ud800b"

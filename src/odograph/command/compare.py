@@ -11,7 +11,7 @@ from dataclasses import asdict, dataclass
 from pathlib import Path
 from typing import Any
 
-from odograph.errors import InputError, OdographError
+from odograph.errors import InputError, OdographError, printable
 
 EXIT_SAME, EXIT_DIFFERENT, EXIT_NO_INPUT = 0, 1, 66
 _MOST_LINES = 25
@@ -85,7 +85,7 @@ def run(args: argparse.Namespace) -> int:
     if args.json:
         print(json.dumps({"schema_version": 1, **_plain(asdict(found))}, indent=1, sort_keys=True))
     else:
-        print("\n".join(_text(found)))
+        print(printable("\n".join(_text(found))))
     return EXIT_DIFFERENT if found.changes or found.regrouped else EXIT_SAME
 
 

@@ -9,7 +9,7 @@ from collections.abc import Iterator, Mapping
 from pathlib import Path
 from typing import Any
 
-from odograph.errors import OdographError, SettingsError
+from odograph.errors import OdographError, SettingsError, printable
 
 EXIT_OK, EXIT_DATA, EXIT_NO_INPUT, EXIT_SETTINGS = 0, 65, 66, 78
 
@@ -55,7 +55,7 @@ def run(args: argparse.Namespace) -> int:
     if args.json:
         print(json.dumps(found, indent=2, sort_keys=True))
     else:
-        print("\n".join(text_lines(args.file, found)))
+        print(printable("\n".join(text_lines(args.file, found))))
     return EXIT_DATA if found["verdict"] == "fail" else EXIT_OK
 
 

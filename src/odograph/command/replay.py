@@ -46,7 +46,8 @@ def add_parser(subparsers: argparse._SubParsersAction[argparse.ArgumentParser]) 
         "replay",
         help="run an archived analysis again and compare",
         description="Check the package, build the environment it names, run the analysis anew in a folder of "
-        "its own and compare each table number by number and each figure by what it was drawn from.",
+        "its own and compare each table number by number and each figure by what it was drawn from. The "
+        "archive's own code is run: replay only what you trust.",
         epilog=_EXAMPLES,
         formatter_class=argparse.RawDescriptionHelpFormatter,
     )

@@ -10,7 +10,7 @@ from collections.abc import Iterator
 from pathlib import Path
 from typing import Any
 
-from odograph.errors import InputError, OdographError
+from odograph.errors import InputError, OdographError, printable
 
 EXIT_OK, EXIT_DATA, EXIT_NO_INPUT = 0, 65, 66
 _MOST_UNITS = 12
@@ -85,7 +85,7 @@ def run(args: argparse.Namespace) -> int:
     elif form == "json":
         print(json.dumps(found.document() | {"settings": settings}, indent=1, sort_keys=True))
     else:
-        print("\n".join(text_lines(found, settings, args.results, everything=args.all)))
+        print(printable("\n".join(text_lines(found, settings, args.results, everything=args.all))))
     return EXIT_DATA if found.problems else EXIT_OK
 
 

@@ -8,7 +8,7 @@ import sys
 from dataclasses import asdict
 from pathlib import Path
 
-from odograph.errors import OdographError
+from odograph.errors import OdographError, printable
 
 EXIT_OK, EXIT_BREACH, EXIT_NO_INPUT = 0, 1, 66
 
@@ -76,7 +76,7 @@ def run(args: argparse.Namespace) -> int:
         document = {"schema_version": 1, **asdict(found), "holds": not found.breaches}
         print(json.dumps(document, indent=1, sort_keys=True))
     else:
-        print(_text(found))
+        print(printable(_text(found)))
         if damaged:
             print(f"\n{_remedy(len(damaged), args.remove)}")
     return EXIT_BREACH if found.breaches else EXIT_OK

@@ -36,6 +36,13 @@ def _depth(document: Any, name: str) -> str | None:
     return f"{name} holds lists within lists more than {_DEEPEST} deep"
 
 
+def stays_within(path: str) -> bool:
+    """Whether a path, put below a folder, stays within it on every system."""
+    parts = PurePosixPath(path).parts
+    outside = path.startswith("/") or ".." in parts or bool(PureWindowsPath(path).drive)
+    return bool(parts) and not outside and "\0" not in path and "\\" not in path
+
+
 def _is(kind: type | tuple[type, ...], words: str) -> Check:
     def check(value: Any, name: str) -> str | None:
         fits = isinstance(value, kind) and not (kind is int and isinstance(value, bool))
@@ -52,8 +59,7 @@ def _path(value: Any, name: str) -> str | None:
     """A path below the study's folder."""
     if not isinstance(value, str) or not value or "\0" in value:
         return f"{name} is {_words(value)}, not a path"
-    path = PurePosixPath(value)
-    if path.is_absolute() or ".." in path.parts or PureWindowsPath(value).drive:
+    if not stays_within(value):
         return f"{name} is {_words(value)}, which leads out of the study's folder"
     return None
 

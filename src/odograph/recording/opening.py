@@ -1,30 +1,24 @@
-"""Opening an NWB file: the file must be there, whole, NWB 2 or later, and lead nowhere that is gone."""
+"""Opening an NWB file for reading: what pynwb makes of it, by place, and data that are there."""
 
 from __future__ import annotations
 
-import math
-import os
 import re
 import warnings
 from collections.abc import Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass, field, replace
-from functools import cache
 from pathlib import Path
 from typing import Any
 
-import h5py
 import numpy as np
 
-from odograph.errors import InputError, OdographError, printable
-from odograph.recording.links import MOST_PATHS, Links, follow_links, sources_of
+from odograph.errors import InputError, OdographError
+from odograph.recording.file_facts import check_is_hdf5, first_line, links_of, read_file_facts
+from odograph.recording.held import FEW_BYTES, LARGEST_RATIO, byte_count, extent_of, memory
+from odograph.recording.links import Links
 from odograph.recording.model import FileFacts, Finding, finding
 from odograph.settings.intake import IntakeSettings
 
-#: Of unpacked to packed bytes; constants compress well, but not as well as this.
-LARGEST_RATIO = 5000
-#: What may be declared without being there: data sets of fill values take no room in the file.
-FEW_BYTES = 1 << 26
 _TIME_ZONE = re.compile(r"(Z|[+-]\d{2}:?\d{2})$")
 
 
@@ -65,7 +59,7 @@ class OpenRecording:
         except Exception as error:
             # Of damaged data h5py raises whatever HDF5 stumbled over, down to KeyError and TypeError.
             raise self.refuse(
-                f"the data cannot be read ({_first_line(error)})",
+                f"the data cannot be read ({first_line(error)})",
                 place=place,
                 expected="data that are whole",
                 remedy="copy the file anew from its source; this copy is damaged",
@@ -81,10 +75,10 @@ class OpenRecording:
             in a file of raw bytes, or in a virtual data set whose source is gone.
         """
         try:
-            needed, held, outside = _extent_of(data, part)
+            needed, held, outside = extent_of(data, part)
         except Exception as error:
             raise self.refuse(
-                f"the data cannot be read ({_first_line(error)})",
+                f"the data cannot be read ({first_line(error)})",
                 place=place,
                 expected="data that are whole",
                 remedy="copy the file anew from its source; this copy is damaged",
@@ -99,16 +93,16 @@ class OpenRecording:
             )
         if held is not None and needed > max(FEW_BYTES, LARGEST_RATIO * held):
             raise self.refuse(
-                f"{_bytes(needed)} are declared, {_bytes(held)} are there",
+                f"{byte_count(needed)} are declared, {byte_count(held)} are there",
                 place=place,
                 expected="about as many data as the shape says",
                 remedy="copy the file anew from its source, or write the data set in the shape of its data",
             )
-        if needed > _memory():
+        if needed > memory():
             raise self.refuse(
-                f"the data take {_bytes(needed)}",
+                f"the data take {byte_count(needed)}",
                 place=place,
-                expected=f"no more than this machine's memory of {_bytes(_memory())}",
+                expected=f"no more than this machine's memory of {byte_count(memory())}",
                 remedy="check the place in the settings of intake, or read the file on a larger machine",
             )
 
@@ -159,9 +153,9 @@ def open_recording(path: str | Path, settings: IntakeSettings) -> Iterator[OpenR
         links to nowhere.
     """
     path = Path(path)
-    _check_is_hdf5(path)
-    links = _follow_links(path)
-    facts = replace(_file_facts(path), linked_files=links.files)
+    check_is_hdf5(path)
+    links = links_of(path)
+    facts = replace(read_file_facts(path), linked_files=links.files)
     _check_missing(path, links, settings)
     pynwb = _import_pynwb()
     with warnings.catch_warnings():
@@ -209,153 +203,11 @@ def _import_pynwb() -> Any:
         import pynwb.misc
     except OSError as error:
         raise OdographError(
-            f"pynwb cannot be loaded ({_first_line(error)})",
+            f"pynwb cannot be loaded ({first_line(error)})",
             expected="a cache folder that can be written",
             remedy="set the environment variable XDG_CACHE_HOME to a folder you can write to",
         ) from error
     return pynwb
-
-
-def _extent_of(data: Any, part: slice | None) -> tuple[int, int | None, str | None]:
-    """Bytes that reading takes, bytes that the file holds, and the other file that the data are kept in."""
-    # hdmf wraps data sets of references and of text; the stored one is inside.
-    stored = getattr(data, "dataset", data)
-    if not isinstance(stored, h5py.Dataset):
-        return 0, None, None
-    shape = stored.shape or ()
-    if part is not None and shape:
-        shape = (len(range(*part.indices(shape[0]))), *shape[1:])
-    needed = math.prod(shape) * stored.dtype.itemsize
-    if stored.is_virtual:
-        gone = [str(path) for path in sources_of(stored) if not path.is_file()]
-        return needed, None, gone[0] if gone else None
-    outside = stored.external
-    return needed, stored.id.get_storage_size(), str(outside[0][0]) if outside else None
-
-
-def _bytes(count: int) -> str:
-    return f"{count / 1e9:.3g} GB" if count >= 1e8 else f"{count:,} bytes"
-
-
-@cache
-def _memory() -> int:
-    """Bytes of this machine's memory; where the system does not say, as many as any machine has."""
-    try:
-        return os.sysconf("SC_PAGE_SIZE") * os.sysconf("SC_PHYS_PAGES")
-    except (AttributeError, OSError, ValueError):
-        return 1 << 44
-
-
-def _file_facts(path: Path) -> FileFacts:
-    try:
-        with h5py.File(path, "r") as file:
-            version = _text(file.attrs.get("nwb_version")) or _text_of(file, "nwb_version")
-            if version is None:
-                raise InputError(
-                    "HDF5, but not NWB: it names no NWB version",
-                    file=str(path),
-                    place="attribute nwb_version",
-                    expected="an NWB file of version 2 or later",
-                    remedy="check the path in the sessions table; convert the recording to NWB 2",
-                )
-            number = re.search(r"\d+", version)
-            if number is None or int(number.group()) < 2:
-                raise InputError(
-                    f"NWB version {version}",
-                    file=str(path),
-                    place="attribute nwb_version",
-                    expected="NWB 2.0 or later",
-                    remedy="convert the file to NWB 2",
-                )
-            return FileFacts(
-                path=path,
-                nwb_version=version,
-                identifier=_text_of(file, "identifier"),
-                session_id=_text_of(file, "general/session_id"),
-                session_start_time=_text_of(file, "session_start_time"),
-                description=_text_of(file, "session_description"),
-            )
-    except OSError as error:
-        raise _open_error(path, error) from error
-    except OdographError:
-        raise
-    except Exception as error:
-        raise _walk_error(path, error) from error
-
-
-def _check_is_hdf5(path: Path) -> None:
-    recording = "an NWB file (HDF5)"
-    check_path = "check the path in the sessions table"
-    if not path.exists():
-        raise InputError("there is no such file", file=str(path), expected=recording, remedy=check_path)
-    if path.is_dir():
-        raise InputError(
-            "a folder, not a file",
-            file=str(path),
-            expected=recording,
-            remedy="name the file; a recording kept as a Zarr folder has to be exported to HDF5 first",
-        )
-    try:
-        with path.open("rb") as stream:
-            head = stream.read(256)
-    except OSError as error:
-        raise _open_error(path, error) from error
-    if not head:
-        raise InputError("the file is empty", file=str(path), expected=recording, remedy="copy it anew")
-    if head.startswith(b"version ") and b"git-lfs" in head:
-        raise InputError(
-            "a Git LFS pointer, not the recording itself",
-            file=str(path),
-            expected=recording,
-            remedy="fetch the data: git lfs pull",
-        )
-    if not h5py.is_hdf5(path):
-        raise InputError("not an HDF5 file", file=str(path), expected=recording, remedy=check_path)
-
-
-def _open_error(path: Path, error: OSError) -> InputError:
-    text = str(error)
-    if isinstance(error, PermissionError) or "Permission denied" in text:
-        found, remedy = "the file may not be read (permission denied)", "ask for permission to read it"
-    elif "truncated" in text or "eof" in text:
-        found = f"the file is truncated ({_first_line(error)})"
-        remedy = "copy it anew from its source and compare the sizes"
-    elif "lock" in text:
-        found = f"the file is locked ({_first_line(error)})"
-        remedy = (
-            "close the program that writes it; on a network disk without locks set the environment "
-            "variable HDF5_USE_FILE_LOCKING to FALSE"
-        )
-    else:
-        found, remedy = f"the file cannot be opened ({_first_line(error)})", "copy it anew from its source"
-    return InputError(found, file=str(path), expected="an NWB file that is whole", remedy=remedy)
-
-
-def _follow_links(path: Path) -> Links:
-    try:
-        links = follow_links(path)
-    except OSError as error:
-        raise _open_error(path, error) from error
-    except Exception as error:
-        # Of damaged bookkeeping h5py raises whatever HDF5 stumbled over.
-        raise _walk_error(path, error) from error
-    for link in links.missing:
-        if link.no_file:
-            raise InputError(
-                f"the link leads to what is no file: {link.describe()}",
-                file=str(path),
-                place=link.place,
-                expected="a link to another HDF5 file; a pipe or a device would be waited for without end",
-                remedy="remove the link, or let it name the file",
-            )
-    if links.paths >= MOST_PATHS:
-        raise InputError(
-            "its groups hold each other: there is no end of ways to reach them",
-            file=str(path),
-            expected="every group in one place, and soft links elsewhere",
-            remedy="write the file anew with pynwb",
-        )
-    return links
 
 
 def _check_missing(path: Path, links: Links, settings: IntakeSettings) -> None:
@@ -368,15 +220,6 @@ def _check_missing(path: Path, links: Links, settings: IntakeSettings) -> None:
             expected="every linked file at the place the link names",
             remedy="put the linked files back, or set intake.missing_links to warn if they are not needed",
         )
-
-
-def _walk_error(path: Path, error: Exception) -> InputError:
-    return InputError(
-        f"the file's structure cannot be walked ({_first_line(error)})",
-        file=str(path),
-        expected="an NWB file that is whole",
-        remedy="copy it anew from its source",
-    )
 
 
 def _read(pynwb: Any, path: Path, links: Links) -> tuple[Any, Any, dict[str, Any], dict[str, str]]:
@@ -404,7 +247,7 @@ def _read(pynwb: Any, path: Path, links: Links) -> tuple[Any, Any, dict[str, Any
 def _reason(error: BaseException) -> str:
     """What hdmf says went wrong, without the dump of the object that it puts before it."""
     _, cut, cause = str(error).rpartition("due to:")
-    text = (cause.strip(" )\"'") if cut else _first_line(error)).split("\n")[0]
+    text = (cause.strip(" )\"'") if cut else first_line(error)).split("\n")[0]
     return f"{type(error).__name__}: {text[:240]}"
 
 
@@ -459,21 +302,3 @@ def _check_times_of_file(opened: OpenRecording) -> None:
             remedy="all times are taken as they stand; make sure that no writer subtracted the difference "
             "from some of them",
         )
-
-
-def _text(value: Any) -> str | None:
-    if isinstance(value, np.ndarray):
-        value = value.ravel()[0] if value.size else None
-    if isinstance(value, bytes):
-        value = value.decode("utf-8", "replace")
-    return printable(str(value)) if value is not None and not isinstance(value, h5py.Empty) else None
-
-
-def _text_of(file: h5py.File, place: str) -> str | None:
-    thing = file.get(place)
-    return _text(thing[()]) if isinstance(thing, h5py.Dataset) and thing.size == 1 else None
-
-
-def _first_line(error: BaseException) -> str:
-    text = str(error).strip()
-    return text.splitlines()[0][:200] if text else type(error).__name__

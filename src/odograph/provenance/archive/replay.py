@@ -16,9 +16,11 @@ from odograph.provenance.archive.bag import bag_problems
 from odograph.provenance.archive.unpack import unpack
 from odograph.provenance.effort import keep_shards_of
 from odograph.provenance.files import file_digest
+from odograph.provenance.record_shape import stays_within
 
 _STEPS_DONE = re.compile(r"(\d+) of (\d+) steps \(")
 
+_COLUMNS = ("session", "file", "enclosed", "bytes", "sha256", "fetch_from")
 _NOT_LAID_OUT = {
     "results",
     "ro-crate-metadata.json",
@@ -78,8 +80,7 @@ def lay_out(bag: Path, study: Path, data: Path | None) -> None:
         Recordings are missing, or are not the ones that were analysed.
     """
     payload = bag / "data"
-    with (payload / "recordings.tsv").open(encoding="utf-8", newline="") as file:
-        rows = list(csv.DictReader(file, delimiter="\t", quoting=csv.QUOTE_NONE))
+    rows = _recordings(payload / "recordings.tsv")
     enclosed = {row["file"] for row in rows if row["enclosed"] == "yes"}
     for path in sorted(payload.rglob("*")):
         name = path.relative_to(payload)
@@ -108,6 +109,40 @@ def lay_out(bag: Path, study: Path, data: Path | None) -> None:
             if first["fetch_from"]
             else f"ask whoever holds them; recordings.tsv lists them (SHA-256 of this: {first['sha256']})",
         )
+
+
+def _recordings(table: Path) -> list[dict[str, str]]:
+    """The recordings that an archive names; no place of theirs leads out of the study's folder.
+
+    Raises
+    ------
+    InputError
+        The table is gone or is not one that odograph writes.
+    """
+    try:
+        with table.open(encoding="utf-8", newline="") as file:
+            rows = list(csv.DictReader(file, delimiter="\t", quoting=csv.QUOTE_NONE))
+    except (OSError, UnicodeDecodeError, csv.Error) as error:
+        raise _bad_table(table, f"the table cannot be read ({error})") from error
+    for line, row in enumerate(rows, 2):
+        lacking = [name for name in _COLUMNS if not isinstance(row.get(name), str)]
+        if lacking:
+            raise _bad_table(table, f"no {', '.join(lacking)}", line)
+        if not stays_within(row["file"]):
+            raise _bad_table(table, f"the place {row['file']!r} leads out of the study's folder", line)
+        if not row["bytes"].isdecimal():
+            raise _bad_table(table, f"{row['bytes']!r} bytes", line)
+    return rows
+
+
+def _bad_table(table: Path, found: str, line: int | None = None) -> InputError:
+    return InputError(
+        found,
+        file=str(table),
+        place=f"line {line}" if line else None,
+        expected="the table of recordings as `odograph archive` writes it",
+        remedy="do not replay it; ask where the archive came from",
+    )
 
 
 def _find_recording(row: Mapping[str, str], present: list[Path]) -> Path | None:
