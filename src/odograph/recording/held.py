@@ -5,11 +5,10 @@ from __future__ import annotations
 import math
 import os
 from functools import cache
+from pathlib import Path
 from typing import Any
 
 import h5py
-
-from odograph.recording.links import sources_of
 
 #: Of unpacked to packed bytes; constants compress well, but not as well as this.
 LARGEST_RATIO = 5000
@@ -63,3 +62,27 @@ def memory() -> int:
         return os.sysconf("SC_PAGE_SIZE") * os.sysconf("SC_PHYS_PAGES")
     except (AttributeError, OSError, ValueError):
         return 1 << 44
+
+
+def is_hollow(dataset: h5py.Dataset) -> bool:
+    """Whether a data set declares far more than the file holds for it."""
+    try:
+        if not dataset.size or dataset.size * dataset.dtype.itemsize <= FEW_BYTES:
+            return False
+        needed, held, _ = extent_of(dataset, None)
+    except TypeError:  # a type that numpy does not know; whoever uses the data is told
+        return False
+    return held is not None and needed > LARGEST_RATIO * held
+
+
+def sources_of(dataset: h5py.Dataset) -> list[Path]:
+    """The other files that a virtual data set takes its data from."""
+    if not dataset.is_virtual:
+        return []
+    names = {source.file_name for source in dataset.virtual_sources()} - {"."}
+    return sorted(beside(dataset.file, name) for name in names)
+
+
+def beside(file: h5py.File, name: str) -> Path:
+    """A file that another one names, in the folder of the one that names it."""
+    return Path(file.filename).parent / name

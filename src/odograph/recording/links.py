@@ -7,6 +7,8 @@ from pathlib import Path
 
 import h5py
 
+from odograph.recording.held import beside, is_hollow, sources_of
+
 #: Ways to reach the objects of a file; a reader walks every one of them.
 MOST_PATHS = 1_000_000
 
@@ -35,13 +37,16 @@ class Links:
 
     `missing` are those that lead nowhere, `files` the other files that those which hold lead into, `named`
     all other files that links and virtual data sets name, whether they are there or not. `paths` is the
-    number of ways to reach a group of the file, at most `MOST_PATHS`.
+    number of ways to reach a group of the file, at most `MOST_PATHS`. `hollow` are the places of data sets
+    that declare far more than the file holds, other than a series' `data`, which are read only where they are
+    used; all others may be read whole as soon as the file is opened.
     """
 
     missing: tuple[MissingLink, ...]
     files: tuple[Path, ...]
     named: tuple[Path, ...] = ()
     paths: int = 0
+    hollow: tuple[str, ...] = ()
 
 
 def follow_links(path: Path) -> Links:
@@ -69,7 +74,13 @@ def follow_links(path: Path) -> Links:
     walk.files.discard(path)
     walk.named.discard(path)
     missing = sorted(walk.missing, key=lambda link: link.place)
-    return Links(tuple(missing), tuple(sorted(walk.files)), tuple(sorted(walk.named)), paths)
+    return Links(
+        tuple(missing),
+        tuple(sorted(walk.files)),
+        tuple(sorted(walk.named)),
+        paths,
+        tuple(sorted(walk.hollow)),
+    )
 
 
 _Address = tuple[int, int]
@@ -84,6 +95,7 @@ class _Walk:
     named: set[Path] = field(default_factory=set)
     seen: set[_Address] = field(default_factory=set)
     below: dict[_Address, list[_Address]] = field(default_factory=dict)
+    hollow: list[str] = field(default_factory=list)
 
     def group(self, group: h5py.Group, above: str, address: _Address) -> None:
         """Walk through a group and what it holds."""
@@ -92,7 +104,7 @@ class _Walk:
             place = f"{above}/{name}" if above else name
             link = group.get(name, getlink=True)
             if isinstance(link, h5py.ExternalLink):
-                self.named.add(_beside(group.file, link.filename))
+                self.named.add(beside(group.file, link.filename))
             target_file = link.filename if isinstance(link, h5py.ExternalLink) else None
             no_file = target_file is not None and not _may_be_opened(group.file, target_file)
             target = None if no_file else _resolve(group, name)
@@ -103,7 +115,7 @@ class _Walk:
             if isinstance(link, h5py.ExternalLink):
                 self.files.add(Path(target.file.filename))
             if isinstance(target, h5py.Dataset):
-                self._data(target)
+                self._data(target, place)
             if isinstance(target, h5py.Group):
                 inner = _address(target)
                 if isinstance(link, h5py.HardLink):
@@ -112,7 +124,9 @@ class _Walk:
                     self.seen.add(inner)
                     self.group(target, place, inner)
 
-    def _data(self, dataset: h5py.Dataset) -> None:
+    def _data(self, dataset: h5py.Dataset, place: str) -> None:
+        if not place.endswith("/data") and is_hollow(dataset):
+            self.hollow.append(place)
         for other in sources_of(dataset):
             self.named.add(other)
             if other.is_file():
@@ -136,18 +150,6 @@ class _Walk:
         return count(top)
 
 
-def sources_of(dataset: h5py.Dataset) -> list[Path]:
-    """The other files that a virtual data set takes its data from."""
-    if not dataset.is_virtual:
-        return []
-    names = {source.file_name for source in dataset.virtual_sources()} - {"."}
-    return sorted(_beside(dataset.file, name) for name in names)
-
-
-def _beside(file: h5py.File, name: str) -> Path:
-    return Path(file.filename).parent / name
-
-
 def _resolve(group: h5py.Group, name: str) -> h5py.HLObject | None:
     try:
         return group[name]
@@ -159,7 +161,7 @@ def _may_be_opened(file: h5py.File, name: str) -> bool:
     # HDF5 looks beside the file and where the process runs. A pipe at either place would be waited for.
     if "\0" in name:
         return False
-    places = (_beside(file, name), Path(name), _beside(file, Path(name).name))
+    places = (beside(file, name), Path(name), beside(file, Path(name).name))
     try:
         return all(place.is_file() or not place.exists() for place in places)
     except OSError:
