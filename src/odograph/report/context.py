@@ -67,6 +67,9 @@ class PageContext:
         The table of `odograph.population.adaptivity.speed_table`.
     fit_line : str
         How many units' models agree with held-out time, as a sentence; empty where none was judged.
+    unit_pages : mapping of session to str
+        Where the units of each session are listed, relative to the folder of the results, when they are too
+        many for the page itself.
     """
 
     study: str
@@ -83,6 +86,7 @@ class PageContext:
     results_folder: str = "results"
     speed: pd.DataFrame | None = None
     fit_line: str = ""
+    unit_pages: Mapping[str, str] = field(default_factory=dict)
 
     def value(self, path: str) -> Any:
         """The value of a setting by its dotted path.

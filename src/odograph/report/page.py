@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from importlib import resources
 
+from odograph.figures.miniature import Miniature
 from odograph.report.context import PageContext
 from odograph.report.methods import methods
 from odograph.report.sections import (
@@ -14,7 +16,7 @@ from odograph.report.sections import (
     settings_section,
     trace_section,
 )
-from odograph.report.unit_table import units_section
+from odograph.report.unit_table import units_section, units_table
 from odograph.report.words import section, short_record, text
 
 _ANCHORS = (
@@ -55,6 +57,46 @@ def build_page(context: PageContext) -> str:
         _cautions_section(),
     ]
     anchors = "".join(f'<a href="#{name}">{title}</a>' for name, title in _ANCHORS)
+    return _document(
+        context,
+        title=f"{context.study}: report",
+        heading=context.study,
+        lead="what its units encode, and what stands behind it",
+        anchors=f'<nav aria-label="sections">{anchors}</nav>',
+        body="".join(body),
+    )
+
+
+def build_units_page(
+    context: PageContext, session: str, miniatures: Mapping[tuple[str, int], Miniature]
+) -> str:
+    """Make the page of one session's units, for studies of more units than the report shows.
+
+    Parameters
+    ----------
+    context : PageContext
+    session : str
+    miniatures : mapping of (session, unit) to Miniature
+        Of this session's units.
+
+    Returns
+    -------
+    str
+        An HTML document that lies in a folder beside the report.
+    """
+    units = context.units[context.units["session"] == session].sort_values("unit")
+    return _document(
+        context,
+        title=f"{context.study}: units of {session}",
+        heading=f"Units of {session}",
+        lead=f'{text(context.study)}; <a href="../report.html">the report</a>',
+        anchors="",
+        body=section("units", "Units", units_table(units, miniatures, "../")),
+    )
+
+
+def _document(context: PageContext, *, title: str, heading: str, lead: str, anchors: str, body: str) -> str:
+    """A whole document; `lead`, `anchors` and `body` are ready HTML."""
     record = (
         f'<span class="record">record {short_record(context.record_id)}</span>' if context.record_id else ""
     )
@@ -64,12 +106,11 @@ def build_page(context: PageContext) -> str:
         '<meta name="viewport" content="width=device-width, initial-scale=1">'
         '<meta name="color-scheme" content="light dark">'
         f'<meta name="odograph-record" content="{text(context.record_id)}">'
-        f"<title>{text(context.study)}: report</title><style>{_resource('page.css')}</style></head><body>"
+        f"<title>{text(title)}</title><style>{_resource('page.css')}</style></head><body>"
         '<a class="skip" href="#main">to the content</a>'
-        f"<header><h1>{text(context.study)}</h1><p>what its units encode, and what stands behind it "
-        f"{record}</p>"
-        f'<nav aria-label="sections">{anchors}</nav></header>'
-        f'<main id="main">{"".join(body)}</main>'
+        f"<header><h1>{text(heading)}</h1><p>{lead} {record}</p>"
+        f"{anchors}</header>"
+        f'<main id="main">{body}</main>'
         f"<footer><p>Made by odograph. For research; not for diagnosis or treatment. {record}</p></footer>"
         f"<script>{_resource('page.js')}</script></body></html>\n"
     )

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import sys
+from pathlib import Path
 from typing import Any
 
 from odograph.provenance import layout
@@ -16,7 +17,8 @@ def work(step: Step) -> None:
     from odograph.figures.captions import POPULATION_FIGURES
     from odograph.population.summarise import fit_line
     from odograph.report.context import PageContext, PageFigure
-    from odograph.report.page import build_page
+    from odograph.report.page import build_page, build_units_page
+    from odograph.report.unit_table import MOST_UNITS_ON_THE_PAGE
     from odograph.settings.all import Settings
     from odograph.settings.load import settings_table
 
@@ -26,7 +28,9 @@ def work(step: Step) -> None:
     units, speed, sessions = (step.read_table(name) for name in ("units", "speed", "sessions"))
     summary = step.read_json("summary")
     documents = _documents(step, members)
-    miniatures = _miniatures(step, members, settings.figures)
+    curves = {row["session"]: _curve_files(step, row) for row in members if row["readable"]}
+    listed = sorted(units["session"].unique()) if len(units) > MOST_UNITS_ON_THE_PAGE else []
+    miniatures = {} if listed else _miniatures(curves, settings.figures)
     figures = []
     for name in POPULATION_FIGURES:
         path = step.use(layout.FIGURES / f"{name}.png")
@@ -47,7 +51,15 @@ def work(step: Step) -> None:
         results_folder=layout.RESULTS.as_posix(),
         speed=speed,
         fit_line=fit_line(summary),
+        unit_pages={session: f"units/{session}.html" for session in listed},
     )
+    for session in listed:
+        own = _miniatures({session: curves[session]}, settings.figures)
+        with step.product(layout.RESULTS / context.unit_pages[session]) as temporary:
+            temporary.write_text(build_units_page(context, session, own), encoding="utf-8")
+    for page in (layout.RESULTS / "units").glob("*.html"):
+        if page.stem not in listed:
+            page.unlink()
     with step.product(step.output("page")) as temporary:
         temporary.write_text(build_page(context), encoding="utf-8")
 
@@ -62,20 +74,25 @@ def _documents(step: Step, members: list[dict[str, Any]]) -> dict[str, dict[str,
     }
 
 
-def _miniatures(step: Step, members: list[dict[str, Any]], settings: Any) -> dict[tuple[str, int], Any]:
+def _curve_files(step: Step, member: dict[str, Any]) -> list[Path]:
+    """The curves of one session's units, as inputs of this job."""
+    folders = (layout.shard_folder(member["session"], shard) for shard in range(member["shards"]))
+    return [step.use(folder / "curves.npz") for folder in folders]
+
+
+def _miniatures(files: dict[str, list[Path]], settings: Any) -> dict[tuple[str, int], Any]:
     """A small picture of every unit that has curves."""
     from odograph.figures.miniature import draw_miniature
 
     drawn = {}
-    for row in members:
-        for shard in range(row["shards"]) if row["readable"] else ():
-            arrays = read_arrays(step.use(layout.shard_folder(row["session"], shard) / "curves.npz"))
+    for session, shards in files.items():
+        for file in shards:
             curves: dict[int, dict[str, Any]] = {}
-            for name, values in arrays.items():
+            for name, values in read_arrays(file).items():
                 unit, _, curve = name.partition("/")
                 curves.setdefault(int(unit), {})[curve] = values
             for unit, own in curves.items():
-                drawn[row["session"], unit] = draw_miniature(own, settings)
+                drawn[session, unit] = draw_miniature(own, settings)
     return drawn
 
 
