@@ -57,11 +57,11 @@ def main() -> int:
             table.note(f"{number} sessions: the engine's metadata took {marking:.0f} s to make")
             if number > size["summarised"]:
                 many.mark_as_made()
-            else:
-                many.run()
-            if number == size["summarised"]:
+            elif number == size["summarised"]:
                 summarise(table, many, number)
                 one_unit_changed(table, many, number)
+            else:
+                many.run()
             times[number] = nothing_to_do(table, many, number)
         growth(table, times)
     return table.finish(options.json)
@@ -196,10 +196,10 @@ def files(table: Table, many: Many, number: int) -> None:
 
 
 def summarise(table: Table, many: Many, number: int) -> None:
-    """The population, its figures, the report and the root of many units, for real."""
+    """The population, its figures and the report of many units, for real."""
     units = number * many.units
-    for rule in ("population", "population_figures", "report"):
-        seconds, megabytes = many.step(rule)
+    for rule, run in many.ends().items():
+        seconds, megabytes = run["seconds"], run["memory_mb"]
         table.add(
             f"{rule} of {units} units",
             "under 4 GB",

@@ -112,14 +112,20 @@ class Many:
         """Run what is to be run, and give the wall time in s."""
         return self.snakemake()[0]
 
-    def step(self, rule: str) -> tuple[float, float]:
-        """Make the products of one rule anew: seconds and megabytes of its process, as its record says."""
-        record = {"report": "results/report.record.json", "population_figures": "results/figures/record.json"}
-        file = self.folder / record.get(rule, f"results/{rule}/record.json")
-        file.unlink(missing_ok=True)
-        self.snakemake("--until", rule)
-        run = json.loads(file.read_text())["run"]
-        return run["seconds"], run["memory_mb"]
+    def ends(self) -> dict[str, dict[str, float]]:
+        """Make the products of the whole study anew: by rule what its record says of the run."""
+        places = {
+            "population": "population/record.json",
+            "population_figures": "figures/record.json",
+            "report": "report.record.json",
+        }
+        for place in places.values():
+            (self.folder / "results" / place).unlink()
+        self.snakemake()
+        return {
+            rule: json.loads((self.folder / "results" / place).read_text())["run"]
+            for rule, place in places.items()
+        }
 
     # The first sessions
 
