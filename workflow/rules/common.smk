@@ -13,6 +13,10 @@ from odograph.figures.captions import POPULATION_FIGURES
 from odograph.provenance.plan import make_plan, use_this_python
 from odograph.provenance.running import planning
 
+
+include: "recordings.smk"
+
+
 try:
     # One run at a time; a job that reads this file again, and a look beside a run, take the plan that is there.
     with planning(sys.argv[1:], workflow.is_main_process) as alone:
@@ -20,6 +24,7 @@ try:
             config,
             main_process=alone,
             config_file=str(workflow.configfiles[-1]) if workflow.configfiles else None,
+            fetch=fetch,
         )
 except OdographError as error:
     raise WorkflowError(str(error)) from None

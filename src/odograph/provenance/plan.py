@@ -11,7 +11,7 @@ from __future__ import annotations
 
 import os
 import sys
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
@@ -22,16 +22,19 @@ from odograph.provenance.effort import NO_EFFORT, Effort, SettledShards, megabyt
 from odograph.provenance.fingerprint import code_fingerprint
 from odograph.provenance.known import keep_known, read_known
 from odograph.provenance.layout import PLAN, shard_of
+from odograph.provenance.places import local_place
 from odograph.provenance.plan_files import (
     damaged_plan_files,
     planned_intake,
     stamps_of,
     survey_at_rest,
+    told_by_address,
     write_session,
     write_source,
     write_study,
 )
 from odograph.provenance.survey import Request
+from odograph.settings.addresses import is_address
 from odograph.settings.all import Settings
 from odograph.settings.load import load_settings, read_sessions, resolve_session
 
@@ -135,7 +138,11 @@ class Plan:
 
 
 def make_plan(
-    config: Mapping[str, Any], *, main_process: bool = True, config_file: str | None = None
+    config: Mapping[str, Any],
+    *,
+    main_process: bool = True,
+    config_file: str | None = None,
+    fetch: Callable[[Sequence[str]], Mapping[str, Mapping[str, Any]]] | None = None,
 ) -> Plan:
     """Look at every recording and write what changed to ``results/plan/``.
 
@@ -148,6 +155,9 @@ def make_plan(
         nothing is written, and sessions that are new in the table are left out.
     config_file : str, optional
         The file that the configuration came from, to name its lines in errors.
+    fetch : callable, optional
+        Brings the local copies of recordings up to date, given their addresses; returns a finding for each
+        address that there is no copy of. Called when the sessions table names addresses.
 
     Returns
     -------
@@ -171,8 +181,14 @@ def make_plan(
     code = {step: code_fingerprint(f"odograph.steps.{step}", cache["code"]) for step in STEPS}
     if main_process:
         intake = {id(model): canonical_json(model.intake) for model in own.values()}
-        requests = [Request(row.session, row.nwb, intake[id(own[row.session])]) for row in rows]
-        cache = _refresh(requests, cache, own, rows)
+        addresses = {row.session: row.nwb for row in rows if is_address(row.nwb)}
+        lost = fetch(sorted(addresses.values())) if fetch and addresses else {}
+        requests = [
+            Request(name, local_place(row.nwb), intake[id(own[name])], addresses.get(name))
+            for row in rows
+            for name in (row.session,)
+        ]
+        cache = _refresh(requests, cache, own, rows, lost)
     else:
         rows = [row for row in rows if row.session in cache["sessions"]]
         own = {row.session: own[row.session] for row in rows}
@@ -243,7 +259,11 @@ def _read_cache() -> dict[str, Any]:
 
 
 def _refresh(
-    requests: Sequence[Request], cache: dict[str, Any], own: Mapping[str, Settings], rows: Sequence[Any]
+    requests: Sequence[Request],
+    cache: dict[str, Any],
+    own: Mapping[str, Settings],
+    rows: Sequence[Any],
+    lost: Mapping[str, Mapping[str, Any]],
 ) -> dict[str, Any]:
     """Survey the recordings that moved, and write the plan files whose content changed."""
     reader = code_fingerprint(_READER, cache["code"])
@@ -259,14 +279,18 @@ def _refresh(
         or entry["key"] is None
         or "intake" in damaged[request.session]
     ]
-    gone = {request.session: _no_file(request) for request in moved if not Path(request.nwb).is_file()}
+    gone = {
+        request.session: _not_fetched(request, lost) if request.address else _no_file(request)
+        for request in moved
+        if not Path(request.nwb).is_file()
+    }
     answers, read = survey_at_rest([request for request in moved if request.session not in gone], reader)
     answers |= gone
     entries = {}
     for request in requests:
         session = request.session
         if session in answers:
-            answer = answers[session]
+            answer = told_by_address(answers[session], request)
             entry = {"error": answer.get("error"), "links": answer.get("links", []), "shards": None}
             entry |= {"animal": answer.get("animal"), "regions": answer.get("regions", {})}
             entry |= {"units": len(answer.get("units", {})), "duration_s": answer.get("duration_s")}
@@ -307,6 +331,15 @@ def _no_file(request: Request) -> dict[str, Any]:
         remedy="correct the path in the sessions table; it is relative to the folder the workflow is run in",
     )
     return {"error": error.finding() | {"file": request.nwb}, "settled": False}
+
+
+def _not_fetched(request: Request, lost: Mapping[str, Mapping[str, Any]]) -> dict[str, Any]:
+    error = lost.get(request.name) or InputError(
+        "the recording was not fetched",
+        expected="its copy from object storage",
+        remedy="run the workflow with snakemake, which fetches it",
+    ).finding() | {"file": request.name}
+    return {"error": error, "settled": False, "fetched": False}
 
 
 def _tell_unreadable(entries: Mapping[str, Mapping[str, Any]], on_bad_session: str) -> None:

@@ -54,14 +54,25 @@ def survey_at_rest(requests: Sequence[Request], reader: str) -> tuple[dict[str, 
         ]
         if not moving:
             return answers, before
-        names = ", ".join(request.nwb for request in moving)
+        names = ", ".join(request.name for request in moving)
         print(f"odograph: {names}: changed while it was read; it is read again", file=sys.stderr)
     raise InputError(
         f"the recording changed {_READINGS} times while it was read",
-        file=moving[0].nwb,
+        file=moving[0].name,
         expected="a recording that nobody writes to",
         remedy="wait until the file is written or copied, then run snakemake again",
     )
+
+
+def told_by_address(answer: dict[str, Any], request: Request) -> dict[str, Any]:
+    """An answer of the survey whose error names the address of a recording in place of its local copy."""
+    if request.address is None or answer.get("error") is None:
+        return answer
+    error = {
+        name: text.replace(request.nwb, request.address) if isinstance(text, str) else text
+        for name, text in answer["error"].items()
+    }
+    return answer | {"error": error}
 
 
 def damaged_plan_files(session: str, entry: Mapping[str, Any]) -> set[str]:
@@ -93,6 +104,8 @@ def write_session(session: str, answer: Mapping[str, Any], entry: dict[str, Any]
     documents: dict[str, Any] = {}
     if answer.get("error") is not None:
         documents["intake"] = {"error": answer["error"]}
+        if not answer.get("fetched", True):
+            documents["intake"]["fetched"] = False
     else:
         documents["intake"] = {"inventory": answer["inventory"], "signals": signals, "units": units}
         documents["sync"] = {"signals": _chosen(signals, ("tracking", "frame_pulses"))}
@@ -127,6 +140,8 @@ def write_source(request: Request, study: Any) -> None:
         "intake": json.loads(request.settings),
         "on_bad_session": study.on_bad_session,
     }
+    if request.address is not None:
+        source["address"] = request.address
     write_if_changed(plan_folder(request.session) / "source.json", readable_json(source))
 
 

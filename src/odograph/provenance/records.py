@@ -21,6 +21,7 @@ from odograph.errors import DamagedError, OdographError, RecordError
 from odograph.provenance.canonical import digest_value
 from odograph.provenance.files import file_digest, read_json, write_json
 from odograph.provenance.record_shape import fault_of_record
+from odograph.settings.addresses import is_address
 
 RECORD_FORMAT = 1
 SOFTWARE = ("odograph", "numpy", "scipy", "pandas", "pynwb", "hdmf", "h5py", "pyarrow", "matplotlib", "numba")
@@ -139,7 +140,10 @@ def told_path(file: str | Path) -> str:
     """A path as records tell it: of a file outside the study's folder its name only.
 
     Where somebody keeps their recordings, and under which user's name, is nobody's business.
+    An address holds no credentials (`odograph.settings.sessions` refuses those) and is told as it is.
     """
+    if is_address(file):
+        return str(file)
     path = Path(file)
     if not path.is_absolute():
         return path.as_posix()

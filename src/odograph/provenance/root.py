@@ -24,6 +24,7 @@ from odograph.provenance.canonical import digest_value, readable_json
 from odograph.provenance.files import file_digest, read_json, write_if_changed
 from odograph.provenance.known import keep_known, read_known
 from odograph.provenance.layout import PLAN, RESULTS, STORE
+from odograph.provenance.places import FETCHED
 from odograph.provenance.record_shape import fault_of_root
 from odograph.provenance.records import read_record, told_path
 from odograph.provenance.running import still_in_charge
@@ -47,9 +48,9 @@ def identify_root(records: Iterable[Mapping[str, Any]]) -> str:
 
 
 def all_record_files(folder: Path) -> list[Path]:
-    """Every record below a study's results, sorted; the store and the plan hold none."""
+    """Every record below a study's results, sorted; store, plan and fetched recordings hold none."""
     results = folder / RESULTS
-    apart = {(folder / STORE).resolve(), (folder / PLAN).resolve()}
+    apart = {(folder / place).resolve() for place in (STORE, PLAN, FETCHED)}
     found = []
     for at, folders, names in os.walk(results):
         folders[:] = sorted(name for name in folders if (Path(at) / name).resolve() not in apart)
@@ -183,9 +184,11 @@ def _recordings(folder: Path, sessions: list[str]) -> list[dict[str, Any]]:
     """Every recording and the files it links to, by their bytes; those known by their stamps are not read."""
     cache = read_json(folder / PLAN / "cache.json")["sessions"]
     known = read_known(folder / KNOWN_FILES)
-    found, sources = [], {}
+    found, sources, addresses = [], {}, {}
     for session in sessions:
-        sources[session] = read_json(folder / PLAN / "sessions" / session / "source.json")["nwb"]
+        source = read_json(folder / PLAN / "sessions" / session / "source.json")
+        sources[session] = source["nwb"]
+        addresses[source["nwb"]] = source.get("address")
         for name in (sources[session], *cache[session]["links"]):
             path = folder / name
             if path.is_file():
@@ -203,7 +206,7 @@ def _recordings(folder: Path, sessions: list[str]) -> list[dict[str, Any]]:
     return [
         {
             "session": session,
-            "file": told_path(name),
+            "file": addresses.get(name) or told_path(name),
             "linked": name != sources[session],
             "bytes": stamp[0],
             "digest": now[name]["digest"],

@@ -35,11 +35,19 @@ class Request:
         Path of the recording.
     settings : str
         Its intake settings as canonical JSON.
+    address : str, optional
+        Where it was fetched from; the path is then that of its local copy.
     """
 
     session: str
     nwb: str
     settings: str
+    address: str | None = None
+
+    @property
+    def name(self) -> str:
+        """The recording as the sessions table names it."""
+        return self.address or self.nwb
 
 
 def survey(

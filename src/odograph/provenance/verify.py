@@ -19,6 +19,7 @@ from odograph.provenance.canonical import canonical_json
 from odograph.provenance.fingerprint import code_fingerprint
 from odograph.provenance.identifier import read_record_id
 from odograph.provenance.layout import PLAN, RESULTS, STORE
+from odograph.provenance.places import FETCHED, local_place
 from odograph.provenance.plan import STAGES_READ
 from odograph.provenance.records import read_record
 from odograph.provenance.root import (
@@ -247,7 +248,7 @@ def _check_strangers(folder: Path, records: Mapping[str, dict[str, Any]], found:
     """Files among the results that no record knows."""
     known = {product["path"] for record in records.values() for product in record["products"]}
     unread = {breach.file for breach in found.breaches}
-    apart = {(folder / STORE).resolve(), (folder / PLAN).resolve()}
+    apart = {(folder / place).resolve() for place in (STORE, PLAN, FETCHED)}
     for at, folders, names in os.walk(folder / RESULTS):
         folders[:] = [name for name in folders if (Path(at) / name).resolve() not in apart]
         # Without its record a product is a stranger; the record that cannot be read says so already.
@@ -360,4 +361,6 @@ def _present_places(folder: Path, rows: list[dict[str, Any]]) -> list[str]:
         now = {row.session: row.nwb for row in read_sessions(folder / table)}
     except OdographError:
         now = {}
-    return [row["file"] if row["linked"] else now.get(row["session"], row["file"]) for row in rows]
+    return [
+        local_place(row["file"] if row["linked"] else now.get(row["session"], row["file"])) for row in rows
+    ]

@@ -106,7 +106,8 @@ def sessions_schema() -> dict[str, Any]:
             "pattern": SESSION_PATTERN,
         },
         "nwb": {
-            "description": "Path of its NWB file, relative to the folder the workflow is run in.",
+            "description": "Path of its NWB file, relative to the folder the workflow is run in; or its "
+            "address, s3://BUCKET/KEY or https://HOST/PATH, without credentials.",
             "type": "string",
             "minLength": 1,
         },

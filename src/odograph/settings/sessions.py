@@ -9,6 +9,13 @@ from dataclasses import dataclass, field
 from pathlib import Path
 
 from odograph.errors import InputError, printable
+from odograph.settings.addresses import (
+    address_fault,
+    is_address,
+    looks_like_address,
+    same_address,
+    without_secrets,
+)
 from odograph.settings.fields import setting_facts
 from odograph.settings.problems import nearest
 
@@ -27,7 +34,8 @@ class SessionRow:
     session : str
         Its name; the name of its folder in the results.
     nwb : str
-        Path of its NWB file, as written in the table (relative to the folder the workflow is run in).
+        Path of its NWB file, as written in the table (relative to the folder the workflow is run in), or its
+        address (s3://, https:// or http://), which holds no credentials.
     animal, group : str or None
         None where the table does not say: the animal is then the subject named in the file.
     overrides : dict of str to str
@@ -64,7 +72,7 @@ def read_sessions(path: str | Path) -> list[SessionRow]:
     InputError
         The table is missing, empty or not tab-separated; a column is unknown, missing or there twice; a row
         has too many or too few cells; a session or a file is there twice; a name has characters that cannot
-        stand in a folder's name.
+        stand in a folder's name; an address cannot be fetched from, or has credentials in it.
     """
     path = Path(path)
     lines = _lines(path)
@@ -150,7 +158,7 @@ def _check_columns(columns: list[str], line: int, path: Path) -> None:
         if column.split(".")[0] in ("study", "population", "figures"):
             remedy = "set it in the configuration: it holds for the whole study"
         raise InputError(
-            f"unknown column {column!r}" if column else f"column {number} has no name",
+            f"unknown column {without_secrets(column)!r}" if column else f"column {number} has no name",
             file=str(path),
             place=place,
             expected=expected,
@@ -193,7 +201,9 @@ def _row(columns: list[str], cells: list[str], line: int, path: Path) -> Session
     values = dict(zip(columns, cells, strict=True))
     if not re.fullmatch(SESSION_PATTERN, values["session"]):
         raise InputError(
-            f"the session name {values['session']!r}" if values["session"] else "no session name",
+            f"the session name {without_secrets(values['session'])!r}"
+            if values["session"]
+            else "no session name",
             file=str(path),
             place=f"line {line}, column session",
             expected="letters A to Z, digits, _ and - only, and no - at the beginning",
@@ -210,12 +220,21 @@ def _row(columns: list[str], cells: list[str], line: int, path: Path) -> Session
     for column, text in values.items():
         if printable(text) != text:
             raise InputError(
-                f"characters that cannot be seen: {printable(text)}",
+                f"characters that cannot be seen: {printable(without_secrets(text))}",
                 file=str(path),
                 place=f"line {line}, column {column}",
                 expected="a name or a path in plain characters",
                 remedy="type the cell again",
             )
+    fault = address_fault(values["nwb"]) if looks_like_address(values["nwb"]) else None
+    if fault is not None:
+        raise InputError(
+            fault[0],
+            file=str(path),
+            place=f"line {line}, column nwb",
+            expected="a path, or an address such as s3://bucket/recording.nwb without any credentials",
+            remedy=fault[1],
+        )
     return SessionRow(
         session=values["session"],
         nwb=values["nwb"],
@@ -240,7 +259,8 @@ def _check_unique(rows: list[SessionRow], path: Path) -> None:
                 expected="a name of its own for every session, differing in more than upper and lower case",
                 remedy="rename one of the two, or remove its line",
             )
-        other = files.setdefault(str(Path(row.nwb)), row)
+        file = same_address(row.nwb) if is_address(row.nwb) else str(Path(row.nwb))
+        other = files.setdefault(file, row)
         if other is not row:
             raise InputError(
                 f"the file {row.nwb} is already that of session {other.session} (line {other.line})",

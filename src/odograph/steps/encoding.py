@@ -26,6 +26,8 @@ _FIT_CODE = "odograph.encoding.analyse"
 
 def work(step: Step) -> None:
     """Bring together the fits of a shard's units, from the store where they are there."""
+    from odograph.steps.source import recording_name
+
     columns = step.read_columns("behaviour")
     planned = {int(unit): digest for unit, digest in step.plan["units"].items()}
     audit = step.read_json("audit")
@@ -33,8 +35,9 @@ def work(step: Step) -> None:
     if not usable:
         logger.info("%s: no unit is fitted, since the session is left out", step.name)
         planned = {}
+    named = recording_name(step.source)
     for unit, digest in planned.items():
-        step.record.add_unit_input(unit, digest, file=step.source["nwb"])
+        step.record.add_unit_input(unit, digest, file=named)
     step.record.code["fit"] = code_fingerprint(_FIT_CODE, known_code())
     columns.pop("reason", None)
     behaviour, settings = columns_digest(columns), digest_value(step.settings["encoding"])

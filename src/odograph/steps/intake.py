@@ -3,9 +3,12 @@
 from __future__ import annotations
 
 import sys
+from typing import Any
 
 from odograph.errors import ChangedInputError, InputError
 from odograph.provenance.step import Step, refuse_if_failed, run_step
+
+_FACTS = ("place", "expected", "remedy")
 
 
 def work(step: Step) -> None:
@@ -13,10 +16,11 @@ def work(step: Step) -> None:
     from odograph.recording.inventory import failed_inventory, make_inventory
     from odograph.recording.reader import read_recording
     from odograph.settings.intake import IntakeSettings
-    from odograph.steps.source import signal_places
+    from odograph.steps.source import recording_name, signal_places
     from odograph.steps.survey_recordings import inventory_digest
 
-    file = step.source["nwb"]
+    source = step.source
+    file, told = source["nwb"], recording_name(source)
     error = _error_again(step, file) if "error" in step.plan else None
     try:
         if error is not None:
@@ -25,20 +29,30 @@ def work(step: Step) -> None:
         document = make_inventory(step.session, recording)
     except InputError as refusal:
         recording, document = None, failed_inventory(step.session, refusal)
+        document = _told_by_name(document, file, told)
     if (recording is None) != ("error" in step.plan) or (
         recording is not None and inventory_digest(document) != step.plan["inventory"]
     ):
         raise ChangedInputError(
-            "the recording changed since this run was planned", file=file, remedy="run snakemake again"
+            "the recording changed since this run was planned", file=told, remedy="run snakemake again"
         )
     refuse_if_failed(step, document)
     if recording is not None:
         places = signal_places(recording)
         for name, digest in step.plan["signals"].items():
-            step.record.add_signal_input(name, digest, file=file, place=places.get(name))
+            step.record.add_signal_input(name, digest, file=told, place=places.get(name))
         for unit, digest in step.plan["units"].items():
-            step.record.add_unit_input(int(unit), digest, file=file)
+            step.record.add_unit_input(int(unit), digest, file=told)
     step.write_json("inventory", document)
+
+
+def _told_by_name(document: dict[str, Any], file: str, name: str) -> dict[str, Any]:
+    """A failed inventory whose findings name the recording as the sessions table does."""
+    findings = [
+        {key: text.replace(file, name) if isinstance(text, str) else text for key, text in finding.items()}
+        for finding in document["findings"]
+    ]
+    return document | {"findings": findings}
 
 
 def _error_again(step: Step, file: str) -> InputError | None:
@@ -47,11 +61,15 @@ def _error_again(step: Step, file: str) -> InputError | None:
 
     from odograph.provenance.survey import Request, survey
 
+    if step.plan.get("fetched") is False:
+        # Only the planning asks servers.
+        error = dict(step.plan["error"])
+        return InputError(error["found"], file=file, **{name: error.get(name) for name in _FACTS})
     request = Request(str(step.session), file, json.dumps(step.source["intake"]))
     error = survey([request], workers=1)[request.session].get("error")
     if error is None:
         return None
-    facts = {name: error.get(name) for name in ("place", "expected", "remedy")}
+    facts = {name: error.get(name) for name in _FACTS}
     return InputError(error["found"], file=error.get("file") or file, **facts)
 
 

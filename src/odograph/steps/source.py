@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from odograph.errors import ChangedInputError, InputError
@@ -11,6 +10,11 @@ from odograph.provenance.step import Step
 
 if TYPE_CHECKING:
     from odograph.recording.model import Recording
+
+
+def recording_name(source: Mapping[str, Any]) -> str:
+    """How records and messages name a session's recording: its path, or the address it was fetched from."""
+    return source.get("address") or source["nwb"]
 
 
 def read_signals(step: Step) -> Recording:
@@ -29,10 +33,10 @@ def read_signals(step: Step) -> Recording:
     groups = {name.partition(":")[0] for name in planned}
     wanted = {"covariates" if group == "covariate" else group for group in groups}
     recording = _read(source, signals=wanted, units=())
-    _compare(planned, signal_digests(recording), source["nwb"], "signal")
+    _compare(planned, signal_digests(recording), recording_name(source), "signal")
     places = signal_places(recording)
     for name, digest in planned.items():
-        step.record.add_signal_input(name, digest, file=source["nwb"], place=places.get(name))
+        step.record.add_signal_input(name, digest, file=recording_name(source), place=places.get(name))
     return recording
 
 
@@ -55,7 +59,7 @@ def read_units(step: Step, units: Mapping[int, str]) -> Recording:
 
     source = step.source
     recording = _read(source, signals=(), units=tuple(units))
-    _compare(units, unit_digests(recording), source["nwb"], "unit")
+    _compare(units, unit_digests(recording), recording_name(source), "unit")
     return recording
 
 
@@ -68,7 +72,7 @@ def _read(source: Mapping[str, Any], **what: Any) -> Recording:
     except InputError as error:
         raise ChangedInputError(
             f"the recording changed since this run was planned; now it cannot be used: {error.found}",
-            file=error.file or source["nwb"],
+            file=recording_name(source) if error.file in (None, source["nwb"]) else error.file,
             place=error.place,
             expected="the content that was there when the run began",
             remedy="run snakemake again",
@@ -94,7 +98,7 @@ def _compare(planned: Mapping, found: Mapping, file: str, what: str) -> None:
     if changed:
         raise ChangedInputError(
             f"{what} {', '.join(changed)} changed since this run was planned",
-            file=str(Path(file)),
+            file=file,
             expected="the content that was there when the run began",
             remedy="run snakemake again",
         )

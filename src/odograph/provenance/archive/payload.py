@@ -18,7 +18,9 @@ import odograph
 from odograph.errors import InputError
 from odograph.provenance.files import read_json
 from odograph.provenance.layout import inventory
+from odograph.provenance.places import local_place
 from odograph.provenance.root import ROOT, read_root
+from odograph.settings.addresses import is_address
 
 CODE_FILES = (
     "Snakefile",
@@ -162,12 +164,16 @@ def _recordings(
     found = []
     for row in root["recordings"]:
         session, named = row["session"], row["file"]
-        own = named if row["linked"] else now.get(session, named)
-        if not _leads_outside(named) and posixpath.dirname(named):
+        own = local_place(named if row["linked"] else now.get(session, named))
+        address = None
+        if is_address(named):
+            source, address = folder / own, named
+            place = _place_of_its_own(f"../{posixpath.basename(own)}", session, taken)
+        elif not _leads_outside(named) and posixpath.dirname(named):
             source, place = folder / named, posixpath.normpath(named)
         elif row["linked"]:
             # A file that is linked to is told by its name only: it lies beside the recording.
-            home = folder if "/" in named else (folder / now.get(session, "")).parent
+            home = folder if "/" in named else (folder / local_place(now.get(session, ""))).parent
             source = home / named
             place = posixpath.join(beside.get(session, RECORDINGS), posixpath.basename(named))
         else:
@@ -183,7 +189,8 @@ def _recordings(
                 remedy="put it there, or archive without --with-recordings: it is then named by its digest",
             )
         identifier = None if row["linked"] else _identifier(folder, session)
-        address = f"{recordings_at.rstrip('/')}/{posixpath.basename(place)}" if recordings_at else None
+        if recordings_at:
+            address = f"{recordings_at.rstrip('/')}/{posixpath.basename(place)}"
         where = (source, None) if with_recordings else (None, address)
         found.append(Recording(session, named, place, row["digest"], row["bytes"], identifier, *where))
     return found

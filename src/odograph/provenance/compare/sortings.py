@@ -10,6 +10,7 @@ import numpy as np
 from odograph.errors import OdographError
 from odograph.provenance.compare.differences import RunInputs
 from odograph.provenance.compare.match import Relation, match_units
+from odograph.provenance.places import local_place
 
 
 def relate_sessions(
@@ -83,11 +84,13 @@ def _places(folder: Path, file: str, data: Path | None, session: str) -> list[Pa
     """Where a recording may lie: the folder given, the records' place, the sessions table's."""
     from odograph.settings.load import load_settings, read_sessions
 
-    found = sorted(data.rglob(Path(file).name)) if data else []
-    found.append(folder / file)
+    found = sorted(data.rglob(Path(local_place(file)).name)) if data else []
+    found.append(folder / local_place(file))
     try:
         table = load_settings(folder / "config" / "config.yaml").study.sessions_table
-        found += [folder / row.nwb for row in read_sessions(folder / table) if row.session == session]
+        found += [
+            folder / local_place(row.nwb) for row in read_sessions(folder / table) if row.session == session
+        ]
     except OdographError:
         pass
     return [path for path in dict.fromkeys(found) if path.is_file()]
