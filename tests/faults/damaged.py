@@ -24,7 +24,7 @@ FILES = {
     "plan of intake": (f"{PLAN}/intake.json", (f"{SESSION}/intake/record.json", "root.json")),
     "known recordings": ("plan/recordings.json", ("root.json",)),
 }
-QUICK = ("shard table", "cache of the plan")
+QUICK = ("shard table",)
 #: What no other job reads: found by `odograph verify` only, whose remedy is followed.
 ENDS = ("figure", "card", "run root")
 #: What `odograph verify` does not look at; the run that reads it finds it.

@@ -10,7 +10,7 @@ from collections.abc import Iterator
 
 from laboratory import Happening, Laboratory, Study, judged, kill_all, processes_of, until, workers_of
 
-MOMENTS, QUICK_MOMENTS = 25, 3
+MOMENTS, QUICK_MOMENTS = 25, 2
 # Over how much of an undisturbed run a moment is drawn; more would let most runs end before it.
 SPAN = 0.35
 TARGETS = ("all of the run", "the head alone", "a worker")
@@ -25,7 +25,7 @@ def killed(lab: Laboratory) -> Iterator[Happening]:
     draw = random.Random(lab.seed)  # noqa: S311 (moments, no secrets)
     whole = lab.undisturbed()
     moments = QUICK_MOMENTS if lab.quick else MOMENTS
-    targets = [TARGETS[number % len(TARGETS)] for number in range(moments)]
+    targets = [TARGETS[(number + 1) % len(TARGETS)] for number in range(moments)]
     draw.shuffle(targets)
     study = lab.fresh("killed")
     kills = dict.fromkeys(TARGETS, 0)

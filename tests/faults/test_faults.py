@@ -14,7 +14,6 @@ LINES = {
     "disk full: afterwards": True,
     "two runs, while units are fitted": True,
     "damaged: shard table": True,
-    "damaged: cache of the plan": True,
 }
 
 
