@@ -101,7 +101,7 @@ VALUES: dict[str, Callable[[np.ndarray], Any]] = {
     "no text": lambda v: h5py.Empty(h5py.string_dtype()),
     "texts": _texts(["good", "", "1.5"]),
     "hostile texts": _texts([name for name in HOSTILE_NAMES if "\udce9" not in name]),
-    "long text": _texts(["x" * 3_000_000]),
+    "long text": lambda v: _texts(["x" * 3_000_000, *["x"] * max(v.size - 1, 0)])(v),
     "fixed bytes": lambda v: np.full(v.shape, b"\xff\xfe\x00a", dtype="S4"),
     "bad utf-8": lambda v: _texts([b"\xff\xfeCA1", b"\xed\xa0\x80"])(v),
     "opaque": lambda v: np.zeros(v.shape, dtype="V5"),
