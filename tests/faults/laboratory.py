@@ -245,6 +245,8 @@ class Laboratory:
         environment = os.environ | {"PYTHONPATH": str(ROOT / "src")}
         for more in (["--sessions", "bracken_1"], ["--resort", "bracken_1"]):
             subprocess.run([*make, *more], check=True, stdout=subprocess.DEVNULL, env=environment)
+        # The first run may have to compile, which takes longer than all the rest.
+        self.undisturbed(short=True)
 
     def fresh(self, name: str, short: bool = False, **settings: dict) -> Study:
         """A study with recordings and without results; a short one ends with the tables of the population."""
