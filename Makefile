@@ -51,7 +51,7 @@ $(ENVIRONMENT_STAMP): constraints.txt pyproject.toml
 	@$(BIN)/python -m pip install --quiet --disable-pip-version-check \
 		--constraint constraints.txt "setuptools>=77"
 	@$(BIN)/python -m pip install --quiet --disable-pip-version-check --no-build-isolation \
-		--constraint constraints.txt --editable ".[cluster,test,lint]"
+		--constraint constraints.txt --editable ".[cluster,storage,test,lint]"
 	@touch $@
 	@echo "The environment is ready."
 

@@ -19,7 +19,7 @@ ROOT = Path(__file__).parents[2]
 PROJECT = tomllib.loads((ROOT / "pyproject.toml").read_text(encoding="utf-8"))
 BUILD_TOOLS = {"setuptools"}
 # The extras that make and conda install. The benchmarks do without their extra where it is missing.
-INSTALLED_EXTRAS = ("cluster", "test", "lint")
+INSTALLED_EXTRAS = ("cluster", "storage", "test", "lint")
 
 
 def declared() -> dict[str, str]:
