@@ -207,7 +207,9 @@ def _row(columns: list[str], cells: list[str], line: int, path: Path) -> Session
             file=str(path),
             place=f"line {line}, column session",
             expected="letters A to Z, digits, _ and - only, and no - at the beginning",
-            remedy=f"write {_safe_name(values['session'])}" if values["session"] else "give it a name",
+            remedy=f"write {_safe_name(without_secrets(values['session']))}"
+            if values["session"]
+            else "give it a name",
         )
     if not values["nwb"]:
         raise InputError(
