@@ -17,7 +17,8 @@ from typing import Any, Protocol
 
 from odograph.errors import InputError
 
-_PIECE = 1 << 20
+# Small, so that a slow line still gives signs of life.
+_PIECE = 1 << 16
 _MISSING = ("404", "NoSuchKey", "NoSuchBucket", "NotFound")
 _FORBIDDEN = ("401", "403", "AccessDenied", "Forbidden", "AllAccessDisabled", "InvalidObjectState")
 # Servers that refuse to be asked for the headers only, or signed an address for reading only.

@@ -47,18 +47,19 @@ def address_fault(text: str) -> tuple[str, str] | None:
             f"an address of a kind that cannot be fetched: {told}",
             "write s3://BUCKET/KEY.nwb or https://HOST/PATH.nwb, or the path of a file",
         )
-    try:
-        parts = urlsplit(text)
-        host, _ = parts.hostname, parts.port
-    except ValueError:
-        return f"an address that cannot be read: {told}", "write s3://BUCKET/KEY.nwb or https://HOST/PATH.nwb"
     # A password with a slash in it ends what counts as the host.
-    if "@" in parts.netloc or ("@" in text and ":" in parts.netloc):
+    server = re.split("[/?#]", text.partition("://")[2])[0]
+    if "@" in server or ("@" in text and ":" in server):
         return (
             f"an address with a user's name or a password in it: {told}",
             "take them out, change the password if others could read this table, and give credentials by "
             "the environment (README, section on object storage)",
         )
+    try:
+        parts = urlsplit(text)
+        host, _ = parts.hostname, parts.port
+    except ValueError:
+        return f"an address that cannot be read: {told}", "write s3://BUCKET/KEY.nwb or https://HOST/PATH.nwb"
     if parts.fragment or _has_more_than_harmless(text, parts.scheme.lower()):
         return (
             f"an address with more than a path in it, such as a signature or a token: {told}",
