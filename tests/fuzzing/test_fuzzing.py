@@ -158,10 +158,10 @@ def test_a_reader_that_dies_is_a_finding_and_the_next_recording_is_read():
 @pytest.mark.usefixtures("falling_reader")
 def test_the_job_that_says_why_does_not_die_of_it():
     """The inventory of a recording that killed its reader when the run was planned."""
-    step = SimpleNamespace(session="bad", source={"intake": {}})
+    step = SimpleNamespace(session="bad", source={"intake": {}}, plan={})
     error = _error_again(step, "bad.nwb")
     assert "signal 11" in reading.check_error(error) and error.file == "bad.nwb"
-    assert _error_again(SimpleNamespace(session="good", source={"intake": {}}), "good.nwb") is None
+    assert _error_again(SimpleNamespace(session="good", source={"intake": {}}, plan={}), "good.nwb") is None
 
 
 # ---- memory, waiting and other files
@@ -228,6 +228,19 @@ def test_a_link_to_a_pipe_is_not_waited_for(tmp_path):
     path = reading.write_recording(case(["pipe link", f"{POSITION}/head/data"]), tmp_path)
     error = refused(path, missing_links="warn")
     assert "no file" in error.found and "pipe" in error.found
+
+
+def test_a_pipe_that_other_links_lead_through_is_not_waited_for(tmp_path):
+    # The shank's device is a soft link to /general/devices/probe; the walk comes to it last.
+    path = reading.write_recording(case(["pipe link", "general/devices"], name="full"), tmp_path)
+    assert refused(path, missing_links="warn").place == "general/devices"
+    path = reading.write_recording(case(["pipe link", f"{POSITION}/head/data"]), tmp_path)
+    path.rename(tmp_path / "other.nwb")
+    path = reading.write_recording(
+        case(["external link", "processing/behavior", "other.nwb", "/processing/behavior"]), tmp_path
+    )
+    error = refused(path, missing_links="warn")
+    assert error.place == f"processing/behavior/{POSITION}/head/data" and "pipe" in error.found
 
 
 def test_groups_that_hold_each_other_are_refused(tmp_path):

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 
 import h5py
@@ -52,8 +52,8 @@ class Links:
 def follow_links(path: Path) -> Links:
     """Follow all soft and external links of an HDF5 file, and those in the files it links to.
 
-    Only names and links are looked at, no data. What is there but no file (a pipe, a device) is not opened:
-    such a link is missing.
+    Only names and links are looked at, no data. Where a link leads to what is there but no file (a pipe, a
+    device), none is followed, since others may lead through it: then that link alone is told as missing.
 
     Parameters
     ----------
@@ -65,6 +65,9 @@ def follow_links(path: Path) -> Links:
     Links
         Missing links sorted by place, other files sorted by path.
     """
+    waiting = _link_to_no_file(path, set())
+    if waiting is not None:
+        return Links((waiting,), ())
     walk = _Walk()
     with h5py.File(path, "r") as file:
         address = _address(file)
@@ -81,6 +84,42 @@ def follow_links(path: Path) -> Links:
         paths,
         tuple(sorted(walk.hollow)),
     )
+
+
+def _link_to_no_file(path: Path, known: set[Path]) -> MissingLink | None:
+    """The first link to what is no file, here or in the files that are linked to; no link is followed."""
+    known.add(path)
+    with h5py.File(path, "r") as file:
+        groups, seen = [("", file["/"])], {_address(file)}
+        while groups:
+            above, group = groups.pop()
+            for name in group:
+                place = f"{above}/{name}" if above else name
+                link = group.get(name, getlink=True)
+                if isinstance(link, h5py.ExternalLink):
+                    found = _through(file, place, link, known)
+                    if found is not None:
+                        return found
+                elif isinstance(link, h5py.HardLink):
+                    held = _resolve(group, name)
+                    if isinstance(held, h5py.Group) and _address(held) not in seen:
+                        seen.add(_address(held))
+                        groups.append((place, held))
+    return None
+
+
+def _through(file: h5py.File, place: str, link: h5py.ExternalLink, known: set[Path]) -> MissingLink | None:
+    if not _may_be_opened(file, link.filename):
+        return MissingLink(place, link.filename, link.path, no_file=True)
+    for other in _places_of(file, link.filename):
+        if other.is_file() and other not in known:
+            try:
+                found = _link_to_no_file(other, known)
+            except (OSError, RuntimeError, KeyError):  # no HDF5: the link will be found to lead nowhere
+                continue
+            if found is not None:
+                return replace(found, place=f"{place}/{found.place}")
+    return None
 
 
 _Address = tuple[int, int]
@@ -105,12 +144,10 @@ class _Walk:
             link = group.get(name, getlink=True)
             if isinstance(link, h5py.ExternalLink):
                 self.named.add(beside(group.file, link.filename))
-            target_file = link.filename if isinstance(link, h5py.ExternalLink) else None
-            no_file = target_file is not None and not _may_be_opened(group.file, target_file)
-            target = None if no_file else _resolve(group, name)
+            target = _resolve(group, name)
             if target is None:
-                target_place = getattr(link, "path", name)
-                self.missing.append(MissingLink(place, target_file, target_place, no_file))
+                target_file = link.filename if isinstance(link, h5py.ExternalLink) else None
+                self.missing.append(MissingLink(place, target_file, getattr(link, "path", name)))
                 continue
             if isinstance(link, h5py.ExternalLink):
                 self.files.add(Path(target.file.filename))
@@ -158,14 +195,15 @@ def _resolve(group: h5py.Group, name: str) -> h5py.HLObject | None:
 
 
 def _may_be_opened(file: h5py.File, name: str) -> bool:
-    # HDF5 looks beside the file and where the process runs. A pipe at either place would be waited for.
-    if "\0" in name:
-        return False
-    places = (beside(file, name), Path(name), beside(file, Path(name).name))
     try:
-        return all(place.is_file() or not place.exists() for place in places)
+        return all(place.is_file() or not place.exists() for place in _places_of(file, name))
     except OSError:
         return False
+
+
+def _places_of(file: h5py.File, name: str) -> tuple[Path, ...]:
+    """Where HDF5 looks for another file: beside the one that names it, and where the process runs."""
+    return beside(file, name), Path(name), beside(file, Path(name).name)
 
 
 def _address(thing: h5py.HLObject) -> _Address:
