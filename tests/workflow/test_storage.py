@@ -275,6 +275,7 @@ def test_the_same_recordings_on_a_web_server(study, web, bucket):
     # All of one session anew, from what the web server gave.
     shutil.rmtree(study.results / "sessions/alpha")
     shutil.rmtree(study.results / "store")
+    shutil.rmtree(study.results / "population")
     outcome = study.run(POPULATION)
     assert "encoding alpha 0" in outcome.jobs
     assert study.tables() == before
@@ -346,3 +347,19 @@ def test_a_study_of_addresses_is_verified_traced_and_archived(study, tmp_path, c
     copy_of(study, "alpha").write_bytes(b"changed")
     assert main(["verify", folder]) == 1
     assert address("alpha") in capsys.readouterr().out
+
+
+def test_a_plugin_that_is_not_installed_is_named_with_the_command_that_installs_it(study, tmp_path):
+    # As if the package were not there.
+    (tmp_path / "hidden").mkdir()
+    (tmp_path / "hidden/sitecustomize.py").write_text(
+        "import importlib.util as util\n"
+        "find = util.find_spec\n"
+        "hidden = 'snakemake_storage_plugin_s3'\n"
+        "util.find_spec = lambda name, *at: None if name == hidden else find(name, *at)\n"
+    )
+    own = study.environment()
+    own["PYTHONPATH"] = os.pathsep.join(filter(None, (str(tmp_path / "hidden"), own.get("PYTHONPATH"))))
+    text = study.run(status=1).text
+    assert f"{address('alpha')}: the plugin that fetches it is not installed" in text
+    assert "pip install snakemake-storage-plugin-s3" in text

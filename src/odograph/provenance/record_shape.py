@@ -152,7 +152,7 @@ _RECORD = _with(
         "code": _mapping_of(_TEXT),
         "software": _mapping_of(_TEXT),
         "products": _list_of(_with({"path": _path, "digest": _TEXT}, {"unit": _NUMBER})),
-        "run": _with({"started": _TEXT, "host": _TEXT}),
+        "run": _with({"started": _TEXT}, {"host": _TEXT}),  # archives leave the host out
     }
 )
 _ROOT = _with(
