@@ -3,6 +3,7 @@
 #   make demo    build the environment, make the demo recordings, run the whole pipeline on them
 #   make test    the same environment, then the test suite
 #   make lint    linters and the check that generated files are current
+#   make audit   known weaknesses of the libraries in constraints.txt (needs the network)
 #   make truth   compare the demo's results with what was simulated
 #   make help    all of them
 
@@ -20,13 +21,14 @@ PYTHON ?= $(shell for name in python3 python3.11 python3.12 python3.13 python3.1
 # Jobs call `python`; it has to be the one of the environment.
 RUN := PATH="$(CURDIR)/$(BIN):$$PATH"
 
-.PHONY: help env has-python recordings demo test lint format documents truth clean clean-results
+.PHONY: help env has-python recordings demo test lint audit format documents truth clean clean-results
 .DEFAULT_GOAL := help
 
 help:
 	@echo "make demo           the whole pipeline on simulated recordings (builds what it needs)"
 	@echo "make test           the test suite"
 	@echo "make lint           linters; are generated files current"
+	@echo "make audit          known weaknesses of the libraries in constraints.txt (needs the network)"
 	@echo "make truth          the demo's results against what was simulated"
 	@echo "make env            only the environment, in $(ENVIRONMENT)"
 	@echo "make recordings     only the demo recordings"
@@ -77,6 +79,12 @@ lint: $(ENVIRONMENT_STAMP)
 	@$(RUN) snakefmt --check Snakefile workflow
 	@$(RUN) snakemake --lint
 	@$(RUN) python -m odograph.settings.document --check
+
+# In an environment of its own, so that the tool's dependencies are not those that it judges.
+audit: $(ENVIRONMENT_STAMP)
+	@test -x $(ENVIRONMENT)/audit/bin/pip-audit || { $(BIN)/python -m venv $(ENVIRONMENT)/audit && \
+		$(ENVIRONMENT)/audit/bin/python -m pip install --quiet --disable-pip-version-check pip-audit; }
+	@$(ENVIRONMENT)/audit/bin/pip-audit --requirement constraints.txt --no-deps --disable-pip
 
 format: $(ENVIRONMENT_STAMP)
 	@$(RUN) ruff check --fix .
