@@ -30,6 +30,7 @@ from odograph.provenance.root import (
     read_root,
     record_content,
 )
+from odograph.settings.addresses import is_address
 
 _CARRY_IDENTIFIER = (".png", ".svg", ".pdf", ".html")
 # The syntax trees of this package's modules: they are what runs here, whatever happens to their files.
@@ -96,7 +97,9 @@ class Verification:
 
     def add(self, file: str | Path, found: str, meaning: str, damaged: Iterable[str] = ()) -> None:
         """Note a breach."""
-        breach = Breach(Path(file).as_posix(), found, meaning, tuple(damaged))
+        breach = Breach(
+            str(file) if is_address(file) else Path(file).as_posix(), found, meaning, tuple(damaged)
+        )
         if breach not in self.breaches:
             self.breaches.append(breach)
 
