@@ -87,7 +87,8 @@ def _case(lab: Laboratory, study: Study, name: str, how: str, follow: bool) -> H
     more, outcome = (0, first) if first.status == 0 else study.again()
     if first.status != 0 and told in first.text:
         found.append("the reading step")
-    happened = f"found by {' and '.join(found) or 'what reads it, silently'}; right after {more + 1} run{'s' if more else ''}"
+    finder = " and ".join(found) or "what reads it, silently"
+    happened = f"found by {finder}; right after {more + 1} run{'s' if more else ''}"
     holds = outcome.status == 0 and more <= 1
     if holds and result and not lab.quick:
         holds = study.odograph("verify").status == 0
