@@ -64,6 +64,9 @@ $(RECORDINGS_STAMP): $(DEMO_SOURCES) | $(ENVIRONMENT_STAMP)
 	@touch $@
 
 demo: $(ENVIRONMENT_STAMP) $(RECORDINGS_STAMP)
+	@# What a killed run left locked is unlocked; while a run is alive, this is refused and says so.
+	@test -z "$$(ls .snakemake/locks 2>/dev/null)" || \
+		$(RUN) snakemake --profile workflow/profiles/local --quiet reason host --unlock
 	@$(RUN) snakemake --profile workflow/profiles/local --quiet reason host
 	@echo
 	@echo "The report: $(CURDIR)/results/report.html"
