@@ -101,12 +101,34 @@ class Study:
         jobs = jobs if jobs == {"root"} else jobs - {"root"}
         return Outcome(jobs, done.stdout, done.returncode)
 
+    def would_run(self) -> set[str]:
+        """The jobs that a run would make, as the engine plans it; nothing runs."""
+        self.write_tables()
+        done = subprocess.run(
+            self.command("--summary"),
+            cwd=self.folder,
+            env=self.environment(),
+            capture_output=True,
+            text=True,
+            check=True,
+        )
+        lines = [line.split("\t") for line in done.stdout.splitlines() if "\t" in line]
+        head, rows = lines[0], lines[1:]
+        log, plan = head.index("log-file(s)"), head.index("plan")
+        pending = {row[log] for row in rows if row[plan] == "update pending"}
+        jobs = {self.job_of(Path(name).relative_to("logs")) for name in pending}
+        return jobs if jobs == {"root"} else jobs - {"root"}
+
+    @staticmethod
+    def job_of(log: Path) -> str:
+        """The name of a job by its log."""
+        return " ".join(log.with_suffix("").parts).replace("shard-", "")
+
     def logs(self) -> dict[str, int]:
         """The time stamp of every job's log, by the job's name: a job that runs writes its log anew."""
         stamps = {}
         for log in (self.folder / "logs").rglob("*.log"):
-            parts = log.relative_to(self.folder / "logs").with_suffix("").parts
-            stamps[" ".join(parts).replace("shard-", "")] = log.stat().st_mtime_ns
+            stamps[self.job_of(log.relative_to(self.folder / "logs"))] = log.stat().st_mtime_ns
         return stamps
 
     def record(self, path: str) -> dict:
