@@ -26,7 +26,7 @@ ROOT = Path(__file__).parents[2]
 SHARD_SECONDS = 300
 FOLDER_LIMIT, FILES_PER_UNIT = 5000, 5
 FULL = {"units": 200, "first": 10, "sizes": (100, 300, 1000), "summarised": 300}
-QUICK = {"units": 5, "first": 2, "sizes": (3,), "summarised": 3}
+QUICK = {"units": 5, "first": 1, "sizes": (2,), "summarised": 2}
 ASKED_S = {100: 5.0, 300: 15.0}
 
 
@@ -45,7 +45,8 @@ def main() -> int:
         many.begin(first)
         seconds = many.run()
         table.add(f"first run of {first} sessions, stand-in fits", "-", f"{seconds:.0f} s", None, seconds)
-        overhead_per_job(table, many)
+        if first > 1:
+            overhead_per_job(table, many)
         files(table, many, first)
         times = {first: nothing_to_do(table, many, first)}
         for number in size["sizes"]:
@@ -129,7 +130,7 @@ def overhead_per_job(table: Table, many: Many) -> None:
     for number in (1, several):
         targets = [many.remove_fits(session) for session in many.sessions[:number]]
         spent[number] = many.snakemake(*targets, "--cores", "1")[0]
-    cost = (spent[several] - spent[1]) / max(several - 1, 1)
+    cost = (spent[several] - spent[1]) / (several - 1)
     table.add(
         f"a job that fits nothing ({many.units} units restored), imports included",
         f"under 10 % of a shard of {SHARD_SECONDS} s",
