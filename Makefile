@@ -21,12 +21,13 @@ PYTHON ?= $(shell for name in python3 python3.11 python3.12 python3.13 python3.1
 # Jobs call `python`; it has to be the one of the environment.
 RUN := PATH="$(CURDIR)/$(BIN):$$PATH"
 
-.PHONY: help env has-python recordings demo test lint audit format documents truth clean clean-results
+.PHONY: help env has-python recordings demo test test-long lint audit format documents truth clean clean-results
 .DEFAULT_GOAL := help
 
 help:
 	@echo "make demo           the whole pipeline on simulated recordings (builds what it needs)"
 	@echo "make test           the test suite"
+	@echo "make test-long      real runs that the suite leaves out: faults, scale, replay, web servers"
 	@echo "make lint           linters; are generated files current"
 	@echo "make audit          known weaknesses of the libraries in constraints.txt (needs the network)"
 	@echo "make truth          the demo's results against what was simulated"
@@ -75,6 +76,9 @@ demo: $(ENVIRONMENT_STAMP) $(RECORDINGS_STAMP)
 
 test: $(ENVIRONMENT_STAMP)
 	@$(RUN) python -m pytest -n 3 --dist loadfile
+
+test-long: $(ENVIRONMENT_STAMP)
+	@$(RUN) python -m pytest -n 3 --dist loadfile -m long
 
 lint: $(ENVIRONMENT_STAMP)
 	@$(RUN) ruff check .

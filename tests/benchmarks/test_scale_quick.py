@@ -7,6 +7,8 @@ from pathlib import Path
 
 import pytest
 
+pytestmark = pytest.mark.long
+
 SCRIPT = Path(__file__).with_name("scale.py")
 MEASURED = (
     "first run of 1 sessions, stand-in fits",

@@ -7,6 +7,8 @@ from pathlib import Path
 
 import pytest
 
+pytestmark = pytest.mark.long
+
 HARNESS = Path(__file__).with_name("harness.py")
 LINES = {
     "kill -9 over the run": True,

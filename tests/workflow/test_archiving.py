@@ -290,6 +290,7 @@ def test_recordings_from_elsewhere_get_a_place_in_the_archive(study, finished, t
     assert found.root == read_root(finished.folder)["root"]
 
 
+@pytest.mark.long
 def test_an_archive_runs_again_elsewhere_and_agrees(finished, tmp_path, capsys):
     """From a copy in an empty folder, in a fresh virtual environment that borrows the libraries at hand."""
     assert main(["archive", str(tmp_path / "whole.zip"), "--study", str(finished.folder)]) == 0

@@ -209,6 +209,7 @@ def test_records_and_findings_name_addresses(fetched):
     assert [path for path in kept if b"results/recordings" in path.read_bytes()] == []
 
 
+@pytest.mark.long
 def test_nothing_is_fetched_or_done_again_and_the_same_content_runs_no_job(study, bucket, finished):
     # Each process that tests has a server of its own, whose clock is not that of the first run.
     assert study.run().jobs == set()
@@ -258,6 +259,7 @@ def test_a_missing_object_leaves_its_session_out_by_name_and_comes_back(study, b
     assert copy_of(study, "beta").exists()
 
 
+@pytest.mark.long
 def test_a_server_out_of_reach_leaves_the_copies_in_use(study):
     own = study.environment()
     own |= {"SNAKEMAKE_STORAGE_S3_ENDPOINT_URL": "http://127.0.0.1:9", "AWS_EC2_METADATA_DISABLED": "true"}
@@ -267,6 +269,7 @@ def test_a_server_out_of_reach_leaves_the_copies_in_use(study):
     assert "the copy of before is used" in outcome.text
 
 
+@pytest.mark.long
 def test_the_same_recordings_on_a_web_server(study, web, bucket):
     for session in ("alpha", "beta"):
         study.sessions[session]["nwb"] = web.address(FILES[session])
@@ -284,6 +287,7 @@ def test_the_same_recordings_on_a_web_server(study, web, bucket):
     assert_secrets_are_nowhere(study.folder, outcome.text)
 
 
+@pytest.mark.long
 def test_a_run_killed_while_it_fetches_leaves_nothing_that_looks_whole(study, web):
     study.sessions = {"alpha": {"nwb": web.address("bracken_1.nwb")}}
     study.write_tables()
