@@ -11,7 +11,7 @@ import numpy as np
 import pytest
 from PIL import Image
 
-from odograph.figures.miniature import draw_miniature, palette_png
+from odograph.figures.miniature import DRAWN_FROM, draw_miniature, palette_png
 
 
 def test_png_decodes_to_the_same_pixels():
@@ -45,6 +45,16 @@ def test_curves_are_drawn_to_scale(curves, settings):
     expected = (rate - rate.min()) / np.ptp(rate) * height.max()
     np.testing.assert_allclose(height, expected, atol=0.11)
     assert svg.get("aria-label") == f"speed, peak {rate.max():.1f} Hz"
+
+
+def test_the_arrays_that_are_named_are_all_that_is_drawn_from(curves, settings):
+    named = {name: values for name, values in curves.items() if name in DRAWN_FROM}
+    assert set(named) == DRAWN_FROM
+    assert len(named) < len(curves)
+    assert draw_miniature(named, settings) == draw_miniature(curves, settings)
+    for name in DRAWN_FROM:
+        fewer = {other: values for other, values in curves.items() if other != name}
+        assert draw_miniature(fewer, settings) != draw_miniature(curves, settings), name
 
 
 def test_pictures_are_small(curves, settings):

@@ -7,6 +7,7 @@ import struct
 import zlib
 from collections.abc import Mapping
 from dataclasses import dataclass
+from functools import lru_cache
 
 import matplotlib
 import numpy as np
@@ -18,6 +19,15 @@ _LEVELS = 48
 _SIZE = 56
 _CURVE_WIDTH = 92
 _TOP, _BOTTOM = 3.0, 46.0
+#: Names of the arrays that the pictures are drawn from.
+DRAWN_FROM = frozenset(
+    {"position_observed_hz", "head_direction_rad", "speed_cm_s"}
+    | {
+        f"{term}_{curve}"
+        for term in ("head_direction", "speed")
+        for curve in ("rate_hz", "rate_low_hz", "rate_high_hz")
+    }
+)
 
 
 @dataclass(frozen=True)
@@ -41,7 +51,7 @@ def draw_miniature(curves: Mapping[str, np.ndarray], settings: FiguresSettings) 
     Parameters
     ----------
     curves : mapping of arrays
-        The unit's maps and curves; what is absent gives an empty text.
+        The unit's maps and curves (those of `DRAWN_FROM`); what is absent gives an empty text.
     settings : FiguresSettings
         The colour scale of the map.
     """
@@ -64,9 +74,7 @@ def _map(rate_hz: np.ndarray, settings: FiguresSettings) -> str:
         .astype(np.uint8)
     )
     pixels = np.where(known, level + 1, 0).astype(np.uint8)[::-1]
-    scale = matplotlib.colormaps[settings.rate_colour_map](np.linspace(0, 1, _LEVELS))[:, :3]
-    palette = np.vstack([[0, 0, 0], (scale * 255).round()]).astype(np.uint8)
-    data = base64.b64encode(palette_png(pixels, palette)).decode()
+    data = base64.b64encode(palette_png(pixels, _palette(settings.rate_colour_map))).decode()
     ny, nx = pixels.shape
     width = min(92.0, _SIZE * nx / ny)
     peak = f"{number(top, 1)} Hz"
@@ -77,6 +85,12 @@ def _map(rate_hz: np.ndarray, settings: FiguresSettings) -> str:
         'preserveAspectRatio="none" class="px"/>'
         f'<text x="{width / 2:.0f}" y="{_SIZE + 11}" text-anchor="middle">{peak}</text></svg>'
     )
+
+
+@lru_cache(maxsize=4)
+def _palette(colour_map: str) -> np.ndarray:
+    scale = matplotlib.colormaps[colour_map](np.linspace(0, 1, _LEVELS))[:, :3]
+    return np.vstack([[0, 0, 0], (scale * 255).round()]).astype(np.uint8)
 
 
 def palette_png(pixels: np.ndarray, palette: np.ndarray) -> bytes:

@@ -82,13 +82,16 @@ def _curve_files(step: Step, member: dict[str, Any]) -> list[Path]:
 
 def _miniatures(files: dict[str, list[Path]], settings: Any) -> dict[tuple[str, int], Any]:
     """A small picture of every unit that has curves."""
-    from odograph.figures.miniature import draw_miniature
+    from odograph.figures.miniature import DRAWN_FROM, draw_miniature
+
+    def shown(name: str) -> bool:
+        return name.partition("/")[2] in DRAWN_FROM
 
     drawn = {}
     for session, shards in files.items():
         for file in shards:
             curves: dict[int, dict[str, Any]] = {}
-            for name, values in read_arrays(file).items():
+            for name, values in read_arrays(file, shown).items():
                 unit, _, curve = name.partition("/")
                 curves.setdefault(int(unit), {})[curve] = values
             for unit, own in curves.items():
