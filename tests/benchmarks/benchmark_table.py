@@ -19,6 +19,7 @@ import shutil
 import subprocess
 import sys
 import time
+from collections.abc import Sequence
 from dataclasses import asdict, dataclass, field
 from importlib import metadata
 from pathlib import Path
@@ -88,7 +89,11 @@ class Table:
         """The table as printed."""
         rows = [("what", "asked", "measured", "holds")]
         rows += [(line.what, line.asked, line.measured, _word(line.holds)) for line in self.lines]
-        widths = [max(len(row[i]) for row in rows) for i in range(4)]
+        return self.laid_out(rows, facts)
+
+    def laid_out(self, rows: Sequence[Sequence[str]], facts: dict[str, str]) -> str:
+        """Rows in columns, the first one the head, between title, notes and facts."""
+        widths = [max(len(row[i]) for row in rows) for i in range(len(rows[0]))]
         lines = [
             "  ".join(cell.ljust(width) for cell, width in zip(row, widths, strict=True)) for row in rows
         ]

@@ -44,7 +44,7 @@ def main() -> int:
         first = size["first"]
         many.begin(first)
         seconds = many.run()
-        table.add(f"first run of {first} sessions, stand-in fits", "-", f"{seconds:.0f} s", None, seconds)
+        table.add(f"first run, stand-in fits, sessions: {first}", "-", f"{seconds:.0f} s", None, seconds)
         if first > 1:
             overhead_per_job(table, many)
         files(table, many, first)
@@ -78,7 +78,7 @@ def nothing_to_do(table: Table, many: Many, number: int) -> float:
     seconds = median(spent)
     asked = ASKED_S.get(number)
     table.add(
-        f"nothing to do, {number} sessions",
+        f"nothing to do, sessions: {number}",
         f"{asked:.0f} s or less" if asked else "-",
         f"{seconds:.1f} s, {megabytes:.0f} MB",
         seconds <= asked if asked else None,
@@ -153,13 +153,13 @@ def files(table: Table, many: Many, number: int) -> None:
     ours = [path for path in found if ".snakemake" not in path.parts and "src" not in path.parts]
     per_unit = len(ours) / (number * many.units)
     table.add(
-        f"files for each unit ({number} sessions)",
+        f"files for each unit, sessions: {number}",
         f"{FILES_PER_UNIT} or fewer",
         f"{per_unit:.2f} (a fit, a card, and {len(ours) / number - 2 * many.units:.0f} for each session)",
         per_unit <= FILES_PER_UNIT,
         per_unit,
     )
-    shared = {"results/sessions", "results/plan/sessions", "results/store/history"}
+    shared = {"results/sessions", "results/plan/sessions", "results/plan/history"}
     engine = folders[".snakemake/metadata"] / number
     largest = max(
         count

@@ -11,11 +11,11 @@ pytestmark = pytest.mark.long
 
 SCRIPT = Path(__file__).with_name("scale.py")
 MEASURED = (
-    "first run of 1 sessions, stand-in fits",
-    "files for each unit (1 sessions)",
+    "first run, stand-in fits, sessions: 1",
+    "files for each unit, sessions: 1",
     "entries of the largest folder of ours, 300 sessions (by rule)",
-    "nothing to do, 1 sessions",
-    "nothing to do, 2 sessions",
+    "nothing to do, sessions: 1",
+    "nothing to do, sessions: 2",
     "planning 1 new sessions (reading them)",
     "population of 10 units",
     "report of 10 units",

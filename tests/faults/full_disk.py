@@ -9,20 +9,10 @@ import subprocess
 from collections.abc import Iterator
 from pathlib import Path
 
-from laboratory import Happening, Laboratory, Outcome, Study, judged, stopped, until, workers_of
+from laboratory import Happening, Laboratory, Outcome, Study, held_still, judged, until, workers_of
 
-STAGES = (
-    "intake",
-    "sync",
-    "behaviour",
-    "encoding",
-    "cards",
-    "session_quality",
-    "population",
-    "population_figures",
-    "report",
-    "root",
-)
+from odograph.provenance.plan import STEPS
+
 QUICK_STAGES = ("encoding",)
 MEGABYTES = 24
 CODE = "exit status 74"
@@ -77,7 +67,7 @@ def full_disk(lab: Laboratory) -> Iterator[Happening]:
             begun = list(study.results.rglob("*.json"))
             said = outcome.status != 0 and outcome.says(*TOLD) and not begun
             yield Happening("disk full: planning", "filled before the first run", _told(outcome), None, said)
-        for stage in QUICK_STAGES if lab.quick else STAGES:
+        for stage in QUICK_STAGES if lab.quick else STEPS:
             yield _in_stage(study, stage)
         number, outcome = study.again()
         happened = f"room made; run {number} ended with {outcome.status}"
@@ -88,7 +78,7 @@ def _in_stage(study: Study, stage: str) -> Happening:
     """Run until the stage begins, hold it still, fill the disk, let it go on."""
     run = study.start("--until", stage, cores=1)
     met = until(lambda: bool(workers_of(study, stage)), run)
-    with stopped(workers_of(study, stage)):
+    with held_still(workers_of(study, stage)):
         filled = contextlib.ExitStack()
         filled.enter_context(no_room(study.results))
     with filled:

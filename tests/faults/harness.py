@@ -6,7 +6,7 @@ A small study (three minutes of one recording) is run once undisturbed. Then eac
 or before, the workflow runs, and runs it again, with `--unlock` after a killed head and nothing else done by
 hand. All products, the fits in the store and the run root are compared with those of the undisturbed run. It
 ends with status 1 when a line does not hold. Cases that need a small file system of their own are left out,
-with a word, where none can be mounted. What a cluster can do is in tests/cluster/slurm_faults.py.
+with a word, where none can be mounted. What a cluster can do is in tests/faults/slurm_faults.py.
 """
 
 from __future__ import annotations
@@ -77,15 +77,7 @@ class FaultTable(tables.Table):
         for line in self.lines:
             happened = line.measured if len(line.measured) <= WIDEST else line.measured[: WIDEST - 3] + "..."
             rows.append((line.what, line.asked, happened, words[line.same], words[line.holds]))
-        widths = [max(len(row[i]) for row in rows) for i in range(len(rows[0]))]
-        lines = [
-            "  ".join(cell.ljust(width) for cell, width in zip(row, widths, strict=True)).rstrip()
-            for row in rows
-        ]
-        lines.insert(1, "  ".join("-" * width for width in widths))
-        notes = ["", *(f"- {note}" for note in self.notes)] if self.notes else []
-        told = ["", *(f"{name}: {value}" for name, value in facts.items())]
-        return "\n".join([self.title + (" (quick)" if self.quick else ""), "", *lines, *notes, *told])
+        return self.laid_out(rows, facts)
 
 
 def main() -> int:

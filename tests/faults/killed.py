@@ -145,7 +145,7 @@ def orphaned(lab: Laboratory) -> Iterator[Happening]:
         os.kill(orphan, signal.SIGCONT)
     while workers_of(study):
         time.sleep(0.05)
-    happened = f"the next run ended with {outcome.status}, the old worker wrote nothing"
+    happened = f"the next run ended with {outcome.status}; compared once the old worker had ended"
     done = "head killed, its worker held still, the next run with other settings, the worker let go"
     holds = differ and bool(orphans) and number == 1 and outcome.status == 0
     yield judged(lab, study, "an orphan of behaviour", done, happened, holds, of="other")

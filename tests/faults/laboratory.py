@@ -363,7 +363,7 @@ def until(condition: Callable[[], bool], run: subprocess.Popen[str], every_s: fl
 
 
 @contextlib.contextmanager
-def stopped(numbers: list[int]) -> Iterator[None]:
+def held_still(numbers: list[int]) -> Iterator[None]:
     """Hold processes still."""
     for number in numbers:
         os.kill(number, signal.SIGSTOP)

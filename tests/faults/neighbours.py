@@ -6,7 +6,7 @@ import json
 import subprocess
 from collections.abc import Iterator
 
-from laboratory import Happening, Laboratory, Outcome, Study, judged, kept, processes_of, stopped, until
+from laboratory import Happening, Laboratory, Outcome, Study, held_still, judged, kept, processes_of, until
 
 RUN_LOCK = "plan/run.lock"
 
@@ -26,7 +26,7 @@ def _second_run(lab: Laboratory, replaced: bool) -> Happening:
     if replaced:
         lab.resort(study)
     # Held still, it works as long as the others need.
-    with stopped([first.pid]):
+    with held_still([first.pid]):
         second, looked, unlocked = study.run(), study.run("-n"), study.run("--unlock")
     outcome = study.end(first)
     told, named = _is_told(second, first), f"process {first.pid} on "

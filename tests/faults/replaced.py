@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 
-from laboratory import Happening, Laboratory, judged, reading, stopped, until
+from laboratory import Happening, Laboratory, held_still, judged, reading, until
 
 MOMENTS = {"planning": "survey_recordings", "an encoding job": "odograph.steps.encoding"}
 CHANGED = "changed since this run was planned"
@@ -23,7 +23,7 @@ def replaced(lab: Laboratory) -> Iterator[Happening]:
             return bool(found)
 
         until(opened, run, every_s=0.001)
-        with stopped(found):
+        with held_still(found):
             lab.resort(study, in_place=in_place)
         outcome = study.end(run)
         said = outcome.says("changed while it was read") or outcome.says(CHANGED)

@@ -162,7 +162,7 @@ def is_told(case: dict[str, Any], path: Path) -> str | None:
 
 def search(kind: str, minutes: float, seed: int, most: int | None = None) -> int:
     """Try new cases for some minutes, or `most` of them; returns how many were reported."""
-    new_case = importlib.import_module("damage" if kind == "recording" else "record_damage").new_case
+    new_case = importlib.import_module("recording_cases" if kind == "recording" else "record_damage").new_case
     ended: Counter[str] = Counter()
     reported: Counter[str] = Counter()
     start = told = time.monotonic()

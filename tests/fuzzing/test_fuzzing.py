@@ -19,6 +19,7 @@ import pytest
 import reading
 import record_damage
 import record_reading
+import recording_cases
 from base_recordings import POSITION, SEEDS, SETTINGS, base
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
@@ -77,7 +78,7 @@ def test_records_that_once_went_wrong(tmp_path, seed):
 
 @pytest.mark.parametrize("number", range(8))
 def test_some_new_cases(tmp_path, number):
-    for kind, new_case in (("recording", damage.new_case), ("records", record_damage.new_case)):
+    for kind, new_case in (("recording", recording_cases.new_case), ("records", record_damage.new_case)):
         answer = fuzz.runner(kind)(_harmless(new_case, number), tmp_path)
         assert answer["ended"] in ("read", "refused"), answer
 

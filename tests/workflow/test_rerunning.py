@@ -121,16 +121,22 @@ def test_a_line_of_the_figures_code_makes_the_figures_only(study):
 def test_an_encoding_setting_makes_the_fits_and_what_follows(study):
     study.settings["encoding"] = {"folds": 5}
     assert study.would_run() == fits_and_cards(*READABLE) | ENDS
-    study.run("results/sessions/alpha/encoding/shard-0/units.parquet")
-    assert set(study.refitted()["alpha"].values()) == {"settings changed", "new unit"}
+    assert reasons_of_one_shard(study) == {("fitted", "settings changed")}
 
 
 def test_a_line_of_the_encoding_code_makes_the_fits_and_what_follows(study):
     study.copy_code()
     append(study.folder / "src/odograph/encoding/analyse.py", "\nADDED_LINE = 1\n")
     assert study.would_run() == fits_and_cards(*READABLE) | ENDS
-    study.run("results/sessions/alpha/encoding/shard-0/units.parquet")
-    assert set(study.refitted()["alpha"].values()) == {"code changed", "new unit"}
+    assert reasons_of_one_shard(study) == {("fitted", "code changed")}
+
+
+def reasons_of_one_shard(study):
+    """What became of the units of the first shard of alpha when it was run, and why."""
+    outcome = study.run("results/sessions/alpha/encoding/shard-0/units.parquet")
+    assert outcome.jobs == {"encoding alpha 0"}
+    units = study.record("sessions/alpha/encoding/shard-0/record.json")["run"]["units"]
+    return {(unit["made"], unit["why"]) for unit in units}
 
 
 def test_a_session_s_own_setting_makes_that_session_and_the_population(study):

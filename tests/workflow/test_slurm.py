@@ -1,41 +1,28 @@
 """The study of the other tests through a real Slurm: the same bytes as on one machine, in fewer jobs."""
 
-import importlib.util
 import os
 import re
 import shutil
 import subprocess
-import sys
 import tempfile
 from pathlib import Path
 
 import pytest
+from slurm import Cluster, NoClusterError
 
 ROOT = Path(__file__).parents[2]
 #: A head whose controller went away would wait for ever.
 LIMIT_S = 420
 
 
-def load_cluster():
-    path = ROOT / "tests" / "cluster" / "slurm.py"
-    spec = importlib.util.spec_from_file_location("slurm_for_tests", path)
-    module = importlib.util.module_from_spec(spec)
-    sys.modules[spec.name] = module
-    spec.loader.exec_module(module)
-    return module
-
-
-slurm = load_cluster()
-
-
 @pytest.fixture(scope="module")
 def cluster():
     # Not below the temporary folder of the tests: the path of a socket may have 107 characters.
     folder = Path(tempfile.mkdtemp(prefix="slurm-"))
-    found = slurm.Cluster(folder)
+    found = Cluster(folder)
     try:
         found.start()
-    except slurm.NoClusterError as error:
+    except NoClusterError as error:
         if os.environ.get("ODOGRAPH_NEEDS_SLURM"):
             raise
         pytest.skip(f"no Slurm here: {error}")
@@ -90,7 +77,7 @@ def test_the_run_root_is_the_same(on_slurm, finished):
     assert on_slurm.record("root.json")["root"] == finished.record("root.json")["root"]
 
 
-def test_what_belongs_together_was_one_job(on_slurm, cluster):
+def test_what_belongs_together_was_one_job(on_slurm):
     jobs = dict(re.findall(r"SLURM jobid (\d+) \(log: .*/slurm_logs/(\w+?)/", on_slurm.text))
     names = sorted(jobs.values())
     shards = [name for name in names if name == "group_shard_cards_encoding"]

@@ -26,7 +26,7 @@ _CARD_S = 0.6
 #: Memory: libraries and compiled code, and what grows with the bins.
 _FIT_MB, _FIT_BIN_MB, _HISTORY_BIN_MB = 400.0, 1.5e-4, 6e-4
 _READ_MB, _READ_BIN_MB = 400.0, 1e-3
-#: The engine starts again inside every job of a cluster and builds the graph of the whole study.
+#: The engine starts again inside every job of a cluster, and reads the plan of the whole study.
 _ENGINE_MB, _ENGINE_SESSION_MB = 250.0, 0.5
 _POPULATION_MB, _POPULATION_UNIT_MB = 1000.0, 0.06
 _SPARE = 1.5

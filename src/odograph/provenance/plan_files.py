@@ -12,7 +12,7 @@ from odograph.errors import InputError
 from odograph.provenance.canonical import digest_text, readable_json
 from odograph.provenance.files import write_if_changed
 from odograph.provenance.layout import PLAN, plan_folder, shard_of
-from odograph.provenance.survey import Request, survey
+from odograph.provenance.survey import Request, named_in_finding, survey
 
 # How often a recording is read that changes meanwhile.
 _READINGS = 3
@@ -68,11 +68,7 @@ def told_by_address(answer: dict[str, Any], request: Request) -> dict[str, Any]:
     """An answer of the survey whose error names the address of a recording in place of its local copy."""
     if request.address is None or answer.get("error") is None:
         return answer
-    error = {
-        name: text.replace(request.nwb, request.address) if isinstance(text, str) else text
-        for name, text in answer["error"].items()
-    }
-    return answer | {"error": error}
+    return answer | {"error": named_in_finding(answer["error"], request.nwb, request.address)}
 
 
 def damaged_plan_files(session: str, entry: Mapping[str, Any]) -> set[str]:

@@ -27,7 +27,7 @@ from odograph.errors import (
     OdographError,
     SettingsError,
 )
-from odograph.provenance.canonical import canonical_json, digest_text
+from odograph.provenance.canonical import digest_text
 from odograph.provenance.files import (
     read_arrays,
     read_columns,
@@ -394,8 +394,3 @@ def _parser(rule: str) -> argparse.ArgumentParser:
     parser.add_argument("--origin", default="{}", help="the animal, and the regions of the units, as JSON")
     parser.add_argument("--log", help="the log file")
     return parser
-
-
-def settings_digest(settings: Mapping[str, Any]) -> str:
-    """Digest of settings, as part of a fit's key."""
-    return digest_text(canonical_json(settings))

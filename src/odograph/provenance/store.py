@@ -129,12 +129,13 @@ class FitStore:
 class FitHistory:
     """What each unit of a session was last fitted from, so that a refit can say why.
 
-    The history is kept in the store, since the engine removes the products of a job before it runs again.
+    The history lies with the plan: the engine removes the products of a job before it runs again, and studies
+    may share a store.
 
     Parameters
     ----------
     folder : str or Path
-        The session's folder in the store.
+        The session's folder of histories.
     shard, shards : int
         The shard at work, and into how many shards the session is divided.
     """

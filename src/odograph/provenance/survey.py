@@ -9,7 +9,7 @@ import subprocess
 import sys
 import threading
 import time
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import asdict, dataclass
 from pathlib import Path
 from typing import Any
@@ -118,6 +118,11 @@ def _serve(
             process.stdin.close()
             process.wait()
             process.stdout.close()
+
+
+def named_in_finding(finding: Mapping[str, Any], file: str, name: str) -> dict[str, Any]:
+    """A finding that names a recording as the sessions table does, in place of the file that was read."""
+    return {key: text.replace(file, name) if isinstance(text, str) else text for key, text in finding.items()}
 
 
 def _start() -> subprocess.Popen[str]:

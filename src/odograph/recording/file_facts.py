@@ -139,14 +139,6 @@ def links_of(path: Path) -> Links:
             expected="about as many data as the shape says",
             remedy="copy the file anew from its source, or write the data set in the shape of its data",
         )
-    if links.hollow:
-        raise InputError(
-            "the data set declares far more than the file holds for it",
-            file=str(path),
-            place=links.hollow[0],
-            expected="about as many data as the shape says",
-            remedy="copy the file anew from its source, or write the data set in the shape of its data",
-        )
     if links.paths >= MOST_PATHS:
         raise InputError(
             "its groups hold each other: there is no end of ways to reach them",

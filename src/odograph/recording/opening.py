@@ -58,12 +58,15 @@ class OpenRecording:
             return np.asarray(data[part])
         except Exception as error:
             # Of damaged data h5py raises whatever HDF5 stumbled over, down to KeyError and TypeError.
-            raise self.refuse(
-                f"the data cannot be read ({first_line(error)})",
-                place=place,
-                expected="data that are whole",
-                remedy="copy the file anew from its source; this copy is damaged",
-            ) from error
+            raise self._damaged(place, error) from error
+
+    def _damaged(self, place: str, error: Exception) -> InputError:
+        return self.refuse(
+            f"the data cannot be read ({first_line(error)})",
+            place=place,
+            expected="data that are whole",
+            remedy="copy the file anew from its source; this copy is damaged",
+        )
 
     def check_held(self, data: Any, place: str, part: slice | None = None) -> None:
         """Refuse data that are only declared, or lie outside the file, before memory is taken for them.
@@ -77,12 +80,7 @@ class OpenRecording:
         try:
             needed, held, outside = extent_of(data, part)
         except Exception as error:
-            raise self.refuse(
-                f"the data cannot be read ({first_line(error)})",
-                place=place,
-                expected="data that are whole",
-                remedy="copy the file anew from its source; this copy is damaged",
-            ) from error
+            raise self._damaged(place, error) from error
         if outside:
             raise self.refuse(
                 f"the data lie outside the file, in {outside}",

@@ -53,7 +53,7 @@ def work(step: Step) -> None:
 def _fits(step: Step, columns: dict[str, np.ndarray], sources: dict[int, FitSource]) -> dict[int, StoredFit]:
     """The fit of every unit, and an account of where each came from."""
     store = FitStore(layout.STORE)
-    history = FitHistory(layout.STORE / "history" / step.session, step.shard, step.shards)
+    history = FitHistory(layout.PLAN / "history" / step.session, step.shard, step.shards)
     before = history.load(sources)
     fits = {unit: fit for unit, source in sources.items() if (fit := store.load(source.key)) is not None}
     why = {unit: source.difference(before.get(unit)) for unit, source in sources.items()}

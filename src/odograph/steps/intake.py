@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import sys
-from typing import Any
 
 from odograph.errors import ChangedInputError, InputError
 from odograph.provenance.step import Step, refuse_if_failed, run_step
@@ -13,6 +12,7 @@ _FACTS = ("place", "expected", "remedy")
 
 def work(step: Step) -> None:
     """Read the whole recording and write what it holds."""
+    from odograph.provenance.survey import named_in_finding
     from odograph.recording.inventory import failed_inventory, make_inventory
     from odograph.recording.reader import read_recording
     from odograph.settings.intake import IntakeSettings
@@ -29,7 +29,7 @@ def work(step: Step) -> None:
         document = make_inventory(step.session, recording)
     except InputError as refusal:
         recording, document = None, failed_inventory(step.session, refusal)
-        document = _told_by_name(document, file, told)
+        document["findings"] = [named_in_finding(one, file, told) for one in document["findings"]]
     if (recording is None) != ("error" in step.plan) or (
         recording is not None and inventory_digest(document) != step.plan["inventory"]
     ):
@@ -44,15 +44,6 @@ def work(step: Step) -> None:
         for unit, digest in step.plan["units"].items():
             step.record.add_unit_input(int(unit), digest, file=told)
     step.write_json("inventory", document)
-
-
-def _told_by_name(document: dict[str, Any], file: str, name: str) -> dict[str, Any]:
-    """A failed inventory whose findings name the recording as the sessions table does."""
-    findings = [
-        {key: text.replace(file, name) if isinstance(text, str) else text for key, text in finding.items()}
-        for finding in document["findings"]
-    ]
-    return document | {"findings": findings}
 
 
 def _error_again(step: Step, file: str) -> InputError | None:

@@ -54,6 +54,7 @@ def unpack(source: Path, target: Path) -> Path:
                     if not member.is_dir():
                         _extract(archive, member, content, source)
                 content.rename(target)
+    # NotImplementedError is what zipfile raises of a member that is packed in a way it does not know.
     except (zipfile.BadZipFile, zlib.error, EOFError, NotImplementedError) as error:
         raise InputError(
             f"it cannot be unpacked ({error})",

@@ -1,18 +1,17 @@
 """What happens to a study on Slurm when things break; each case must end in the bytes of an undisturbed run.
 
-    python tests/cluster/slurm_faults.py [--passes 3] [--case NAME] [--json FILE]
+    python tests/faults/slurm_faults.py [--passes 3] [--case NAME] [--json FILE]
 
-Starts a small Slurm (see slurm.py for what it needs) in a temporary folder, runs a small study through the
-Slurm profile once for each case, breaks something while the units are fitted, and compares every product with
-a run on this machine. A pass takes about ten minutes, most of them spent waiting for the engine to ask Slurm
-how its jobs are.
+Starts a small Slurm (tests/cluster/slurm.py says what it needs) in a temporary folder, runs a small study
+through the Slurm profile once for each case, breaks something while the units are fitted, and compares every
+product with a run on this machine. A pass takes about ten minutes, most of them spent waiting for the engine
+to ask Slurm how its jobs are.
 """
 
 from __future__ import annotations
 
 import argparse
 import contextlib
-import importlib.util
 import os
 import re
 import shutil
@@ -24,26 +23,16 @@ import time
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field
 from pathlib import Path
-from types import ModuleType
 from typing import Any
 
-TESTS = Path(__file__).parents[1]
+from laboratory import SMALL, TESTS, load
+
 #: A head whose controller went away would wait for ever.
 LIMIT_S = 600
 KINDS = (".parquet", ".tsv", ".npz", ".png")
 
 
-def load(path: Path) -> ModuleType:
-    """A module of the tests, by its file."""
-    spec = importlib.util.spec_from_file_location(path.stem, path)
-    module = importlib.util.module_from_spec(spec)
-    sys.modules[spec.name] = module
-    spec.loader.exec_module(module)
-    return module
-
-
 slurm = load(TESTS / "cluster" / "slurm.py")
-studies = load(TESTS / "workflow" / "conftest.py")
 tables = load(TESTS / "benchmarks" / "benchmark_table.py")
 
 
@@ -253,7 +242,7 @@ def products(study: Any) -> dict[str, bytes]:
 
 def new_study(folder: Path, recordings: Path) -> Any:
     """A study of two sessions in two shards each."""
-    study = studies.Study(folder)
+    study = SMALL.Study(folder)
     study.sessions = {name: study.sessions[name] for name in ("alpha", "beta")}
     folder.mkdir(parents=True)
     shutil.copytree(recordings, folder / "recordings")
@@ -290,7 +279,7 @@ def main() -> int:
 
 def run_cases(place: Path, cluster: Any, given: argparse.Namespace, table: Any) -> None:
     """Every case as often as asked, each in a study of its own, compared with a run on this machine."""
-    studies.make_recordings(place / "recordings")
+    SMALL.make_recordings(place / "recordings")
     here = new_study(place / "here", place / "recordings")
     here.run()
     expected = products(here)
